@@ -1,0 +1,1 @@
+"""Radiative transfer in plane-parallel layers: Planck function, formal solution, moments."""
