@@ -1,0 +1,150 @@
+"""Chemical composition of an atmosphere: solar mixture, metallicity, and the law for the alpha elements.
+
+Solar photospheric abundances: Asplund, Amarsi & Grevesse (2021, A&A 653, A141); elements without a photospheric value
+are absent and contribute nothing.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from specsolve.constants import ATOMIC_MASS_G
+
+# The elements of the equation of state, in order of atomic number.
+ELEMENTS = ("H", "He", "C", "N", "O", "Ne", "Na", "Mg", "Al", "Si", "S", "K", "Ca", "Ti", "Cr", "Mn", "Fe", "Ni")
+ALPHA_ELEMENTS = ("O", "Ne", "Mg", "Si", "S", "Ca", "Ti")
+
+# Standard atomic weights [u], IUPAC 2021, abridged (Prohaska et al. 2022, Pure Appl. Chem. 94, 573).
+ATOMIC_WEIGHTS = {
+    "H": 1.0080, "He": 4.0026, "C": 12.011, "N": 14.007, "O": 15.999, "Ne": 20.180, "Na": 22.990, "Mg": 24.305,
+    "Al": 26.982, "Si": 28.085, "S": 32.06, "K": 39.098, "Ca": 40.078, "Ti": 47.867, "Cr": 51.996, "Mn": 54.938,
+    "Fe": 55.845, "Ni": 58.693,
+}  # fmt: skip
+
+# log10(N / N_H) + 12 of the solar photosphere, Asplund, Amarsi & Grevesse 2021.
+SOLAR_ABUNDANCES = {
+    "H": 12.00, "He": 10.914, "Li": 0.96, "Be": 1.38, "B": 2.70, "C": 8.46, "N": 7.83, "O": 8.69, "F": 4.40,
+    "Ne": 8.06, "Na": 6.22, "Mg": 7.55, "Al": 6.43, "Si": 7.51, "P": 5.41, "S": 7.12, "Cl": 5.31, "Ar": 6.38,
+    "K": 5.07, "Ca": 6.30, "Sc": 3.14, "Ti": 4.97, "V": 3.90, "Cr": 5.62, "Mn": 5.42, "Fe": 7.46, "Co": 4.94,
+    "Ni": 6.20, "Cu": 4.18, "Zn": 4.56, "Ga": 3.02, "Ge": 3.62, "As": 2.30, "Se": 3.34, "Br": 2.54, "Kr": 3.12,
+    "Rb": 2.32, "Sr": 2.83, "Y": 2.21, "Zr": 2.59, "Nb": 1.47, "Mo": 1.88, "Ru": 1.75, "Rh": 0.78, "Pd": 1.57,
+    "Ag": 0.96, "Cd": 1.71, "In": 0.80, "Sn": 2.02, "Sb": 1.01, "Te": 2.18, "Xe": 2.22, "Cs": 1.08, "Ba": 2.27,
+    "La": 1.11, "Ce": 1.58, "Pr": 0.75, "Nd": 1.42, "Sm": 0.95, "Eu": 0.52, "Gd": 1.08, "Tb": 0.31, "Dy": 1.10,
+    "Ho": 0.48, "Er": 0.93, "Tm": 0.11, "Yb": 0.85, "Lu": 0.10, "Hf": 0.85, "Ta": -0.15, "W": 0.79, "Re": 0.26,
+    "Os": 1.35, "Ir": 1.32, "Pt": 1.61, "Au": 0.91, "Hg": 1.17, "Tl": 0.92, "Pb": 1.95, "Bi": 0.65, "Th": 0.03,
+    "U": -0.54,
+}  # fmt: skip
+
+# The law of [alpha/Fe]: two plateaus joined by a hyperbolic tangent, zero at solar metallicity. The plateau of 0.4 and
+# a knee near [Fe/H] = -0.5 are common practice, no source; the width is wide enough for cubic interpolation at 0.5 dex.
+ALPHA_PLATEAU = 0.4  # dex
+ALPHA_KNEE = -0.5  # dex
+ALPHA_WIDTH = 0.5  # dex
+
+
+@dataclass(frozen=True, kw_only=True)
+class Composition:
+    """Numbers of atoms per hydrogen nucleus.
+
+    Attributes
+    ----------
+    mh : float
+        Metallicity [Fe/H] of the atmosphere [dex].
+    alpha : float
+        [alpha/Fe] [dex].
+    abundances : ndarray, shape (n_elements,)
+        Number of nuclei per hydrogen nucleus, in the order of `ELEMENTS`.
+    """
+
+    mh: float
+    alpha: float
+    abundances: np.ndarray
+
+    @property
+    def mass_per_hydrogen(self) -> float:
+        """Mass per hydrogen nucleus [g]."""
+        weights = np.array([ATOMIC_WEIGHTS[symbol] for symbol in ELEMENTS])
+        return float(weights @ self.abundances) * ATOMIC_MASS_G
+
+
+def alpha_law(mh: float) -> float:
+    """[alpha/Fe] of an atmosphere as a smooth function of its metallicity.
+
+    Parameters
+    ----------
+    mh : float
+        [Fe/H] [dex].
+
+    Returns
+    -------
+    float
+        [alpha/Fe] [dex]: 0 at solar, 0.17 at -0.5, 0.35 at -1, 0.40 below -2, -0.05 at +0.5; all derivatives are
+        continuous, because a kink would spoil interpolation between atmospheres.
+
+    Examples
+    --------
+    >>> alpha_law(0.0), round(alpha_law(-3.0), 2)
+    (0.0, 0.4)
+    """
+    at_solar = np.tanh(-ALPHA_KNEE / ALPHA_WIDTH)
+    return float(ALPHA_PLATEAU * (at_solar - np.tanh((mh - ALPHA_KNEE) / ALPHA_WIDTH)) / (at_solar + 1.0))
+
+
+def solar_abundance(symbol: str) -> float:
+    """Solar photospheric abundance of an element.
+
+    Parameters
+    ----------
+    symbol : str
+        Chemical symbol.
+
+    Returns
+    -------
+    float
+        log10(N / N_H) + 12 [dex] (Asplund, Amarsi & Grevesse 2021); `-inf` for an element without a photospheric value.
+    """
+    return SOLAR_ABUNDANCES.get(symbol, -np.inf)
+
+
+def number_abundance(symbol: str, mh: float, alpha: float | None = None) -> float:
+    """Nuclei of an element per hydrogen nucleus.
+
+    Parameters
+    ----------
+    symbol : str
+        Chemical symbol, of any element.
+    mh : float
+        [Fe/H] [dex]; scales everything but H and He.
+    alpha : float, optional
+        [alpha/Fe] [dex], added for O, Ne, Mg, Si, S, Ca, Ti; `alpha_law(mh)` if not given.
+    """
+    if symbol in ("H", "He"):
+        return 10.0 ** (solar_abundance(symbol) - 12.0)
+    enhancement = (alpha_law(mh) if alpha is None else alpha) if symbol in ALPHA_ELEMENTS else 0.0
+    return 10.0 ** (solar_abundance(symbol) - 12.0 + mh + enhancement)
+
+
+def composition_for(mh: float, alpha: float | None = None) -> Composition:
+    """Composition of an atmosphere.
+
+    Parameters
+    ----------
+    mh : float
+        [Fe/H] [dex].
+    alpha : float, optional
+        [alpha/Fe] [dex]; `alpha_law(mh)` if not given.
+
+    Returns
+    -------
+    Composition
+
+    Examples
+    --------
+    >>> round(float(composition_for(0.0).mass_per_hydrogen) / ATOMIC_MASS_G, 3)
+    1.354
+    """
+    alpha = alpha_law(mh) if alpha is None else float(alpha)
+    abundances = np.array([number_abundance(symbol, mh, alpha) for symbol in ELEMENTS])
+    return Composition(mh=float(mh), alpha=alpha, abundances=abundances)
