@@ -1,0 +1,285 @@
+"""Every table that specsolve reads or writes: name, type, unit and meaning of each column.
+
+This one description makes the written tables, the keys of the JSON view, the column list in the help texts, and the check of
+a table that is read back.  Columns and keys are only ever added; a change of meaning raises `SCHEMA`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+SCHEMA = 1
+
+TEXT = "str"
+REAL = "float64"
+COUNT = "int64"
+FLAG = "bool"
+
+
+@dataclass(frozen=True)
+class Column:
+    """One column of a table.
+
+    Attributes
+    ----------
+    name : str
+    dtype : str
+        "str", "float64", "int64" or "bool".
+    unit : str
+        As astropy writes it; empty for none.
+    description : str
+    shape : tuple of int
+        Of one cell; empty for a scalar.
+    """
+
+    name: str
+    dtype: str
+    unit: str
+    description: str
+    shape: tuple[int, ...] = ()
+
+
+PARAMETERS = (
+    ("teff", "K", "effective temperature"),
+    ("logg", "dex", "log10 of the surface gravity in cm/s2"),
+    ("feh", "dex", "[Fe/H] on the zero points of this solve"),
+    ("vmic", "km / s", "microturbulence"),
+)
+RESIDUALS = (
+    ("excitation_slope", "dex / eV", "slope of A(Fe I) against the lower excitation potential"),
+    ("ionization_offset", "dex", "mean A(Fe I) - mean A(Fe II)"),
+    ("metallicity_offset", "dex", "mean A(Fe) - zero point - [Fe/H] of the atmosphere"),
+    ("strength_slope", "", "slope of A(Fe I) against the reduced width [dex/dex]"),
+)
+SHIFTS = (("teff", "100 K"), ("logg", "0.3 dex"), ("feh", "0.2 dex"), ("vmic", "0.2 km/s"))
+
+
+def _parameter_columns() -> tuple[Column, ...]:
+    columns = []
+    for name, unit, words in PARAMETERS:
+        columns += [
+            Column(name, REAL, unit, words),
+            Column(f"{name}_error_star", REAL, unit, f"{words}: error from the star's own widths and line scatter"),
+            Column(f"{name}_error_list", REAL, unit, f"{words}: error shared by all stars on this line list"),
+        ]
+    return tuple(columns)
+
+
+def _residual_columns() -> tuple[Column, ...]:
+    columns = []
+    for name, unit, words in RESIDUALS:
+        columns += [
+            Column(name, REAL, unit, words),
+            Column(f"{name}_error", REAL, unit, f"error of the {name.replace('_', ' ')}"),
+        ]
+    return tuple(columns)
+
+
+def _ion_columns() -> tuple[Column, ...]:
+    columns = []
+    for prefix, ion in (("fe1", "Fe I"), ("fe2", "Fe II")):
+        columns += [
+            Column(f"{prefix}_abundance", REAL, "dex", f"weighted mean A(Fe) of {ion}"),
+            Column(f"{prefix}_error_star", REAL, "dex", f"its error at fixed parameters, from the star ({ion})"),
+            Column(f"{prefix}_error_list", REAL, "dex", f"its error at fixed parameters, from the list ({ion})"),
+            Column(f"{prefix}_scatter", REAL, "dex", f"weighted standard deviation of single lines of {ion}"),
+            Column(f"{prefix}_line_to_line", REAL, "dex", f"line-to-line term in the weights of {ion}"),
+            Column(f"{prefix}_n_lines", COUNT, "", f"lines of {ion} that carry weight"),
+            Column(f"{prefix}_feh", REAL, "dex", f"[Fe/H] of {ion} on the zero points of this solve"),
+            Column(f"{prefix}_feh_solar_iron", REAL, "dex", f"A({ion}) minus solar iron"),
+            Column(
+                f"{prefix}_own_sun", REAL, "dex", f"A({ion}) of the Sun from the same lines, atmospheres, treatment"
+            ),
+            Column(f"{prefix}_own_sun_n_lines", COUNT, "", f"lines of {ion} in that solar value"),
+            Column(f"{prefix}_feh_own_sun", REAL, "dex", f"A({ion}) minus that solar value"),
+        ]
+    return tuple(columns)
+
+
+def _sensitivity_columns() -> tuple[Column, ...]:
+    columns = []
+    for name, shift in SHIFTS:
+        for sign, word in (("plus", "+"), ("minus", "-")):
+            for prefix, ion in (("fe1", "Fe I"), ("fe2", "Fe II")):
+                columns.append(
+                    Column(f"d_{prefix}_{name}_{sign}", REAL, "dex", f"change of A({ion}) for {name} {word} {shift}")
+                )
+    return tuple(columns)
+
+
+def _alternative_columns() -> tuple[Column, ...]:
+    return tuple(
+        Column(f"fe2_alternative_{name}", REAL, unit, f"{words}, with the other Fe II log gf scale")
+        for name, unit, words in PARAMETERS
+    )
+
+
+STAR_KEY = (
+    Column("star", TEXT, "", "name of the star"),
+    Column("treatment", TEXT, "", "line formation: lte or nlte"),
+)
+
+STARS = (
+    *STAR_KEY,
+    Column("status", TEXT, "", "solved, tied, outside_grid or unsolved"),
+    Column("reason", TEXT, "", "why it is not solved; empty otherwise"),
+    Column("flags", TEXT, "", "informative flags, separated by commas"),
+    *_parameter_columns(),
+    Column("fixed", TEXT, "", "parameters held fixed, separated by commas"),
+    Column("cov_star", REAL, "", "covariance of (teff, logg, feh, vmic): the star's own part", (4, 4)),
+    Column("cov_list", REAL, "", "covariance of (teff, logg, feh, vmic): shared by all stars on the list", (4, 4)),
+    *_residual_columns(),
+    Column("removed_residuals", TEXT, "", "residuals that fixed parameters took out of the solve"),
+    Column("residual_covariance", REAL, "", "covariance of the four residuals, in the order of their columns", (4, 4)),
+    Column("chi2", REAL, "", "sum of squares of the whitened residuals and outside terms"),
+    Column("log_likelihood", REAL, "", "ln density of the measured widths"),
+    Column("degrees_of_freedom", COUNT, "", "lines used minus free parameters"),
+    Column("line_scatter", REAL, "dex", "weighted standard deviation of all used lines"),
+    *_ion_columns(),
+    *_sensitivity_columns(),
+    *_alternative_columns(),
+    Column("n_candidates", COUNT, "", "minima found in the search"),
+    Column("n_input", COUNT, "", "lines in the input"),
+    Column("n_matched", COUNT, "", "of these, in the grid"),
+    Column("n_used", COUNT, "", "of these, in the solve"),
+    Column("solar_iron", REAL, "dex", "A(Fe) of the Sun used as zero of [Fe/H]"),
+    Column("zero_point_source", TEXT, "", "what the abundances are relative to"),
+    Column("fe2_scale", TEXT, "", "Fe II log gf scale in use"),
+    Column("validity", TEXT, "", "limits of validity that apply to this star"),
+    Column("notes", TEXT, "", "what the reader should know: assumed errors, merged repeats"),
+    Column("unmatched", TEXT, "", "lines of the input that the grid does not have"),
+    Column("grid_identity", TEXT, "", "SHA-256 of the response grid"),
+    Column("atmospheres_identity", TEXT, "", "SHA-256 of the atmospheres behind the grid"),
+    Column("line_list_hash", TEXT, "", "SHA-256 of the lines used"),
+    Column("input_hash", TEXT, "", "SHA-256 of the star's input"),
+    Column("configuration", TEXT, "", "options of this solve as JSON"),
+)
+
+LINES = (
+    *STAR_KEY,
+    Column("key", TEXT, "", "name of the line in the grid; empty if it is not there"),
+    Column("wavelength_air", REAL, "Angstrom", "wavelength in air"),
+    Column("ion", TEXT, "", "Fe I or Fe II"),
+    Column("excitation_potential", REAL, "eV", "energy of the lower level"),
+    Column("log_gf", REAL, "dex", "log10 of g f used"),
+    Column("log_gf_error", REAL, "dex", "its error; nan where the source gives none"),
+    Column("equivalent_width", REAL, "mAngstrom", "measured equivalent width"),
+    Column("equivalent_width_error", REAL, "mAngstrom", "its error"),
+    Column("error_assumed", FLAG, "", "the error was assumed, not given"),
+    Column("reduced_width", REAL, "dex", "log10 of measured width over wavelength"),
+    Column("predicted_width", REAL, "mAngstrom", "width predicted by the solution"),
+    Column("predicted_reduced_width", REAL, "dex", "log10 of predicted width over wavelength; the cuts act on it"),
+    Column("strength", REAL, "dex", "strength axis of the trend: measured and predicted reduced width, mixed"),
+    Column("abundance", REAL, "dex", "A(Fe) of the line at the solution"),
+    Column("abundance_error", REAL, "dex", "its error: width, log gf and line-to-line term"),
+    Column("width_error_dex", REAL, "dex", "the part of it from the width"),
+    Column("zero_point", REAL, "dex", "zero point subtracted"),
+    Column("relative_abundance", REAL, "dex", "abundance minus zero point"),
+    Column("deviation", REAL, "dex", "relative abundance minus the fitted plane or mean"),
+    Column("standardized", REAL, "", "deviation over abundance_error"),
+    Column("robust_weight", REAL, "", "1 full weight, less down-weighted, 0 not used"),
+    Column("weight", REAL, "", "weight in the fit [dex^-2]; 0 where not used"),
+    Column("d_abundance_teff", REAL, "dex / K", "change of the abundance with teff at fixed width"),
+    Column("d_abundance_logg", REAL, "", "change of the abundance with logg at fixed width [dex/dex]"),
+    Column("d_abundance_mh", REAL, "", "change of the abundance with the atmosphere's [Fe/H] [dex/dex]"),
+    Column("d_abundance_vmic", REAL, "dex s / km", "change of the abundance with vmic at fixed width"),
+    Column("d_abundance_d_width", REAL, "", "change of the abundance with log10 of the width [dex/dex]"),
+    *(
+        Column(f"influence_{name}", REAL, unit, f"change of {name} when this line alone is left out")
+        for name, unit, _ in PARAMETERS
+    ),
+    Column("used", FLAG, "", "the line carries weight"),
+    Column("reason", TEXT, "", "why it was dropped or down-weighted"),
+    Column(
+        "interpolation_flags", COUNT, "", "bits: 1 grid edge, 2 beside a missing node, 4 outside the table, 8 missing"
+    ),
+)
+
+CANDIDATES = (
+    *STAR_KEY,
+    Column("candidate", COUNT, "", "place in the report; 0 is the reported one"),
+    *(
+        column
+        for name, unit, words in PARAMETERS
+        for column in (
+            Column(name, REAL, unit, words),
+            Column(f"{name}_error", REAL, unit, f"{words}: error, star and list together"),
+        )
+    ),
+    Column("covariance", REAL, "", "covariance of (teff, logg, feh, vmic), star and list together", (4, 4)),
+    *(Column(name, REAL, unit, words) for name, unit, words in RESIDUALS),
+    Column("chi2", REAL, "", "sum of squares of the whitened residuals and outside terms"),
+    Column("log_likelihood", REAL, "", "ln density of the measured widths"),
+    Column("delta", REAL, "", "2 (ln L of the best - ln L)"),
+    Column("odds", REAL, "", "share of the probability among near-equal candidates"),
+    Column("n_lines", COUNT, "", "lines that carry weight"),
+    Column("n_seeds", COUNT, "", "starting points that led here"),
+    Column("iterations", COUNT, "", "steps of the refinement"),
+    Column("flags", TEXT, "", "flags, separated by commas"),
+    Column("set_aside", TEXT, "", "why the rule does not consider it; empty if it does"),
+)
+
+DECISIONS = (
+    *STAR_KEY,
+    Column("step", COUNT, "", "order of the decisions"),
+    Column("kind", TEXT, "", "kind of decision"),
+    Column("subject", TEXT, "", "candidate, line or parameter concerned"),
+    Column("value", REAL, "", "the number compared"),
+    Column("threshold", REAL, "", "its limit"),
+    Column("outcome", TEXT, "", "what was done"),
+    Column("reason", TEXT, "", "one sentence"),
+)
+
+INPUT = (
+    Column("star", TEXT, "", "name of the star (optional; one star if absent)"),
+    Column("wavelength_air", REAL, "Angstrom", "wavelength in air"),
+    Column("ion", TEXT, "", 'ion, as "Fe I" or "Fe II"'),
+    Column("equivalent_width", REAL, "mAngstrom", "measured equivalent width"),
+    Column("equivalent_width_error", REAL, "mAngstrom", "its error (optional; an assumed error is printed)"),
+    Column("excitation_potential", REAL, "eV", "energy of the lower level (optional; identifies the line)"),
+    Column("log_gf", REAL, "dex", "log10 of g f (optional; overrides the grid's)"),
+    Column("use", FLAG, "", "false leaves the line out (optional)"),
+)
+
+TRUTH = (
+    Column("star", TEXT, "", "name of the invented star"),
+    *(Column(name, REAL, unit, words) for name, unit, words in PARAMETERS),
+    Column("signal_to_noise", REAL, "", "of the invented spectrum, per pixel"),
+    Column("bad_lines", TEXT, "", "lines spoiled on purpose, separated by semicolons"),
+)
+
+TABLES: dict[str, tuple[Column, ...]] = {
+    "stars": STARS,
+    "lines": LINES,
+    "candidates": CANDIDATES,
+    "decisions": DECISIONS,
+    "input": INPUT,
+    "truth": TRUTH,
+}
+
+FILE_ENDINGS = {"stars": "", "lines": "_lines", "candidates": "_candidates", "decisions": "_decisions"}
+
+
+def columns_of(kind: str) -> tuple[Column, ...]:
+    """Columns of a kind of table.
+
+    Examples
+    --------
+    >>> [column.name for column in columns_of("decisions")][:3]
+    ['star', 'treatment', 'step']
+    """
+    return TABLES[kind]
+
+
+def describe(kind: str) -> str:
+    """The columns of a kind of table as aligned text, one a line.
+
+    Examples
+    --------
+    >>> describe("input").splitlines()[1]
+    'wavelength_air          Angstrom   wavelength in air'
+    """
+    columns = columns_of(kind)
+    width = max(len(column.name) for column in columns) + 2
+    unit_width = max(len(column.unit) for column in columns) + 2
+    return "\n".join(f"{column.name:<{width}}{column.unit:<{unit_width}}{column.description}" for column in columns)
