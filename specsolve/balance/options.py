@@ -1,0 +1,67 @@
+"""Options of a solve, with their stated defaults."""
+
+from __future__ import annotations
+
+from dataclasses import asdict, dataclass
+from typing import Any
+
+
+@dataclass(frozen=True, kw_only=True)
+class Options:
+    """What a solve may be told; every value is written into the output.
+
+    Attributes
+    ----------
+    loss : str
+        "huber" (k 1.345), "student" (nu 4) or "none".
+    reduced_width_range : (float, float)
+        Cut on the PREDICTED log10(W/lambda); weaker lines are noise, stronger ones damping (common practice, no source).
+    excitation_range : (float, float)
+        [eV].
+    wavelength_range : (float, float)
+        [Angstrom].
+    worst_grade : int
+        Lines of a worse (larger) grade are left out; ungraded lines (0) stay.
+    near_equal : float
+        Candidates with 2 (ln L_best - ln L) below this are near-equal (6 = odds 20 : 1).
+    vmic_relation : bool
+        Let a published vmic(teff, logg) relation break a tie.
+    max_iterations : int
+        Newton steps per candidate.
+    max_seeds : int
+        Starting points refined per star; more would be said in the search decision.
+
+    Examples
+    --------
+    >>> Options(loss="none").loss
+    'none'
+    """
+
+    loss: str = "huber"
+    reduced_width_range: tuple[float, float] = (-6.0, -4.8)
+    excitation_range: tuple[float, float] = (0.0, 6.0)
+    wavelength_range: tuple[float, float] = (4000.0, 9000.0)
+    worst_grade: int = 4
+    near_equal: float = 6.0
+    vmic_relation: bool = True
+    max_iterations: int = 60
+    max_seeds: int = 24
+
+    def __post_init__(self) -> None:
+        if self.loss not in ("huber", "student", "none"):
+            raise ValueError(f"loss = {self.loss!r} is not one of 'huber', 'student', 'none'")
+        for name in ("reduced_width_range", "excitation_range", "wavelength_range"):
+            low, high = getattr(self, name)
+            if not low < high:
+                raise ValueError(f"{name} = ({low:g}, {high:g}) is empty")
+            object.__setattr__(self, name, (float(low), float(high)))
+
+    def as_dict(self) -> dict[str, Any]:
+        """Plain values for a header; `Options.from_dict` reads them back."""
+        return {key: list(value) if isinstance(value, tuple) else value for key, value in asdict(self).items()}
+
+    @classmethod
+    def from_dict(cls, values: dict[str, Any]) -> Options:
+        """Inverse of `as_dict`; names that this version does not know are ignored."""
+        known = {key: value for key, value in values.items() if key in cls.__dataclass_fields__}
+        return cls(**{key: tuple(value) if isinstance(value, list) else value for key, value in known.items()})
