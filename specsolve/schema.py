@@ -1,7 +1,7 @@
 """Every table that specsolve reads or writes: name, type, unit and meaning of each column.
 
-This one description makes the written tables, the keys of the JSON view, the column list in the help texts, and the check of
-a table that is read back.  Columns and keys are only ever added; a change of meaning raises `SCHEMA`.
+This one description makes the written tables, the keys of the JSON view, the column list in the help texts, and the
+check of a table that is read back.  Columns and keys are only ever added; a change of meaning raises `SCHEMA`.
 """
 
 from __future__ import annotations
@@ -88,7 +88,7 @@ def _ion_columns() -> tuple[Column, ...]:
             Column(f"{prefix}_feh", REAL, "dex", f"[Fe/H] of {ion} on the zero points of this solve"),
             Column(f"{prefix}_feh_solar_iron", REAL, "dex", f"A({ion}) minus solar iron"),
             Column(
-                f"{prefix}_own_sun", REAL, "dex", f"A({ion}) of the Sun from the same lines, atmospheres, treatment"
+                f"{prefix}_own_sun", REAL, "dex", f"A({ion}) of the Sun from the same lines and treatment"
             ),
             Column(f"{prefix}_own_sun_n_lines", COUNT, "", f"lines of {ion} in that solar value"),
             Column(f"{prefix}_feh_own_sun", REAL, "dex", f"A({ion}) minus that solar value"),
@@ -191,7 +191,7 @@ LINES = (
     Column("used", FLAG, "", "the line carries weight"),
     Column("reason", TEXT, "", "why it was dropped or down-weighted"),
     Column(
-        "interpolation_flags", COUNT, "", "bits: 1 grid edge, 2 beside a missing node, 4 outside the table, 8 missing"
+        "interpolation_flags", COUNT, "", "bits: 1 edge, 2 beside a missing node, 4 outside the table, 8 missing"
     ),
 )
 
