@@ -1,7 +1,7 @@
 """Solutions as tables: written by the schema, read back by the schema.
 
-One solve writes ``X.ecsv`` (star x treatment), ``X_lines.ecsv``, ``X_candidates.ecsv`` and ``X_decisions.ecsv``.  ECSV is the
-master copy; every file carries the schema number, the kind of table and the provenance in its metadata.
+One solve writes ``X.ecsv`` (star x treatment), ``X_lines.ecsv``, ``X_candidates.ecsv`` and ``X_decisions.ecsv``.  ECSV is
+the master copy; every file carries the schema number, the kind of table and the provenance in its metadata.
 """
 
 from __future__ import annotations
@@ -270,7 +270,8 @@ def read_table(path: str | Path, kind: str) -> Table:
                 f"{path} has no column {column.name}", column=column.name, found=table.colnames, path=path
             )
         if column.dtype == TEXT:
-            table[column.name] = np.ma.filled(np.ma.asarray(table[column.name]).astype(str), "")
+            text = np.ma.filled(np.ma.asarray(table[column.name]).astype(str), "")
+            table.replace_column(column.name, table.Column(text, name=column.name, description=column.description))
     return table
 
 
@@ -357,7 +358,9 @@ def _typed(column: Column, values: Any) -> np.ndarray:
     if column.dtype == TEXT and len(values) == 0:
         return np.empty(0, dtype="U1")
     array = np.asarray(values, dtype=dtype)
-    return array.reshape((len(values), *column.shape)) if column.shape else array
+    if column.shape and len(values):  # ECSV cannot hold a shaped column without rows
+        array = array.reshape((len(values), *column.shape))
+    return array
 
 
 def _blank(column: Column) -> Any:
