@@ -90,6 +90,37 @@ def log_partition(rows: np.ndarray, temperature: np.ndarray) -> np.ndarray:
     ValueError
         If a temperature lies outside the table.
     """
+    left, b, step = _place(temperature)
+    a = 1.0 - b
+    table = partition_table()
+    values, curvatures = table.values[rows], table.curvatures[rows]
+    return (
+        a * values[:, left]
+        + b * values[:, left + 1]
+        + step**2 / 6.0 * ((a**3 - a) * curvatures[:, left] + (b**3 - b) * curvatures[:, left + 1])
+    )
+
+
+def log_partition_slope(rows: np.ndarray, temperature: np.ndarray) -> np.ndarray:
+    """d ln U / d ln T of several species: their mean excitation energy in units of kT.
+
+    Parameters and errors as in `log_partition`.
+
+    Returns
+    -------
+    ndarray, shape (n_species, n)
+    """
+    left, b, step = _place(temperature)
+    a = 1.0 - b
+    table = partition_table()
+    values, curvatures = table.values[rows], table.curvatures[rows]
+    return (values[:, left + 1] - values[:, left]) / step + step / 6.0 * (
+        (3.0 * b**2 - 1.0) * curvatures[:, left + 1] - (3.0 * a**2 - 1.0) * curvatures[:, left]
+    )
+
+
+def _place(temperature: np.ndarray) -> tuple[np.ndarray, np.ndarray, float]:
+    """Interval of the table in which each temperature lies, its fraction of it, and the spacing in ln T."""
     table = partition_table()
     temperature = np.atleast_1d(np.asarray(temperature, dtype=float))
     position = (np.log(temperature) - table.first) / table.step
@@ -100,15 +131,7 @@ def log_partition(rows: np.ndarray, temperature: np.ndarray) -> np.ndarray:
             f"({table.lowest_temperature:.0f} to {table.highest_temperature:.0f} K)"
         )
     left = np.minimum(position.astype(int), n_nodes - 2)
-    b = position - left
-    a = 1.0 - b
-    sixth = table.step**2 / 6.0
-    values, curvatures = table.values[rows], table.curvatures[rows]
-    return (
-        a * values[:, left]
-        + b * values[:, left + 1]
-        + sixth * ((a**3 - a) * curvatures[:, left] + (b**3 - b) * curvatures[:, left + 1])
-    )
+    return left, position - left, table.step
 
 
 def species_row(species: str) -> int:
