@@ -1,0 +1,1 @@
+"""Model atmospheres in radiative-convective equilibrium, and their store."""

@@ -1,0 +1,115 @@
+"""Starting structures, and moving depth points to the standard optical depths."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+from scipy.interpolate import PchipInterpolator
+
+from specsolve.matter.composition import Composition
+from specsolve.matter.continuum import continuum_opacity
+from specsolve.matter.equation_of_state import equilibrium
+
+if TYPE_CHECKING:
+    from specsolve.atmosphere.energy import Balance
+    from specsolve.atmosphere.model import Atmosphere
+
+#: log10 of optical depth at 5000 A: 0.16 apart near the surface, 0.1 where the continuum forms.
+STANDARD_LOG_TAU = np.concatenate([np.linspace(-6.0, -2.0, 25, endpoint=False), np.linspace(-2.0, 2.0, 41)])
+MAX_STARTING_GRADIENT = 0.25  # d ln T / d ln P of the deep starting structure, somewhat above the adiabatic one
+_REFERENCE = np.array([5e-5])
+
+
+def grey_temperature(teff: float, tau: np.ndarray) -> np.ndarray:
+    """Krishna Swamy (1966, ApJ 145, 174): T^4 = 3/4 Teff^4 (tau + q(tau)); `tau` (n,), returns (n,) [K]."""
+    q = 1.39 - 0.815 * np.exp(-2.54 * tau) - 0.025 * np.exp(-30.0 * tau)
+    return teff * (0.75 * (tau + q)) ** 0.25
+
+
+def starting_structure(
+    teff: float, gravity: float, composition: Composition, neighbour: Atmosphere | None
+) -> tuple[np.ndarray, np.ndarray]:
+    """First guess of a structure on the standard optical depths.
+
+    Parameters
+    ----------
+    teff, gravity : float
+        [K], [cm / s2].
+    composition : Composition
+    neighbour : Atmosphere or None
+        Its temperatures are scaled by the ratio of effective temperatures; without it a grey law is used, with the
+        gradient limited in the deep layers.
+
+    Returns
+    -------
+    column_mass, temperature : ndarray, shape (n,)
+        [g / cm2], [K]; the column mass integrates d m = d tau / opacity with the continuum opacity at 5000 A.
+    """
+    tau = 10.0**STANDARD_LOG_TAU
+    if neighbour is None:
+        temperature = grey_temperature(teff, tau)
+    else:
+        scaled = PchipInterpolator(neighbour.log_tau, neighbour.temperature, extrapolate=True)
+        temperature = scaled(STANDARD_LOG_TAU) * teff / neighbour.teff
+
+    def opacity(t: float, pressure: float) -> float:
+        gas = equilibrium(np.array([t]), np.array([pressure]), composition)
+        absorption, scattering = continuum_opacity(_REFERENCE, gas)
+        return float(absorption[0, 0] + scattering[0, 0])
+
+    mass = np.empty_like(tau)
+    guess = 1e-4
+    for _ in range(60):  # opacity proportional to pressure above the first point: tau = chi m / 2
+        new = 2.0 * tau[0] / opacity(temperature[0], gravity * guess)
+        if abs(new / guess - 1.0) < 1e-4:
+            break
+        guess = np.sqrt(new * guess)
+    mass[0] = guess
+    chi = opacity(temperature[0], gravity * mass[0])
+    for d in range(1, len(tau)):
+        step = 2.0 * (tau[d] - tau[d - 1])
+        trial = mass[d - 1] + 0.5 * step / chi
+        t = temperature[d]
+        for _ in range(30):
+            if neighbour is None and tau[d] > 1.0:
+                limit = temperature[d - 1] * (trial / mass[d - 1]) ** MAX_STARTING_GRADIENT
+                t = min(temperature[d], limit)
+            here = opacity(t, gravity * trial)
+            new = mass[d - 1] + step / (chi + here)
+            if abs(new / trial - 1.0) < 1e-5:
+                trial = new
+                break
+            trial = 0.5 * (trial + new)
+        temperature[d], mass[d], chi = t, trial, here
+    return mass, temperature
+
+
+def move_to_standard_depths(
+    column_mass: np.ndarray, log_t: np.ndarray, push: np.ndarray, balance: Balance
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Interpolate a nearly converged structure to the standard optical depths.
+
+    Parameters
+    ----------
+    column_mass, log_t, push : ndarray, shape (n,)
+        [g / cm2], ln T, radiative acceleration [cm / s2].
+    balance : Balance
+        Of the same structure; gives its optical depths.
+
+    Returns
+    -------
+    column_mass, log_t, push : ndarray, shape (n,)
+        On the standard depths. Beyond the old ends ln m and ln T continue linearly in log tau by the small amount that
+        the ends have moved (at most 0.3 dex a call; the structure is converged again afterwards).
+    """
+    x = balance.log_tau
+    target = np.clip(STANDARD_LOG_TAU, x[0] - 0.3, x[-1] + 0.3)
+    inner = np.clip(target, x[0], x[-1])
+    moved = []
+    for values in (np.log(column_mass), log_t, push):
+        smooth = PchipInterpolator(x, values)(inner)
+        first = (values[1] - values[0]) / (x[1] - x[0])
+        last = (values[-1] - values[-2]) / (x[-1] - x[-2])
+        moved.append(smooth + first * np.minimum(target - x[0], 0.0) + last * np.maximum(target - x[-1], 0.0))
+    return np.exp(moved[0]), moved[1], moved[2]
