@@ -135,10 +135,8 @@ class AtmosphereStore:
         """
         record = self.describe(teff, logg, mh)
         if record["status"] not in ("converged", "imported"):
-            raise MissingNodeError(
-                f"no atmosphere at Teff {teff:g} K, log g {logg:g}, [M/H] {mh:+g}: {record['status']} ({record['reason']}).",
-                reason=record["reason"],
-            )
+            node = {"teff": teff, "logg": logg, "mh": mh}
+            raise MissingNodeError(f"{record['status']} ({record['reason']})", node)
         values = self._structures[self._index(teff, logg, mh)]
         return Atmosphere(
             teff=teff, logg=logg, mh=mh, alpha=record["alpha"], vmic=record["vmic"], flux_error=record["flux_error"],
