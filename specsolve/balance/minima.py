@@ -1,0 +1,168 @@
+"""All candidates that the search finds: refined starting points, with duplicates merged and line cuts fixed."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from specsolve.errors import NotEnoughLinesError
+
+from .newton import STEP_UNIT, Minimum, refine
+from .problem import Problem
+from .scan import Scan, scan_nodes, seeds_from_scan
+
+PRELIMINARY_MARGIN_DEX = 0.15  # how much wider the first cut, on measured widths, is than the one on predicted widths
+SAME_MINIMUM = 0.02  # ends closer than this in STEP_UNIT are one minimum: 5 K, 0.01 dex, 0.01 km/s
+REASON_PREDICTED = "predicted_strength_cut"
+REASON_MEASURED = "measured_strength_cut"
+MIN_FE1_LINES = 4  # the plane has three coefficients
+EDGE_FLAG, BESIDE_MISSING_FLAG = 1, 2
+
+
+@dataclass(frozen=True, eq=False)
+class FoundMinimum:
+    """A candidate before ranking.
+
+    Attributes
+    ----------
+    minimum : Minimum
+    allowed : ndarray of bool, shape (n_lines,)
+        Lines kept by the cut on predicted strength, frozen.
+    seeds : int
+        Starting points that led here.
+    flags : tuple of str
+    """
+
+    minimum: Minimum
+    allowed: np.ndarray
+    seeds: int
+    flags: tuple[str, ...]
+
+
+@dataclass(frozen=True, eq=False)
+class Search:
+    """What the search looked at and found.
+
+    Attributes
+    ----------
+    found : tuple of FoundMinimum
+    preliminary : ndarray of bool, shape (n_lines,)
+        Lines of the wide cut on measured widths.
+    n_nodes, n_seeds, n_refined : int
+    failures : tuple of str
+        Why starting points led nowhere.
+    """
+
+    found: tuple[FoundMinimum, ...]
+    preliminary: np.ndarray
+    n_nodes: int
+    n_seeds: int
+    n_refined: int
+    failures: tuple[str, ...] = field(default=())
+
+
+def preliminary_lines(problem: Problem) -> np.ndarray:
+    """Lines within the cut on strength, widened, on measured widths; bool, shape (n_lines,)."""
+    low, high = problem.options.reduced_width_range
+    x = problem.inputs.log_reduced_width
+    return (x >= low - PRELIMINARY_MARGIN_DEX) & (x <= high + PRELIMINARY_MARGIN_DEX)
+
+
+def predicted_lines(problem: Problem, minimum: Minimum, preliminary: np.ndarray) -> np.ndarray:
+    """Lines within the cut on predicted strength at a minimum; bool, shape (n_lines,)."""
+    low, high = problem.options.reduced_width_range
+    predicted = minimum.state.predicted
+    inside = (predicted >= low) & (predicted <= high)  # false for nan
+    return preliminary & inside
+
+
+def local_solve(problem: Problem, start: np.ndarray, preliminary: np.ndarray) -> tuple[Minimum, np.ndarray]:
+    """Refine with the wide cut, fix the cut on predicted strength there, refine again."""
+    first = refine(problem, start, preliminary)
+    if first.state is None:
+        return first, preliminary
+    allowed = predicted_lines(problem, first, preliminary)
+    if np.array_equal(allowed, preliminary):
+        return first, allowed
+    if not enough_lines(problem, allowed):
+        return first, preliminary
+    second = refine(problem, first.theta, allowed)
+    return (first, preliminary) if second.state is None else (second, allowed)
+
+
+def enough_lines(problem: Problem, allowed: np.ndarray) -> bool:
+    """Whether these lines can form every residual that the free parameters need (Outside terms not counted)."""
+    is_fe2 = problem.inputs.is_fe2
+    first, second = int((allowed & ~is_fe2).sum()), int((allowed & is_fe2).sum())
+    needs_slopes = "teff" not in problem.fixed or "vmic" not in problem.fixed
+    if first < (MIN_FE1_LINES if needs_slopes else 1):
+        return False
+    outside = {term.name for item in problem.outside for term in item.terms}
+    return second >= 1 or "logg" in problem.fixed or "logg" in outside
+
+
+def shortage(problem: Problem, allowed: np.ndarray) -> tuple[str, dict[str, int]]:
+    """What is missing, in words, and the counts; for an error."""
+    is_fe2 = problem.inputs.is_fe2
+    counts = {
+        problem.pair[0]: int((allowed & ~is_fe2).sum()),
+        problem.pair[1]: int((allowed & is_fe2).sum()),
+    }
+    found = ", ".join(f"{n} {ion}" for ion, n in counts.items())
+    if counts[problem.pair[1]] == 0 and counts[problem.pair[0]] >= MIN_FE1_LINES and "logg" not in problem.fixed:
+        return f"no usable {problem.pair[1]} line ({found}): the gravity is undetermined; fix logg", counts
+    return f"too few usable lines ({found}): at least {MIN_FE1_LINES} {problem.pair[0]} lines are needed", counts
+
+
+def search(problem: Problem) -> Search:
+    """Scan the grid, refine every starting point, merge what is one minimum."""
+    preliminary = preliminary_lines(problem)
+    if not enough_lines(problem, preliminary):
+        message, counts = shortage(problem, preliminary)
+        raise NotEnoughLinesError(message, counts=counts)
+    scan: Scan = scan_nodes(problem, preliminary)
+    seeds = seeds_from_scan(problem, scan)
+    found: list[FoundMinimum] = []
+    failures: list[str] = []
+    refined = 0
+    for seed in seeds[: problem.options.max_seeds]:
+        minimum, allowed = local_solve(problem, seed.theta, preliminary)
+        refined += 1
+        if minimum.state is None:
+            failures.append(minimum.failure)
+            continue
+        for i, other in enumerate(found):
+            if np.all(np.abs(minimum.theta - other.minimum.theta) < SAME_MINIMUM * STEP_UNIT):
+                found[i] = FoundMinimum(other.minimum, other.allowed, other.seeds + seed.count, other.flags)
+                break
+        else:
+            found.append(FoundMinimum(minimum, allowed, seed.count, minimum_flags(problem, minimum, preliminary)))
+    return Search(
+        found=tuple(found),
+        preliminary=preliminary,
+        n_nodes=scan.n_nodes,
+        n_seeds=len(seeds),
+        n_refined=refined,
+        failures=tuple(dict.fromkeys(failures)),
+    )
+
+
+def minimum_flags(problem: Problem, minimum: Minimum, preliminary: np.ndarray) -> tuple[str, ...]:
+    """Flags of a refined minimum."""
+    flags = []
+    state = minimum.state
+    if not minimum.converged:
+        flags.append("not_converged")
+    if minimum.at_bound[problem.free].any():
+        flags.append("outside_grid")
+    bits = int(np.bitwise_or.reduce(state.flags[state.used])) if state.used.any() else 0
+    if bits & EDGE_FLAG:
+        flags.append("at_grid_edge")
+    if bits & BESIDE_MISSING_FLAG:
+        flags.append("beside_missing_node")
+    if (preliminary & ~np.isfinite(state.abundance)).any():
+        flags.append("lines_outside_table")
+    if not state.weighting.settled:
+        flags.append("weights_not_settled")
+    return tuple(flags)

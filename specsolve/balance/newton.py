@@ -1,0 +1,165 @@
+"""From a starting point to a minimum of r^T C^-1 r plus the Outside terms, inside the box of the grid."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from specsolve.errors import OutOfGridError
+
+from .problem import Problem
+from .state import BalanceState
+
+# Units in which steps are measured, one default grid step of each axis: K, dex, dex, km/s.
+STEP_UNIT = np.array([250.0, 0.5, 0.5, 0.5])
+MAX_STEP = 1.0  # in STEP_UNIT
+STEP_TOLERANCE = 1e-9  # in STEP_UNIT: 2.5e-7 K
+STALLED_STEP = 1e-6  # a step that no damping can take must be below this to count as an end
+MAX_HALVINGS = 12
+LEVENBERG_START = 1e-3
+RANK_TOLERANCE = 1e-10
+ON_FACE = 1e-6  # in STEP_UNIT
+ROOT_OBJECTIVE = 1e-6  # chi2 below which residuals and Outside terms are met
+
+
+@dataclass(frozen=True, eq=False)
+class Minimum:
+    """Where a refinement ended.
+
+    Attributes
+    ----------
+    theta : ndarray, shape (4,)
+    state : BalanceState or None
+        None if not even the starting point could be evaluated.
+    objective : float
+        r^T C^-1 r plus Outside terms.
+    converged : bool
+    at_bound : ndarray of bool, shape (4,)
+        Parameters that the box of the grid stops.
+    iterations : int
+    failure : str
+        Why there is no state; empty otherwise.
+    """
+
+    theta: np.ndarray
+    state: BalanceState | None
+    objective: float
+    converged: bool
+    at_bound: np.ndarray
+    iterations: int
+    failure: str = ""
+
+
+def whitened_system(problem: Problem, state: BalanceState) -> tuple[np.ndarray, np.ndarray]:
+    """Whitened residuals z and dz/dtheta over active residuals and Outside terms; z^T z is the objective.
+
+    Residuals that these lines cannot form (nan) are left out.
+    """
+    active = problem.active & np.isfinite(state.residuals)
+    rows = np.flatnonzero(active)
+    covariance = state.covariance[np.ix_(rows, rows)]
+    lower = np.linalg.cholesky(covariance) if rows.size else np.zeros((0, 0))
+    z = np.linalg.solve(lower, state.residuals[rows])
+    jacobian = np.linalg.solve(lower, state.jacobian[rows])
+    outside, outside_jacobian = problem.outside_terms(state.theta)
+    return np.concatenate([z, outside]), np.vstack([jacobian, outside_jacobian])
+
+
+def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = None) -> Minimum:
+    """Damped Gauss-Newton from one starting point.
+
+    Each step refreshes weights, line-to-line term and strength axis, so that the end is their common fixed point. A step is accepted if
+    the objective, with the covariance of the point it starts from, does not grow; otherwise it is shortened and turned
+    towards the gradient (Levenberg). Parameters that leave the box of the grid stay on its face.
+
+    Parameters
+    ----------
+    problem : Problem
+    start : ndarray, shape (4,)
+    allowed : ndarray of bool, shape (n_lines,), optional
+    """
+    low, high = problem.bounds
+    theta = np.clip(np.asarray(start, float), low, high)
+    for name, value in problem.fixed.items():
+        place = ("teff", "logg", "feh", "vmic").index(name)
+        theta[place] = value
+    state, failure = _evaluate(problem, theta, allowed, None)
+    nowhere = np.zeros(4, dtype=bool)
+    if state is None:
+        return Minimum(theta, None, np.inf, False, nowhere, 0, failure)
+    free, damping, converged = problem.free, 0.0, False
+    iteration, at_bound = 0, nowhere
+    for iteration in range(1, problem.options.max_iterations + 1):
+        z, jacobian = whitened_system(problem, state)
+        scaled = jacobian * STEP_UNIT
+        gradient = scaled.T @ z
+        at_bound = np.zeros(4, dtype=bool)
+        at_bound[free] = ((theta <= low) & (gradient > 0.0))[free] | ((theta >= high) & (gradient < 0.0))[free]
+        moving = free[~at_bound[free]]
+        if moving.size == 0:
+            converged = True
+            break
+        accepted = False
+        for _ in range(MAX_HALVINGS):
+            step = _step(scaled[:, moving], z, damping)
+            size = float(np.max(np.abs(step)))
+            step *= min(1.0, MAX_STEP / size) if size > 0.0 else 1.0
+            trial = theta.copy()
+            trial[moving] = np.clip(theta[moving] + step * STEP_UNIT[moving], low[moving], high[moving])
+            new_state, failure = _evaluate(problem, trial, allowed, state)
+            if new_state is not None and _not_worse(problem, state, new_state):
+                accepted = True
+                break
+            damping = max(10.0 * damping, LEVENBERG_START)
+        moved = float(np.max(np.abs(trial - theta) / STEP_UNIT))
+        if not accepted:
+            converged = moved < STALLED_STEP
+            break
+        theta, state = trial, new_state
+        damping = 0.0 if damping <= LEVENBERG_START else 0.1 * damping
+        if moved < STEP_TOLERANCE:
+            converged = True
+            break
+    z, _ = whitened_system(problem, state)
+    objective = float(z @ z)
+    on_face = (theta <= low + ON_FACE * STEP_UNIT) | (theta >= high - ON_FACE * STEP_UNIT)
+    stopped = np.zeros(4, dtype=bool)
+    # A root that happens to lie on a face is not stopped by it. At vmic = 0 the widths are even in vmic: every slope vanishes.
+    stopped[free] = on_face[free] & (objective > ROOT_OBJECTIVE)
+    return Minimum(theta, state, objective, converged, stopped, iteration)
+
+
+def _step(jacobian: np.ndarray, z: np.ndarray, damping: float) -> np.ndarray:
+    """Levenberg-Marquardt step; the damping is relative to the largest curvature."""
+    normal = jacobian.T @ jacobian
+    scale = float(np.trace(normal)) / max(normal.shape[0], 1)
+    normal = normal + (damping + RANK_TOLERANCE * RANK_TOLERANCE) * scale * np.eye(normal.shape[0])
+    if damping == 0.0:
+        return -np.linalg.lstsq(jacobian, z, rcond=RANK_TOLERANCE)[0]
+    return -np.linalg.solve(normal, jacobian.T @ z)
+
+
+def _not_worse(problem: Problem, old: BalanceState, new: BalanceState) -> bool:
+    """Compare both states in the metric of the old one, so that a growing covariance is no progress."""
+    rows = np.flatnonzero(problem.active & np.isfinite(old.residuals))
+    if not np.isfinite(new.residuals[rows]).all():
+        return False
+    metric = np.linalg.inv(old.covariance[np.ix_(rows, rows)])
+    before, after = old.residuals[rows], new.residuals[rows]
+    outside_before, _ = problem.outside_terms(old.theta)
+    outside_after, _ = problem.outside_terms(new.theta)
+    value_before = float(before @ metric @ before + outside_before @ outside_before)
+    value_after = float(after @ metric @ after + outside_after @ outside_after)
+    # Lines may leave the table on the way; the small allowance keeps rounding from stopping a converged point.
+    return value_after <= value_before * (1.0 + 1e-6) + 1e-9
+
+
+def _evaluate(problem: Problem, theta: np.ndarray, allowed, previous) -> tuple[BalanceState | None, str]:
+    try:
+        state = problem.balance(theta, allowed, previous)
+    except OutOfGridError as error:
+        return None, str(error)
+    if not state.used.any():
+        return None, "no line has an abundance here (beside missing nodes, or outside the tables)"
+    return state, ""

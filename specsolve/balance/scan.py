@@ -1,0 +1,248 @@
+"""Coarse look at the whole grid: residual vectors at every node, and the starting points that they suggest.
+
+At the nodes nothing is interpolated but the curve of growth (straight lines along dA); lines whose abundance leaves the table are
+continued with the last slope. This is only for starting points: a candidate never rests on a continued abundance.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from itertools import product
+
+import numpy as np
+
+from specsolve.constants import SOLAR_IRON
+from specsolve.grid.codes import MISSING, STEP, encode
+
+from .problem import GRID_AXES, Problem
+from .residuals import balance_operator, residual_covariance
+from .solution import PARAMETER_NAMES
+from .strength import line_variances
+
+SCAN_SCATTER_DEX = 0.08  # line-to-line term of the scan's weights; only scales chi2 there
+SCAN_D_WIDTH = 1.5  # dA/dlogW of the scan's weights: between a weak (1) and a saturated line (about 3)
+MIN_SLOPE = 0.08  # least dlogW/dA with which a curve is continued beyond its table
+CURVATURE_MARGIN = 0.25  # share of a residual's range over a cell by which it may miss zero at the corners
+LANDING_MARGIN = 1.0  # in cells: how far outside a cell the linear prediction may land
+MERGE_CELLS = 0.5  # predictions closer than this in every axis are one starting point
+
+
+@dataclass(frozen=True, eq=False)
+class Scan:
+    """Residuals at the nodes.
+
+    Attributes
+    ----------
+    positions : tuple of ndarray
+        Node values of each axis, a fixed axis holding the fixed value alone.
+    residuals : ndarray, shape (n_teff, n_logg, n_mh, n_vmic, 4)
+        nan at missing nodes.
+    metric : ndarray, shape (n_active, n_active)
+        C^-1 of the active residuals.
+    active : ndarray of int
+        Residuals that take part.
+    """
+
+    positions: tuple[np.ndarray, ...]
+    residuals: np.ndarray
+    metric: np.ndarray
+    active: np.ndarray
+
+    @property
+    def n_nodes(self) -> int:
+        """Nodes looked at."""
+        return int(np.isfinite(self.residuals[..., self.active]).all(axis=-1).sum())
+
+
+@dataclass(frozen=True, eq=False)
+class Seed:
+    """A starting point: theta, the chi2 that the scan expects there, and how many cells or nodes proposed it."""
+
+    theta: np.ndarray
+    chi2: float
+    count: int
+
+
+def node_relative_abundances(problem: Problem, allowed: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """A_i - zero point at every node with widths.
+
+    Returns
+    -------
+    nodes : ndarray of int, shape (n_nodes, 3)
+    relative : ndarray, shape (n_nodes, n_vmic, n_allowed)
+        [dex].
+    """
+    grid, inputs = problem.grid, problem.inputs
+    nodes = _nodes_needed(problem)
+    chosen = np.flatnonzero(allowed)
+    codes = grid.gather(problem.treatment, tuple(nodes.T), problem.line_indices[chosen])
+    target = encode(inputs.log_reduced_width[chosen]).astype(np.int32)
+    spacing = np.asarray(grid.axes["dA"], float)
+    offsets = _invert_linear(codes, target, spacing)
+    mh = np.asarray(grid.axes["mh"], float)[nodes[:, 2]]
+    relative = offsets + (SOLAR_IRON - inputs.zero_point[chosen] - problem.log_gf_shift[chosen])[None, :, None]
+    return nodes, np.swapaxes(relative + mh[:, None, None], 1, 2)
+
+
+def _nodes_needed(problem: Problem) -> np.ndarray:
+    """Valid nodes; along a fixed axis only those around the fixed value."""
+    grid = problem.grid
+    valid = np.array(grid.node_valid(problem.treatment))
+    for axis, name in enumerate(PARAMETER_NAMES[:3]):
+        if name in problem.fixed:
+            x = np.asarray(grid.axes[GRID_AXES[axis]], float)
+            keep = np.zeros(x.size, dtype=bool)
+            keep[list(_around(x, problem.fixed[name])[0])] = True
+            shape = [1, 1, 1]
+            shape[axis] = -1
+            valid &= keep.reshape(shape)
+    return np.argwhere(valid)
+
+
+def _around(x: np.ndarray, value: float) -> tuple[tuple[int, ...], tuple[float, ...]]:
+    """Indices of the nodes around a value and their linear weights."""
+    if x.size == 1:
+        return (0,), (1.0,)
+    lower = int(np.clip(np.searchsorted(x, value, side="right") - 1, 0, x.size - 2))
+    share = float((value - x[lower]) / (x[lower + 1] - x[lower]))
+    if share == 0.0:
+        return (lower,), (1.0,)
+    if share == 1.0:
+        return (lower + 1,), (1.0,)
+    return (lower, lower + 1), (1.0 - share, share)
+
+
+def _invert_linear(codes: np.ndarray, target: np.ndarray, spacing: np.ndarray) -> np.ndarray:
+    """Offset dA at which straight lines between nodes reach the width; continued beyond both ends.
+
+    codes (n_nodes, n_lines, n_vmic, n_dA), target (n_lines,) in code units; result (n_nodes, n_lines, n_vmic); nan where missing.
+    """
+    below = (codes <= target[None, :, None, None]).sum(axis=-1)
+    upper = np.clip(below, 1, codes.shape[-1] - 1)
+    first = np.take_along_axis(codes, (upper - 1)[..., None], axis=-1)[..., 0].astype(float)
+    second = np.take_along_axis(codes, upper[..., None], axis=-1)[..., 0].astype(float)
+    step = spacing[upper] - spacing[upper - 1]
+    slope = np.maximum((second - first) / step, MIN_SLOPE / STEP)
+    offset = spacing[upper - 1] + (target[None, :, None] - first) / slope
+    return np.where((first == MISSING) | (second == MISSING), np.nan, offset)
+
+
+def scan_nodes(problem: Problem, allowed: np.ndarray) -> Scan:
+    """Residual vectors at all nodes, with fixed weights and the measured width as strength axis."""
+    inputs, grid = problem.inputs, problem.grid
+    nodes, relative = node_relative_abundances(problem, allowed)
+    chosen = np.flatnonzero(allowed)
+    ones = np.ones(chosen.size)
+    variances = line_variances(
+        SCAN_D_WIDTH * ones, inputs.sigma_logw[chosen], inputs.sigma_gf[chosen], SCAN_SCATTER_DEX * ones
+    ).total
+    operator = balance_operator(
+        inputs.is_fe2[chosen],
+        inputs.excitation_potential[chosen],
+        inputs.log_reduced_width[chosen],
+        1.0 / variances,
+        metallicity_from_fe1="logg" in problem.fixed,
+    )
+    active = np.flatnonzero(problem.active & np.isfinite(operator).all(axis=1))
+    vmic = np.asarray(grid.axes["vmic"], float)
+    full = np.full((*np.array(grid.node_valid(problem.treatment)).shape, vmic.size, 4), np.nan)
+    values = np.einsum("nvl,rl->nvr", relative, operator)
+    mh = np.asarray(grid.axes["mh"], float)[nodes[:, 2]]
+    values[..., 2] -= mh[:, None]
+    full[tuple(nodes.T)] = values
+    positions = [np.asarray(grid.axes[name], float) for name in GRID_AXES]
+    for axis, name in enumerate(PARAMETER_NAMES):
+        if name in problem.fixed:
+            indices, shares = _around(positions[axis], problem.fixed[name])
+            full = sum(
+                share * np.take(full, [index], axis=axis) for index, share in zip(indices, shares, strict=True)
+            )
+            positions[axis] = np.array([problem.fixed[name]])
+    covariance = residual_covariance(operator, variances)[np.ix_(active, active)]
+    return Scan(tuple(positions), full, np.linalg.inv(covariance), active)
+
+
+def seeds_from_scan(problem: Problem, scan: Scan) -> list[Seed]:
+    """Starting points: cells in which all residuals can vanish, and local minima of chi2 over the nodes; best first."""
+    seeds = _cells_with_roots(scan) + _lattice_minima(problem, scan)
+    step = np.array([np.median(np.diff(x)) if x.size > 1 else 1.0 for x in scan.positions])
+    merged: list[Seed] = []
+    for seed in sorted(seeds, key=lambda s: (s.chi2, *s.theta.tolist())):
+        for i, other in enumerate(merged):
+            if np.all(np.abs(seed.theta - other.theta) < MERGE_CELLS * step):
+                merged[i] = Seed(other.theta, other.chi2, other.count + seed.count)
+                break
+        else:
+            merged.append(seed)
+    return merged
+
+
+def _cells_with_roots(scan: Scan) -> list[Seed]:
+    values = scan.residuals[..., scan.active]
+    axes = [axis for axis in range(4) if values.shape[axis] > 1]
+    if len(scan.active) != len(axes) or not axes:
+        return []
+    low, high = values, values
+    for axis in axes:
+        first, last = _halves(axis)
+        low = np.fmin(low[first], low[last])
+        high = np.fmax(high[first], high[last])
+    margin = CURVATURE_MARGIN * (high - low)
+    possible = ((low - margin <= 0.0) & (high + margin >= 0.0)).all(axis=-1)
+    seeds = []
+    for cell in np.argwhere(possible):
+        theta, miss = _linear_root(scan, values, cell, axes)
+        if theta is not None:
+            seeds.append(Seed(theta, miss, 1))
+    return seeds
+
+
+def _halves(axis: int) -> tuple[tuple, tuple]:
+    first, last = [slice(None)] * 5, [slice(None)] * 5
+    first[axis], last[axis] = slice(None, -1), slice(1, None)
+    return tuple(first), tuple(last)
+
+
+def _linear_root(scan: Scan, values: np.ndarray, cell: np.ndarray, axes: list[int]) -> tuple[np.ndarray | None, float]:
+    """Root of the linear fit through a cell's corners; (None, .) if it lands too far away."""
+    corners, rows = [], []
+    for corner in product((0, 1), repeat=len(axes)):
+        index = cell.copy()
+        index[axes] += corner
+        value = values[tuple(index)]
+        if np.isfinite(value).all():
+            corners.append(corner)
+            rows.append(value)
+    if len(rows) <= len(axes):
+        return None, np.inf
+    design = np.column_stack([np.ones(len(rows)), np.array(corners, float) - 0.5])
+    fit, *_ = np.linalg.lstsq(design, np.array(rows), rcond=None)
+    step, *_ = np.linalg.lstsq(fit[1:].T, -fit[0], rcond=1e-8)
+    if np.max(np.abs(step)) > 0.5 + LANDING_MARGIN:
+        return None, np.inf
+    theta = np.array([x[i] for x, i in zip(scan.positions, cell, strict=True)])
+    for axis, move in zip(axes, np.clip(step, -0.5, 0.5), strict=True):
+        x = scan.positions[axis]
+        theta[axis] = x[cell[axis]] + (0.5 + move) * (x[cell[axis] + 1] - x[cell[axis]])
+    miss = fit[0] + np.clip(step, -0.5, 0.5) @ fit[1:]
+    return theta, float(miss @ scan.metric @ miss)
+
+
+def _lattice_minima(problem: Problem, scan: Scan) -> list[Seed]:
+    values = scan.residuals[..., scan.active]
+    chi2 = np.einsum("...i,ij,...j->...", values, scan.metric, values)
+    points = np.stack(np.meshgrid(*scan.positions, indexing="ij"), -1)
+    if problem.outside:
+        for index in np.ndindex(chi2.shape):
+            terms, _ = problem.outside_terms(points[index])
+            chi2[index] += terms @ terms
+    filled = np.where(np.isfinite(chi2), chi2, np.inf)
+    padded = np.pad(filled, 1, constant_values=np.inf)
+    least = np.ones(chi2.shape, dtype=bool)
+    for shift in product((0, 1, 2), repeat=4):
+        if shift == (1, 1, 1, 1):
+            continue
+        window = padded[tuple(slice(s, s + n) for s, n in zip(shift, chi2.shape, strict=True))]
+        least &= filled <= window
+    least &= np.isfinite(filled)
+    return [Seed(points[tuple(index)].astype(float), float(filled[tuple(index)]), 1) for index in np.argwhere(least)]

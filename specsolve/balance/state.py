@@ -1,0 +1,260 @@
+"""The balance at one point: line abundances turned into residuals with weights that have settled.
+
+At a given theta the robust weights w, the line-to-line term s and the strength axis x depend on each other; they are iterated to a
+fixed point here, which needs no further look at the grid. NumPy reference; `kernel.py` holds the compiled twin.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from .residuals import balance_operator, deviations, residual_covariance, residual_vector
+from .robust import HUBER_K, line_to_line_terms, robust_weights
+from .strength import LineVariances, line_variances, strength_axis
+
+MAX_PASSES = 100
+WEIGHT_TOLERANCE = 1e-9
+SCATTER_TOLERANCE = 1e-10  # dex
+
+
+@dataclass(frozen=True, eq=False)
+class LineInputs:
+    """Constant per-line inputs of the balance, each of shape (n_lines,).
+
+    Attributes
+    ----------
+    is_fe2 : ndarray of bool
+    excitation_potential : ndarray
+        [eV].
+    log_reduced_width, sigma_logw : ndarray
+        log10(W/lambda) and its error [dex].
+    sigma_gf : ndarray
+        [dex]; nan = unknown; zero in differential work.
+    zero_point : ndarray
+        [dex].
+    zero_point_covariance : ndarray, shape (n_lines, n_lines), or None
+        [dex^2].
+    differential : bool
+    """
+
+    is_fe2: np.ndarray
+    excitation_potential: np.ndarray
+    log_reduced_width: np.ndarray
+    sigma_logw: np.ndarray
+    sigma_gf: np.ndarray
+    zero_point: np.ndarray
+    zero_point_covariance: np.ndarray | None
+    differential: bool
+
+    @property
+    def zero_point_variance(self) -> np.ndarray:
+        """Diagonal of the zero points' covariance."""
+        if self.zero_point_covariance is None:
+            return np.zeros(self.zero_point.shape)
+        return np.diag(self.zero_point_covariance)
+
+
+@dataclass(frozen=True, eq=False)
+class Weighting:
+    """Weights that have settled at one point.
+
+    Attributes
+    ----------
+    robust : ndarray, shape (n_lines,)
+        1 = full weight; 0 = not used.
+    scatter : ndarray, shape (2,)
+        Line-to-line term of each ion [dex].
+    variances : LineVariances
+    strength : ndarray, shape (n_lines,)
+    deviation : ndarray, shape (n_lines,)
+    settled : bool
+    """
+
+    robust: np.ndarray
+    scatter: np.ndarray
+    variances: LineVariances
+    strength: np.ndarray
+    deviation: np.ndarray
+    settled: bool
+
+    @property
+    def weights(self) -> np.ndarray:
+        """robust / v_i, shape (n_lines,) [dex^-2]."""
+        return self.robust / self.variances.total
+
+
+@dataclass(frozen=True, eq=False)
+class BalanceState:
+    """Everything about the balance at one theta.
+
+    Attributes
+    ----------
+    theta : ndarray, shape (4,)
+        teff, logg, mh, vmic.
+    abundance, relative_abundance, d_width : ndarray, shape (n_lines,)
+        A_i, A_i - zero point, dA/dlog10 W.
+    d_theta : ndarray, shape (n_lines, 4)
+    predicted : ndarray, shape (n_lines,)
+        Predicted log10(W/lambda).
+    flags : ndarray of uint8, shape (n_lines,)
+        Of the interpolation.
+    used : ndarray of bool, shape (n_lines,)
+        Lines with an abundance here that were not dropped before.
+    weighting : Weighting
+    operator : ndarray, shape (4, n_lines)
+        G with the weights frozen.
+    response : ndarray, shape (4, n_lines)
+        dr/dA with the weights free to follow (Huber: the lines in the core); equals `operator` without a robust loss.
+    residuals : ndarray, shape (4,)
+    covariance_star, covariance_list : ndarray, shape (4, 4)
+        Of the residuals.
+    """
+
+    theta: np.ndarray
+    abundance: np.ndarray
+    relative_abundance: np.ndarray
+    d_theta: np.ndarray
+    d_width: np.ndarray
+    predicted: np.ndarray
+    flags: np.ndarray
+    used: np.ndarray
+    weighting: Weighting
+    operator: np.ndarray
+    response: np.ndarray
+    residuals: np.ndarray
+    covariance_star: np.ndarray
+    covariance_list: np.ndarray
+
+    @property
+    def covariance(self) -> np.ndarray:
+        """C = G V G^T."""
+        return self.covariance_star + self.covariance_list
+
+    @property
+    def jacobian(self) -> np.ndarray:
+        """dr/dtheta, shape (4, 4)."""
+        return residual_jacobian(self.response, self.d_theta)
+
+
+def residual_jacobian(response: np.ndarray, d_theta: np.ndarray) -> np.ndarray:
+    """dr/dtheta = (dr/dA)(dA/dtheta), minus one for the metallicity of the atmosphere."""
+    jacobian = response @ np.where(np.isfinite(d_theta), d_theta, 0.0)
+    jacobian[2, 2] -= 1.0
+    return jacobian
+
+
+def settle(
+    inputs: LineInputs,
+    relative_abundance: np.ndarray,
+    d_width: np.ndarray,
+    predicted: np.ndarray,
+    used: np.ndarray,
+    loss: str,
+    robust: np.ndarray | None = None,
+) -> Weighting:
+    """Iterate weights, line-to-line term and strength axis to their common fixed point.
+
+    Parameters
+    ----------
+    inputs : LineInputs
+    relative_abundance, d_width, predicted : ndarray, shape (n_lines,)
+        At one theta; nan allowed where `used` is false.
+    used : ndarray of bool, shape (n_lines,)
+    loss : str
+        See `robust_weights`.
+    robust : ndarray, shape (n_lines,), optional
+        Weights to start from.
+    """
+    y = np.where(used, relative_abundance, 0.0)
+    slope = np.where(used, d_width, 1.0)
+    x_predicted = np.where(used & np.isfinite(predicted), predicted, inputs.log_reduced_width)
+    sigma_gf, extra = inputs.sigma_gf, inputs.zero_point_variance
+    weights = used.astype(float) if robust is None else np.where(used & (robust > 0.0), robust, used.astype(float))
+    scatter = np.zeros(2)
+    settled = False
+    for _ in range(MAX_PASSES):
+        variances = line_variances(slope, inputs.sigma_logw, sigma_gf, scatter[inputs.is_fe2.astype(int)])
+        if extra.any():
+            variances = LineVariances(width=variances.width, gf=variances.gf + extra, scatter=variances.scatter)
+        strength = strength_axis(inputs.log_reduced_width, x_predicted, variances, sigma_gf, inputs.differential)
+        total = variances.total
+        deviation = deviations(inputs.is_fe2, inputs.excitation_potential, strength, weights / total, y)
+        new_scatter = line_to_line_terms(inputs.is_fe2, deviation, variances.width + variances.gf, used)
+        total = variances.width + variances.gf + new_scatter[inputs.is_fe2.astype(int)] ** 2
+        new_weights = np.where(used, robust_weights(deviation / np.sqrt(total), loss), 0.0)
+        change = float(np.max(np.abs(new_weights - weights), initial=0.0))
+        change_scatter = float(np.max(np.abs(new_scatter - scatter)))
+        weights, scatter = new_weights, new_scatter
+        if change < WEIGHT_TOLERANCE and change_scatter < SCATTER_TOLERANCE:
+            settled = True
+            break
+    variances = LineVariances(width=variances.width, gf=variances.gf, scatter=scatter[inputs.is_fe2.astype(int)] ** 2)
+    return Weighting(
+        robust=weights,
+        scatter=scatter,
+        variances=variances,
+        strength=strength,
+        deviation=np.where(used, deviation, np.nan),
+        settled=settled,
+    )
+
+
+def response_weights(weighting: Weighting, used: np.ndarray, loss: str) -> np.ndarray:
+    """Weights psi'(z)/v whose plane operator is dr/dA of the robust fit; falls back on the frozen ones."""
+    if loss == "none":
+        return weighting.weights
+    z = np.where(used, weighting.deviation, 0.0) / np.sqrt(weighting.variances.total)
+    if loss == "huber":
+        slope = (np.abs(z) <= HUBER_K).astype(float)
+    else:
+        # psi' of the Student t loss can be negative far out; zero keeps the operator that of a weighted plane.
+        w = robust_weights(z, loss)
+        slope = np.maximum(w * (1.0 - 2.0 * z**2 * w / 5.0), 0.0)
+    return np.where(used, slope, 0.0) / weighting.variances.total
+
+
+def balance_state(
+    inputs: LineInputs,
+    theta: np.ndarray,
+    abundance: np.ndarray,
+    d_theta: np.ndarray,
+    d_width: np.ndarray,
+    predicted: np.ndarray,
+    flags: np.ndarray,
+    allowed: np.ndarray,
+    loss: str,
+    metallicity_from_fe1: bool,
+    robust: np.ndarray | None = None,
+) -> BalanceState:
+    """Residuals, operators and covariances at one theta from the line abundances there."""
+    used = allowed & np.isfinite(abundance) & np.isfinite(d_width) & np.isfinite(inputs.zero_point)
+    y = abundance - inputs.zero_point
+    weighting = settle(inputs, y, d_width, predicted, used, loss, robust)
+    shape = (inputs.is_fe2, inputs.excitation_potential, weighting.strength)
+    operator = balance_operator(*shape, weighting.weights, metallicity_from_fe1)
+    response = balance_operator(*shape, response_weights(weighting, used, loss), metallicity_from_fe1)
+    response = np.where(np.isfinite(response), response, operator)
+    star = residual_covariance(operator, weighting.variances.star)
+    # With a covariance of the zero points its diagonal sits in variances.gf already; the full matrix replaces it.
+    gf = weighting.variances.gf - inputs.zero_point_variance
+    shared = residual_covariance(operator, gf)
+    if inputs.zero_point_covariance is not None:
+        shared = shared + residual_covariance(operator, inputs.zero_point_covariance)
+    return BalanceState(
+        theta=np.asarray(theta, float),
+        abundance=abundance,
+        relative_abundance=y,
+        d_theta=d_theta,
+        d_width=d_width,
+        predicted=predicted,
+        flags=flags,
+        used=used,
+        weighting=weighting,
+        operator=operator,
+        response=response,
+        residuals=residual_vector(operator, np.where(used, y, 0.0), float(theta[2])),
+        covariance_star=star,
+        covariance_list=shared,
+    )

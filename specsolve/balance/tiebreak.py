@@ -1,0 +1,223 @@
+"""Which candidate is reported, by a rule in four steps, each recorded.
+
+1. Candidates outside the grid, not converged, or beside missing nodes are set aside (kept, flagged). Outside knowledge is in already.
+2. Near-equal means 2 (ln L_best - ln L) < 6, odds of 20 : 1. If none is near the best, the best is it.
+3. Else a published vmic(teff, logg) relation enters as a Gaussian; it decides only beyond the same 6, and is skipped if any of the
+   candidates lies outside its range.
+4. Else the star is tied: all near-equal candidates with odds proportional to L x prior x sqrt|Cov|.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from .minima import FoundMinimum, Search
+from .problem import Problem
+from .relations import minus_two_log_prior, vmic_relation
+from .solution import SOLVED, TIED, Candidate, Decision
+from .uncertainty import parameter_covariances
+
+SETTING_ASIDE = (
+    ("outside_grid", "the minimum lies at the edge of the grid"),
+    ("not_converged", "the refinement did not converge"),
+    ("beside_missing_node", "beside a missing node of the grid"),
+)
+
+
+@dataclass(frozen=True, eq=False)
+class Ranking:
+    """Candidates in their order of report, with what was decided.
+
+    Attributes
+    ----------
+    found : tuple of FoundMinimum
+        In the order of `candidates`.
+    candidates : tuple of Candidate
+    decisions : tuple of Decision
+    status : str
+        "solved" or "tied".
+    decided_by_relation : bool
+    """
+
+    found: tuple[FoundMinimum, ...]
+    candidates: tuple[Candidate, ...]
+    decisions: tuple[Decision, ...]
+    status: str
+    decided_by_relation: bool
+
+
+def set_aside_reason(flags: tuple[str, ...]) -> str:
+    """Why step 1 sets a candidate aside; empty if it does not."""
+    return next((text for flag, text in SETTING_ASIDE if flag in flags), "")
+
+
+def rank(problem: Problem, search: Search) -> Ranking:
+    """Apply the rule. `search.found` must not be empty."""
+    found = search.found
+    common = search.preliminary.copy()
+    considered = [item for item in found if not set_aside_reason(item.flags)] or list(found)
+    for item in considered:
+        common &= np.isfinite(item.minimum.state.abundance)
+    rows = [_candidate(problem, item, common) for item in found]
+    order = sorted(
+        range(len(found)),
+        key=lambda i: (bool(rows[i].set_aside), -_posterior(problem, rows[i]), *rows[i].parameters.tolist()),
+    )
+    found = tuple(found[i] for i in order)
+    rows = [rows[i] for i in order]
+    log: list[tuple] = [
+        (
+            "search",
+            "grid",
+            float(search.n_refined),
+            float(problem.options.max_seeds),
+            f"{len(found)} found",
+            f"{search.n_nodes} nodes scanned, {search.n_seeds} starting points, {search.n_refined} refined"
+            + ("; more starting points than the limit" if search.n_seeds > search.n_refined else ""),
+        )
+    ]
+    for i, row in enumerate(rows):
+        if row.set_aside:
+            log.append(("set_aside", _name(i), row.chi2, float("nan"), "set aside", row.set_aside))
+    eligible = [i for i, row in enumerate(rows) if not row.set_aside]
+    status, by_relation, chosen = SOLVED, False, 0
+    odds = {0: 1.0}
+    if not eligible:
+        log.append(("choose", _name(0), rows[0].chi2, float("nan"), "reported", "every candidate is set aside; the best of them"))
+    else:
+        deltas = {i: 2.0 * (_posterior(problem, rows[0]) - _posterior(problem, rows[i])) for i in eligible}
+        near = [i for i in eligible if deltas[i] < problem.options.near_equal]
+        for i in eligible[1:]:
+            word = "near-equal" if i in near else "rejected"
+            log.append(
+                ("likelihood", _name(i), deltas[i], problem.options.near_equal, word, "2 (ln L_best - ln L) on common lines")
+            )
+        odds = _odds(problem, rows, near)
+        if len(near) == 1:
+            log.append(("choose", _name(0), 0.0, problem.options.near_equal, "chosen", "no other candidate is near the best"))
+        else:
+            chosen, by_relation, entry = _relation_step(problem, rows, near)
+            log.append(entry)
+            if chosen < 0:
+                status, chosen = TIED, 0
+                log.append(
+                    ("tied", "star", float(len(near)), 1.0, "tied", "the rule cannot separate the near-equal candidates")
+                )
+    best = rows[chosen]
+    candidates = [
+        replace(
+            row,
+            delta=2.0 * (_posterior(problem, best) - _posterior(problem, row)) if not row.set_aside else float("nan"),
+            odds=odds.get(i, float("nan")),
+        )
+        for i, row in enumerate(rows)
+    ]
+    if chosen:
+        move = [chosen] + [i for i in range(len(rows)) if i != chosen]
+        candidates, found = [candidates[i] for i in move], tuple(found[i] for i in move)
+        names = {_name(old): _name(new) for new, old in enumerate(move)}
+        log = [(kind, names.get(subject, subject), *rest) for kind, subject, *rest in log]
+    candidates = [replace(row, index=i) for i, row in enumerate(candidates)]
+    decisions = tuple(
+        Decision(step=step, kind=kind, subject=subject, value=value, threshold=threshold, outcome=outcome, reason=reason)
+        for step, (kind, subject, value, threshold, outcome, reason) in enumerate(log, start=1)
+    )
+    return Ranking(found, tuple(candidates), decisions, status, by_relation)
+
+
+def _name(index: int) -> str:
+    return f"candidate {index}"
+
+
+def _posterior(problem: Problem, row: Candidate) -> float:
+    terms, _ = problem.outside_terms(row.parameters)
+    return row.log_likelihood - 0.5 * float(terms @ terms)
+
+
+def _candidate(problem: Problem, item: FoundMinimum, common: np.ndarray) -> Candidate:
+    minimum = item.minimum
+    star, shared = parameter_covariances(problem, minimum.state)
+    likelihood = problem.log_likelihood(minimum.theta, common)
+    return Candidate(
+        index=0,
+        parameters=minimum.theta,
+        covariance=star + shared,
+        residuals=minimum.state.residuals,
+        chi2=minimum.objective,
+        log_likelihood=likelihood if np.isfinite(likelihood) else float("-inf"),
+        delta=float("nan"),
+        odds=float("nan"),
+        n_lines=int(minimum.state.used.sum()),
+        n_seeds=item.seeds,
+        flags=item.flags,
+        set_aside=set_aside_reason(item.flags),
+        iterations=minimum.iterations,
+    )
+
+
+def _log_mass(problem: Problem, row: Candidate, with_relation: bool) -> float:
+    value = _posterior(problem, row)
+    block = row.covariance[np.ix_(problem.free, problem.free)]
+    sign, log_determinant = np.linalg.slogdet(block) if problem.free.size else (1.0, 0.0)
+    if sign > 0.0 and np.isfinite(log_determinant):
+        value += 0.5 * log_determinant
+    if with_relation:
+        relation = vmic_relation(row.parameters[0], row.parameters[1])
+        value -= 0.5 * minus_two_log_prior(row.parameters[3], _vmic_variance(row), relation)
+    return value
+
+
+def _vmic_variance(row: Candidate) -> float:
+    variance = float(row.covariance[3, 3])
+    return variance if np.isfinite(variance) else 0.0
+
+
+def _relation_applies(problem: Problem, rows: list[Candidate], near: list[int]) -> bool:
+    return (
+        problem.options.vmic_relation
+        and "vmic" not in problem.fixed
+        and all(vmic_relation(rows[i].parameters[0], rows[i].parameters[1]) is not None for i in near)
+    )
+
+
+def _odds(problem: Problem, rows: list[Candidate], near: list[int]) -> dict[int, float]:
+    with_relation = len(near) > 1 and _relation_applies(problem, rows, near)
+    masses = np.array([_log_mass(problem, rows[i], with_relation) for i in near])
+    shares = np.exp(masses - masses.max())
+    return dict(zip(near, (shares / shares.sum()).tolist(), strict=True))
+
+
+def _relation_step(problem: Problem, rows: list[Candidate], near: list[int]) -> tuple[int, bool, tuple]:
+    limit = problem.options.near_equal
+    if not _relation_applies(problem, rows, near):
+        return -1, False, (
+            "vmic_relation",
+            "star",
+            float("nan"),
+            limit,
+            "skipped",
+            "switched off, vmic fixed, or a near-equal candidate lies outside the range of the relation",
+        )
+    scores, sources = {}, set()
+    for i in near:
+        relation = vmic_relation(rows[i].parameters[0], rows[i].parameters[1])
+        prior = minus_two_log_prior(rows[i].parameters[3], _vmic_variance(rows[i]), relation)
+        scores[i] = -2.0 * _posterior(problem, rows[i]) + prior
+        sources.add(relation.source)
+    first, second = sorted(near, key=lambda i: scores[i])[:2]
+    gap = scores[second] - scores[first]
+    decided = gap >= limit
+    return (
+        first if decided else -1,
+        decided,
+        (
+            "vmic_relation",
+            _name(first) if decided else "star",
+            gap,
+            limit,
+            "chosen" if decided else "undecided",
+            "published vmic relation: " + "; ".join(sorted(sources)),
+        ),
+    )
