@@ -1,7 +1,7 @@
 """Solutions as tables: written by the schema, read back by the schema.
 
-One solve writes ``X.ecsv`` (star x treatment), ``X_lines.ecsv``, ``X_candidates.ecsv`` and ``X_decisions.ecsv``.  ECSV is
-the master copy; every file carries the schema number, the kind of table and the provenance in its metadata.
+One solve writes ``X.ecsv`` (star x treatment), ``X_lines.ecsv``, ``X_candidates.ecsv`` and ``X_decisions.ecsv``.
+ECSV is the master copy; every file carries the schema number, the kind of table and the provenance in its metadata.
 """
 
 from __future__ import annotations

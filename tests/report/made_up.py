@@ -164,7 +164,7 @@ def made_up_solution(rng: np.random.Generator, star: str = "made-up", status: st
                 n_lines=39,
             ),
         ),
-        candidates=(candidate(0, parameters, 0.0), candidate(1, parameters + [-700, -1.5, -0.6, 0.8], 44.0)),
+        candidates=(candidate(0, parameters, 0.0), candidate(1, parameters + np.array([-700, -1.5, -0.6, 0.8]), 44.0)),
         decisions=(
             Decision(
                 step=1,
