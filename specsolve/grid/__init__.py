@@ -1,4 +1,4 @@
-"""Response grids: equivalent widths over stellar parameters, one line list at a time; their store, making and interpolation."""
+"""Response grids: equivalent widths of one line list over stellar parameters; store, making, interpolation."""
 
 from specsolve.grid.interpolate import (
     AT_EDGE,

@@ -1,7 +1,7 @@
 """Line abundances, curves of growth and widths between the nodes of a grid.
 
-Along every axis (teff, logg, mh, vmic, dA) the interpolant of log10(W/lambda) is a piecewise cubic with continuous first
-derivatives (`specsolve.grid.stencil`). The block of nodes of a cell is gathered once and reused while theta stays in it.
+Along every axis (teff, logg, mh, vmic, dA) the interpolant of log10(W/lambda) is a piecewise cubic with continuous
+first derivatives (`specsolve.grid.stencil`). The nodes of a cell are gathered once and reused while theta stays in it.
 """
 
 from __future__ import annotations
@@ -81,7 +81,7 @@ class Interpolator:
         self.line_indices = (
             np.arange(len(grid.lines)) if line_indices is None else np.atleast_1d(np.asarray(line_indices, int))
         )
-        if self.line_indices.size and not (0 <= self.line_indices.min() and self.line_indices.max() < len(grid.lines)):
+        if np.any((self.line_indices < 0) | (self.line_indices >= len(grid.lines))):
             raise InputError(f"line indices must lie in 0 .. {len(grid.lines) - 1}")
         self.node_positions = tuple(axis.values for axis in grid.node_axes)
         self.vmic, self.dA = (axis.values for axis in grid.line_axes)
@@ -93,6 +93,7 @@ class Interpolator:
         self._cell: tuple[int, ...] | None = None
         self._numbers: np.ndarray | None = None
         self._cell_flags = 0
+        self._cell_low = self._cell_width = np.empty(0)
         self._kernels = None
         if compiled:
             from specsolve.grid import kernels
@@ -125,9 +126,8 @@ class Interpolator:
                 abundance=blank, d_theta=np.full((n_lines, len(self.names)), np.nan), d_width=blank.copy(), flags=flags
             )
         if self._kernels is not None:
-            value, slopes = self._basis(theta)
             dA, d_theta, d_width, flags = self._kernels.abundances(
-                self._numbers, value, slopes, *self._vmic_basis(theta), self.dA, self.dA_slopes, widths
+                self._numbers, *self._place(theta), self.dA, self.dA_slopes, widths
             )
         else:
             curves, d_curves = self._contract(theta)
@@ -228,6 +228,9 @@ class Interpolator:
             return self._numbers is not None
         node_cell, vmic_cell = cell[:-1], cell[-1]
         self._cell, self._numbers, self._cell_flags = cell, None, 0
+        positions = (*self.node_positions, self.vmic)
+        self._cell_low = np.array([x[c] for x, c in zip(positions, cell, strict=True)])
+        self._cell_width = np.array([x[min(c + 1, x.size - 1)] - x[c] for x, c in zip(positions, cell, strict=True)])
         vmic_edge = self.vmic.size > 1 and (vmic_cell == self.vmic.size - 2 or (vmic_cell == 0 and self.vmic[0] != 0.0))
         if self.stencils.at_edge(node_cell) or vmic_edge:
             self._cell_flags |= AT_EDGE
@@ -244,9 +247,7 @@ class Interpolator:
             )
         else:
             values = decode(self.grid.gather(self.treatment, tuple(nodes.T), self.line_indices))
-            numbers = (matrix @ values.reshape(len(nodes), -1)).reshape(len(matrix), *values.shape[1:])
-            # -> (node number, vmic number, line, dA)
-            self._numbers = np.ascontiguousarray(np.tensordot(numbers, vmic_map, axes=(2, 1)).transpose(0, 3, 1, 2))
+            self._numbers = apply_maps(matrix, vmic_map, values)
         return True
 
     def _vmic_map(self, cell: int) -> np.ndarray:
@@ -262,7 +263,7 @@ class Interpolator:
         return hermite_basis((value - x[cell]) / h, h)
 
     def _basis(self, theta) -> tuple[np.ndarray, np.ndarray]:
-        """Weights of the node numbers: of the value (n_numbers,), of the derivatives along the node axes (n, n_numbers)."""
+        """Weights of the node numbers: for the value (n_numbers,), for the derivatives (n_node_axes, n_numbers)."""
         pairs = [self._axis_basis(x, c, v) for x, c, v in zip(self.node_positions, self._cell, theta, strict=False)]
         products = []
         for derived in range(-1, len(pairs)):
@@ -275,11 +276,17 @@ class Interpolator:
     def _vmic_basis(self, theta) -> tuple[np.ndarray, np.ndarray]:
         return self._axis_basis(self.vmic, self._cell[-1], theta[-1])
 
+    def _place(self, theta) -> tuple[np.ndarray, np.ndarray]:
+        """Where theta lies in its cell, and the width of the cell (0 along an axis of one node), an entry an axis."""
+        return (np.asarray(theta, dtype=np.float64) - self._cell_low) / np.where(
+            self._cell_width > 0, self._cell_width, 1.0
+        ), self._cell_width
+
     def _contract(self, theta) -> tuple[np.ndarray, np.ndarray]:
+        if self._kernels is not None:
+            return self._kernels.curves(self._numbers, *self._place(theta))
         value, slopes = self._basis(theta)
         vmic_value, vmic_slope = self._vmic_basis(theta)
-        if self._kernels is not None:
-            return self._kernels.curves(self._numbers, value, slopes, vmic_value, vmic_slope)
         weights = np.concatenate(
             [
                 np.outer(value, vmic_value).reshape(1, -1),
@@ -290,3 +297,30 @@ class Interpolator:
         shape = self._numbers.shape
         curves = (weights @ self._numbers.reshape(shape[0] * shape[1], -1)).reshape(-1, *shape[2:])
         return curves[0], curves[1:]
+
+
+def apply_maps(matrix: np.ndarray, vmic_map: np.ndarray, values: np.ndarray) -> np.ndarray:
+    """Hermite numbers of a cell; a number is nan only if a value that it needs is.
+
+    Parameters
+    ----------
+    matrix : ndarray, shape (n_numbers, n_nodes)
+    vmic_map : ndarray, shape (n_vmic_numbers, n_vmic)
+    values : ndarray, shape (n_nodes, n_lines, n_vmic, n_dA)
+
+    Returns
+    -------
+    ndarray, shape (n_numbers, n_vmic_numbers, n_lines, n_dA)
+    """
+
+    def mapped(node_map, line_map, array):
+        at_vmic = np.tensordot(array, line_map, axes=(2, 1)).transpose(0, 3, 1, 2)  # (node, vmic number, line, dA)
+        return (node_map @ at_vmic.reshape(len(array), -1)).reshape(len(node_map), *at_vmic.shape[1:])
+
+    absent = np.isnan(values)
+    if not absent.any():
+        return mapped(matrix, vmic_map, values)
+    numbers = mapped(matrix, vmic_map, np.where(absent, 0.0, values))
+    touched = mapped((matrix != 0).astype(float), (vmic_map != 0).astype(float), absent.astype(float))
+    numbers[touched > 0] = np.nan
+    return numbers

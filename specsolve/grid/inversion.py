@@ -1,8 +1,8 @@
 """From a width to an abundance on curves of growth, and back: the cubic along the dA axis.
 
-A curve is given at the nodes of dA; between them it is the cubic through the node values and slopes, the slopes from at most
-five neighbouring nodes (`specsolve.grid.stencil`). Widths missing at an end of the axis shorten the curve; it is never
-continued beyond its last node.
+A curve is given at the nodes of dA; between them it is the cubic with the values and slopes of the two nodes, the
+slopes from at most five neighbouring nodes (`specsolve.grid.stencil`). Widths missing at an end of the axis shorten the
+curve; it is never continued beyond its last node.
 """
 
 from __future__ import annotations
@@ -24,7 +24,7 @@ CONVERGED = 1e-14
 
 
 def dA_slope_matrices(dA: np.ndarray) -> np.ndarray:
-    """Slope matrices for every unbroken range of nodes; shape (n, n + 1, n, n), indexed by first node and end of the range."""
+    """Slope matrix of every unbroken range of nodes; shape (n, n + 1, n, n), indexed by first node and end of range."""
     n = dA.size
     matrices = np.zeros((n, n + 1, n, n))
     for first in range(n):

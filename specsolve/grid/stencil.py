@@ -1,17 +1,17 @@
 """Slopes at nodes and the linear map from node values to the cubic of a cell.
 
-In one dimension the interpolant between two nodes a distance h apart is the cubic with the given values and slopes at both
-(Hermite form, t = (x - x_lo)/h):
+In one dimension the interpolant between two nodes a distance h apart is the cubic with the given values and slopes at
+both (Hermite form, t = (x - x_lo)/h):
 
     f = h00 f_lo + h01 f_hi + h (h10 m_lo + h11 m_hi)
 
-and in several dimensions the tensor product of that, which asks at every corner of a cell for the value, the slope along each
-axis and the mixed slopes. The slopes belong to the NODE: they depend on the nodes around it, never on the cell that asks. So
-the interpolant and its first derivatives are continuous across every face between two cells.
+and in several dimensions the tensor product of that, which asks at every corner of a cell for the value, the slope
+along each axis and the mixed slopes. The slopes belong to the NODE: they depend on the nodes around it, never on the
+cell that asks. So the interpolant and its first derivatives are continuous across every face between two cells.
 
-A slope comes from the polynomial through the nearest `PURE_POINTS` nodes of the unbroken run of valid nodes around the node
-along the axis (mixed slopes: `MIXED_POINTS` an axis): central inside, one-sided at the ends of the grid and beside missing
-nodes. A missing node ends the run; nothing reaches across it.
+A slope comes from the polynomial through the nearest `PURE_POINTS` nodes of the unbroken run of valid nodes around the
+node along the axis (mixed slopes: `MIXED_POINTS` an axis): central inside, one-sided at the ends of the grid and beside
+missing nodes. A missing node ends the run; nothing reaches across it.
 """
 
 from __future__ import annotations
@@ -29,8 +29,9 @@ MIXED_POINTS = 3
 
 
 def hermite_basis(t, h):
-    """Basis values and their derivatives with respect to x, each of shape (4, ...), in the order value lo, value hi, slope lo,
-    slope hi.
+    """Basis values and their derivatives with respect to x, each of shape (4, ...).
+
+    The order is value lo, value hi, slope lo, slope hi.
 
     Parameters
     ----------
@@ -100,7 +101,8 @@ def line_axis_slopes(x: np.ndarray, usable: np.ndarray | None = None, even: bool
     usable : ndarray of bool, shape (n,), optional
         Rows of unusable nodes are zero.
     even : bool
-        The function is even in x and x starts at 0 (the Doppler width holds vmic squared): mirrored nodes serve as neighbours.
+        The function is even in x and x starts at 0: mirrored nodes serve as neighbours. So it is with vmic, which
+        enters the Doppler width squared.
     """
     n = x.size
     usable = np.ones(n, dtype=bool) if usable is None else usable
@@ -139,6 +141,7 @@ class NodeStencils:
             for axes in combinations(self.active, size):
                 self._usable[axes] = has_neighbour(self._usable[axes[:-1]], axes[-1])
         self._cells: dict[tuple[int, ...], tuple[np.ndarray, np.ndarray]] = {}
+        self._stencils: dict[tuple[int, int, int, bytes], list[tuple[int, float]]] = {}
 
     @property
     def n_numbers(self) -> int:
@@ -198,14 +201,14 @@ class NodeStencils:
         *inner, axis = axes
         line = (*node[:axis], slice(None), *node[axis + 1 :])
         usable = self._usable[tuple(inner)][line]
-        indices, weights = slope_stencil(self.positions[axis], usable, node[axis], n_points)
+        key = (axis, node[axis], n_points, usable.tobytes())
+        if key not in self._stencils:
+            indices, weights = slope_stencil(self.positions[axis], usable, node[axis], n_points)
+            self._stencils[key] = [(int(i), float(w)) for i, w in zip(indices, weights, strict=True) if w != 0.0]
         total: dict[tuple[int, ...], float] = {}
-        for index, weight in zip(indices, weights, strict=True):
-            if weight == 0.0:
-                continue
-            for source, part in self._weights(
-                (*node[:axis], int(index), *node[axis + 1 :]), tuple(inner), n_points
-            ).items():
+        for index, weight in self._stencils[key]:
+            beside = (*node[:axis], index, *node[axis + 1 :])
+            for source, part in self._weights(beside, tuple(inner), n_points).items():
                 total[source] = total.get(source, 0.0) + weight * part
         return total
 

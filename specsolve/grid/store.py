@@ -240,7 +240,7 @@ def read_header(directory: Path) -> dict[str, Any]:
         header = json.loads(path.read_text(encoding="utf-8"))
     except FileNotFoundError as error:
         raise StoreError(
-            f"{directory} holds no finished response grid; make one with: specsolve grid build LINELIST --output {directory}",
+            f"{directory} holds no finished grid; make one: specsolve grid build LINELIST --output {directory}",
             path=directory,
         ) from error
     except (OSError, ValueError) as error:

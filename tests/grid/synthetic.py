@@ -1,8 +1,9 @@
 """A response grid with a known truth: smooth, made-up formulas with the signs and sizes of a real curve of growth.
 
-Invented for tests, not physics to rely on: a one-layer star. The number of absorbers follows Saha and Boltzmann factors at
-0.87 Teff, the continuum is that of H- (proportional to the electron pressure), the electron pressure is a power law in teff,
-gravity and metallicity. So Fe I lines weaken with Teff, Fe II lines weaken with gravity, strong lines saturate and feel vmic.
+Invented for tests, not physics to rely on: a one-layer star. The number of absorbers follows Saha and Boltzmann factors
+at 0.87 Teff, the continuum is that of H- (proportional to the electron pressure), the electron pressure is a smooth law
+of teff, gravity and metallicity. So Fe I lines weaken with teff, Fe II lines with gravity, strong lines saturate and
+feel vmic.
 """
 
 from __future__ import annotations
