@@ -20,8 +20,11 @@ class Options:
         [eV].
     wavelength_range : (float, float)
         [Angstrom].
-    worst_grade : int
-        Lines of a worse (larger) grade are left out; ungraded lines (0) stay.
+    worst_grade : int or None
+        Lines whose log gf has a worse (larger) grade are left out; ungraded lines (0) stay, and so do lines whose log gf comes with the
+        star. None: 3, in differential work 4 (there log gf cancels).
+    fe2_scale : str
+        "default" or "alternative": the column of the line list that Fe II log gf come from (lines without a second value keep the first).
     near_equal : float
         Candidates with 2 (ln L_best - ln L) below this are near-equal (6 = odds 20 : 1).
     vmic_relation : bool
@@ -41,7 +44,8 @@ class Options:
     reduced_width_range: tuple[float, float] = (-6.0, -4.8)
     excitation_range: tuple[float, float] = (0.0, 6.0)
     wavelength_range: tuple[float, float] = (4000.0, 9000.0)
-    worst_grade: int = 4
+    worst_grade: int | None = None
+    fe2_scale: str = "default"
     near_equal: float = 6.0
     vmic_relation: bool = True
     max_iterations: int = 60
@@ -50,6 +54,8 @@ class Options:
     def __post_init__(self) -> None:
         if self.loss not in ("huber", "student", "none"):
             raise ValueError(f"loss = {self.loss!r} is not one of 'huber', 'student', 'none'")
+        if self.fe2_scale not in ("default", "alternative"):
+            raise ValueError(f"fe2_scale = {self.fe2_scale!r} is not one of 'default', 'alternative'")
         for name in ("reduced_width_range", "excitation_range", "wavelength_range"):
             low, high = getattr(self, name)
             if not low < high:

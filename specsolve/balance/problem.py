@@ -25,6 +25,8 @@ REASON_WAVELENGTH = "wavelength_cut"
 REASON_GRADE = "grade_cut"
 REASON_NO_ZERO_POINT = "not_in_reference_star"
 REASON_ION = "other_ion"
+WORST_GRADE_ABSOLUTE, WORST_GRADE_DIFFERENTIAL = 3, 4
+SAME_LOG_GF_DEX = 0.005  # a given log gf this close to the list's is the list's, rounded
 
 
 class WidthInterpolator(Protocol):
@@ -106,7 +108,10 @@ class Problem:
         mark(found & ((energy < low) | (energy > high)), REASON_EXCITATION)
         low, high = options.wavelength_range
         mark(found & ((wavelength < low) | (wavelength > high)), REASON_WAVELENGTH)
-        mark(found & (lines.grade[place] > options.worst_grade), REASON_GRADE)
+        worst = options.worst_grade
+        if worst is None:
+            worst = WORST_GRADE_DIFFERENTIAL if self.zero_points.differential else WORST_GRADE_ABSOLUTE
+        mark(found & np.isnan(self.star.log_gf) & (lines.grade[place] > worst), REASON_GRADE)
         for row, text in self.dropped.items():
             if reason[row] == "":
                 reason[row] = text
@@ -130,17 +135,27 @@ class Problem:
         return self.grid.lines.key[self.line_indices]
 
     @cached_property
+    def list_log_gf(self) -> np.ndarray:
+        """log gf of the grid's list on the Fe II scale asked for."""
+        lines, place = self.grid.lines, self.line_indices
+        values = lines.log_gf[place]
+        if self.options.fe2_scale == "alternative":
+            other = lines.log_gf_alternative[place]
+            values = np.where((lines.ion[place] == self.pair[1]) & np.isfinite(other), other, values)
+        return values
+
+    @cached_property
     def log_gf(self) -> np.ndarray:
-        """log gf in use: the star table's where given, else the grid's."""
+        """log gf in use: the star table's where given, else the list's."""
         given = self.star.log_gf[self.rows]
-        return np.where(np.isnan(given), self.grid.lines.log_gf[self.line_indices], given)
+        return np.where(np.isnan(given), self.list_log_gf, given)
 
     @cached_property
     def log_gf_error(self) -> np.ndarray:
-        """Its error [dex]: the star table's; the grid's where the grid's own log gf is in use; nan = unknown."""
+        """Its error [dex]: the star table's; the list's where the list's own log gf is in use; nan = unknown."""
         given, error = self.star.log_gf[self.rows], self.star.log_gf_error[self.rows]
         own = self.grid.lines.log_gf_error[self.line_indices]
-        same = np.isnan(given) | (np.abs(given - self.grid.lines.log_gf[self.line_indices]) < 0.005)
+        same = np.isnan(given) | (np.abs(given - self.grid.lines.log_gf[self.line_indices]) < SAME_LOG_GF_DEX)
         return np.where(np.isnan(error) & same, own, error)
 
     @cached_property
