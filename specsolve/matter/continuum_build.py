@@ -26,8 +26,8 @@ from specsolve.constants import (
     RADIATION_C2_CM_K,
     RYDBERG_EV,
 )
-from specsolve.matter.photoionization import TABLE_PATH
 from specsolve.matter.partition import ionization_energy
+from specsolve.matter.photoionization import TABLE_PATH
 
 LOG_TEMPERATURE = np.linspace(np.log(1500.0), np.log(33000.0), 40)
 LOG_WAVELENGTH = np.linspace(np.log(0.09e-4), np.log(110e-4), 90)  # wavelength in cm
@@ -81,10 +81,7 @@ def helium_free_free() -> np.ndarray:
 
     speed2 = 2.0 / ELECTRON_MASS_G
     mean = np.sum(
-        maxwell
-        * np.sqrt(speed2 * after)
-        * speed2
-        * (after * cross_section(before) + before * cross_section(after)),
+        maxwell * np.sqrt(speed2 * after) * speed2 * (after * cross_section(before) + before * cross_section(after)),
         axis=-1,
     )
     factor = ELECTRON_CHARGE_ESU**2 / (6.0 * np.pi * PLANCK_ERG_S * LIGHT_SPEED_CM_S * frequency[..., 0] ** 3)

@@ -13,7 +13,7 @@ from functools import cache
 
 import numpy as np
 
-from specsolve.constants import BOLTZMANN_ERG_K, BOLTZMANN_EV_K, PROTON_MASS_G, ELECTRON_MASS_G, SAHA_CONSTANT
+from specsolve.constants import BOLTZMANN_ERG_K, BOLTZMANN_EV_K, ELECTRON_MASS_G, PROTON_MASS_G, SAHA_CONSTANT
 from specsolve.matter.composition import ELEMENTS, Composition
 from specsolve.matter.partition import STAGES, ionization_energy, log_partition, partition_table, species_row
 

@@ -92,9 +92,7 @@ def build(reference: Path) -> dict[str, np.ndarray]:
         stage = STAGES.index(numeral) + 1
         names.append(name)
         energies.append(ionization[name])
-        rows.append(
-            joined(temperature, source_k[used], values[used], levels[name], ionization[name], stage)
-        )
+        rows.append(joined(temperature, source_k[used], values[used], levels[name], ionization[name], stage))
     for name in ("H II", "He III"):
         names.append(name)
         energies.append(np.inf)

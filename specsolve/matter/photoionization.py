@@ -80,9 +80,7 @@ def hydrogen_gaunt_factor(n: np.ndarray, excess: np.ndarray) -> np.ndarray:
         Asymptotic expansion of Menzel & Pekeris (1935, MNRAS 96, 77), two terms.
     """
     root = (n * (excess + 1.0)) ** (2.0 / 3.0)
-    return (
-        1.0 + 0.1728 * (excess - 1.0) / root - 0.0496 * (excess**2 + 4.0 / 3.0 * excess + 1.0) / root**2
-    )
+    return 1.0 + 0.1728 * (excess - 1.0) / root - 0.0496 * (excess**2 + 4.0 / 3.0 * excess + 1.0) / root**2
 
 
 def cross_sections(wavelength_cm: np.ndarray) -> np.ndarray:

@@ -90,9 +90,7 @@ def enthalpy(gas: Gas) -> np.ndarray:
     return per_volume / gas.density
 
 
-def thermodynamics(
-    temperature: np.ndarray, gas_pressure: np.ndarray, composition: Composition
-) -> Thermodynamics:
+def thermodynamics(temperature: np.ndarray, gas_pressure: np.ndarray, composition: Composition) -> Thermodynamics:
     """Heat capacity, adiabatic gradient and expansion of the gas.
 
     Parameters
@@ -109,7 +107,7 @@ def thermodynamics(
 
     Notes
     -----
-    With h the enthalpy per gram, cp = (dh/dT)_P, Q = -(d ln rho / d ln T)_P, and the adiabatic gradient P Q / (rho T cp).
+    With h the enthalpy per gram: cp = (dh/dT)_P, Q = -(d ln rho / d ln T)_P, gradient = P Q / (rho T cp).
 
     Examples
     --------
