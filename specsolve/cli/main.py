@@ -21,7 +21,6 @@ COMMANDS = {
     "check": ("specsolve.cli.check", "Dry run: what of a table would be used, and what is wrong with it."),
     "again": ("specsolve.cli.again", "Repeat a solve from its own output files."),
     "columns": ("specsolve.cli.columns", "Explain the columns of the tables read and written."),
-    "demo": ("specsolve.cli.demo", "Write the invented demo cluster, packaged or made anew."),
     "grid": ("specsolve.cli.grid", "Build, check and describe response grids."),
     "atmosphere": ("specsolve.cli.atmosphere", "Build, show and import model atmospheres."),
 }

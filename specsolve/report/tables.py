@@ -140,8 +140,19 @@ def tables_of(solutions: Sequence[Solution], provenance: Mapping[str, Any] | Non
     return tables
 
 
-def make_table(kind: str, columns: Mapping[str, Any], provenance: Mapping[str, Any] | None = None) -> Table:
+def make_table(
+    kind: str, columns: Mapping[str, Any], provenance: Mapping[str, Any] | None = None, *, subset: bool = False
+) -> Table:
     """A table of a known kind, with types, units, descriptions and metadata of the schema.
+
+    Parameters
+    ----------
+    kind : str
+    columns : mapping
+        Column name to values.
+    provenance : mapping, optional
+    subset : bool
+        Columns that are not given are left out; else every column of the schema is asked for.
 
     Raises
     ------
@@ -153,6 +164,8 @@ def make_table(kind: str, columns: Mapping[str, Any], provenance: Mapping[str, A
 
     made = Table()
     for column in columns_of(kind):
+        if subset and column.name not in columns:
+            continue
         values = _typed(column, columns[column.name])
         made[column.name] = TableColumn(values, unit=column.unit or None, description=column.description)
     made.meta = {"schema": SCHEMA, "kind": kind, "provenance": plain(provenance or {})}
