@@ -36,6 +36,32 @@ def _hash_fraction(name: str) -> float:
     return int.from_bytes(hashlib.sha256(name.encode()).digest()[:4], "big") / 2**32
 
 
+FIGURES: list[str] = []
+
+
+@pytest.fixture
+def figure(request: pytest.FixtureRequest):
+    """Record a measured figure; all of them are printed after the run.
+
+    ``figure("worst teff", 3.1, "K", limit="5", source="closure, 200 stars")``
+    """
+
+    def record(name: str, value: float, unit: str = "", *, limit: str = "", source: str = "") -> None:
+        words = f"{request.node.name}: {name} = {value:.4g} {unit}".rstrip()
+        words += f" (asked: {limit})" if limit else ""
+        words += f" [{source}]" if source else ""
+        FIGURES.append(words)
+
+    return record
+
+
+def pytest_terminal_summary(terminalreporter: pytest.TerminalReporter) -> None:
+    if FIGURES:
+        terminalreporter.section("measured figures")
+        for words in FIGURES:
+            terminalreporter.write_line(words)
+
+
 @pytest.fixture
 def seed() -> int:
     """The seed of this run; another one by the environment variable SPECSOLVE_TEST_SEED."""
