@@ -17,10 +17,9 @@ from specsolve.atmosphere.blanketing_lines import DATA_FOLDER
 
 #: Edges of the sub-bins in cumulative fraction of the wavelengths of a band, weakest opacity first.
 SUB_EDGES = np.array([0.0, 0.2, 0.4, 0.55, 0.7, 0.8, 0.88, 0.94, 0.975, 0.99, 1.0])
-#: Added to every opacity before the logarithm [cm^2 g^-1]; far below any continuum.
-OPACITY_FLOOR = 1e-9
-#: Step of the stored integers [dex].
+#: Step of the stored integers, and the logarithm that zero stands for [dex].
 LOG_OPACITY_STEP = 5e-4
+LOG_OPACITY_LOWEST = -14.0
 #: Above the hottest node the table goes on along its slope, times 10^-(x / TAPER_DEX)^2, x the excess in log T [dex].
 TAPER_DEX = 0.1
 #: Metallicities of the packaged tables.
@@ -46,7 +45,7 @@ class Blanketing:
     vmic : ndarray, shape (n_v,)
         Microturbulence of the opacity [km/s], ascending.
     log_opacity : ndarray of float32, shape (n_v, n_bands, n_sub, n_t, n_p)
-        log10 of the line opacity [cm^2 g^-1], `OPACITY_FLOOR` added.
+        log10 of the line opacity [cm^2 g^-1].
     multiplier : ndarray, shape (n_bands,)
         Factor on the line opacity for what the lists lack; see `specsolve.atmosphere.blanketing_calibration`.
     """
@@ -212,7 +211,7 @@ def table_path(mh: float, folder: Path = DATA_FOLDER) -> Path:
 
 def save_blanketing(blanketing: Blanketing, path: Path) -> None:
     """Write tables (without the multiplier, which has a file of its own) as differences of scaled integers."""
-    scaled = np.rint((blanketing.log_opacity - np.log10(OPACITY_FLOOR)) / LOG_OPACITY_STEP).astype(np.int64)
+    scaled = np.rint((blanketing.log_opacity - LOG_OPACITY_LOWEST) / LOG_OPACITY_STEP).astype(np.int64)
     if scaled.min() < 0 or scaled.max() > np.iinfo(np.uint16).max:
         raise ValueError("opacities outside the range that can be stored")
     steps = np.diff(scaled, axis=-1, prepend=0).astype(np.int16)
@@ -247,7 +246,7 @@ def load_blanketing(mh: float, folder: Path = DATA_FOLDER) -> Blanketing:
         raise FileNotFoundError(f"no blanketing table for [M/H] = {mh:+.2f}; packaged are {PACKAGED_MH}.")
     with np.load(path, allow_pickle=False) as stored:
         scaled = np.cumsum(stored["log_opacity_steps"], axis=-1, dtype=np.int32)
-        log_opacity = (np.log10(OPACITY_FLOOR) + LOG_OPACITY_STEP * scaled).astype(np.float32)
+        log_opacity = (LOG_OPACITY_LOWEST + LOG_OPACITY_STEP * scaled).astype(np.float32)
         names = ("band_edges_cm", "sub_weights", "log_temperature", "log_pressure", "vmic")
         arrays = {name: stored[name] for name in names}
         mh = float(stored["mh"])

@@ -11,7 +11,6 @@ from pathlib import Path
 import numpy as np
 
 from specsolve.atmosphere.blanketing import (
-    OPACITY_FLOOR,
     PACKAGED_MH,
     SUB_EDGES,
     Blanketing,
@@ -45,6 +44,9 @@ LOG_PRESSURE = np.linspace(-2.0, 7.5, 20)
 VMIC = (1.0, 2.0)
 #: Samples in each band; more change a model by less than 5 K.
 SAMPLES = 3000
+#: Fraction of the continuous opacity (middle of the band) added to every line opacity: no line is followed below
+#: `LEAST_FRACTION`, and smooth tables need a floor.
+FLOOR_FRACTION = 1e-4
 
 #: Standard atomic weights [u] of elements outside the equation of state (IUPAC 2021, abridged).
 OTHER_ATOMIC_WEIGHTS = {
@@ -98,7 +100,7 @@ def distribution(
     band_edges_cm: np.ndarray,
     n_samples: int = SAMPLES,
 ) -> np.ndarray:
-    """Sub-bin opacities of each point of a gas.
+    """Sub-bin opacities of each point of a gas, with the floor of `FLOOR_FRACTION`.
 
     Returns
     -------
@@ -111,12 +113,13 @@ def distribution(
     flat = samples.ravel()
     nearest = np.minimum(np.searchsorted(flat, constants.wavelength_cm), len(flat) - 1)
     absorption, scattering = continuum_opacity(samples[:, n_samples // 2], gas)
-    least = LEAST_FRACTION * (absorption + scattering)
+    continuum = absorption + scattering
+    least = LEAST_FRACTION * continuum
     result = np.empty((n_bands, len(SUB_EDGES) - 1, len(gas.temperature)))
     for i, state in enumerate(gas_states(lines, gas, mh)):
         opacity = sample(constants, flat, sample_band, nearest, state, vmic_kms, np.ascontiguousarray(least[:, i]))
         result[:, :, i] = order_statistics(opacity.reshape(n_bands, n_samples), SUB_EDGES)
-    return result
+    return result + FLOOR_FRACTION * continuum[:, None, :]
 
 
 def build(
@@ -154,7 +157,7 @@ def build(
     log_opacity = []
     for vmic_kms in vmic:
         opacity = distribution(lines, constants, gas, mh, vmic_kms, band_edges_cm, n_samples)
-        log_opacity.append(np.log10(opacity + OPACITY_FLOOR).reshape(*opacity.shape[:2], *grid_t.shape))
+        log_opacity.append(np.log10(opacity).reshape(*opacity.shape[:2], *grid_t.shape))
     return Blanketing(
         mh=mh,
         band_edges_cm=band_edges_cm,

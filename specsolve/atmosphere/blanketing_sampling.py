@@ -39,8 +39,13 @@ OSCILLATOR_CM2_HZ = np.pi * ELECTRON_CHARGE_ESU**2 / (ELECTRON_MASS_G * LIGHT_SP
 UNSOELD_FACTOR = 17.0
 #: C6 = 0.3e-30 Z^2 [1/(I - E_up)^2 - 1/(I - E_low)^2], energies in eV (same source).
 UNSOELD_C6 = 0.3e-30
-#: Factor on Unsoeld's gamma_6, measured against the tabulated theory (see tests): close to 2.
-HYDROGEN_FACTOR = 2.0
+#: Factor on that gamma_6 for neutral atoms: median over the lines of each element (Ca: its strong lines) tabulated by
+#: Barklem, Piskunov & O'Mara 2000, A&AS 142, 467, at 10 000 K; other elements as iron. For ions 1 (Mg II 1.02, Ca II 0.91 there).
+HYDROGEN_FACTORS = {
+    "Li": 2.1, "C": 2.1, "N": 1.9, "Na": 2.4, "Mg": 2.4, "Al": 2.2, "Si": 2.2, "P": 1.6, "S": 2.2, "K": 2.4, "Ca": 1.8,
+}  # fmt: skip
+HYDROGEN_FACTOR_IRON = 1.4
+HYDROGEN_FACTOR_IONS = 1.0
 #: Broadening by a helium atom against that by a hydrogen atom: (polarizability 1.384/4.5)^(2/5) (reduced mass)^(3/10)
 #: gives 0.41 for iron.
 HELIUM_RELATIVE = 0.41
@@ -91,17 +96,24 @@ class LineConstants:
     masses: np.ndarray
 
 
+def hydrogen_factor(ion: str) -> float:
+    """Factor on Unsoeld's broadening by hydrogen for the lines of an ion."""
+    symbol, stage = ion.split()
+    return HYDROGEN_FACTORS.get(symbol, HYDROGEN_FACTOR_IRON) if stage == "I" else HYDROGEN_FACTOR_IONS
+
+
 def line_constants(lines: BlanketingLines, atomic_mass) -> LineConstants:
     """Damping and other constants of each line; `atomic_mass(symbol)` in atomic mass units."""
     charge = np.array([len(ion.split()[1]) for ion in lines.ions], dtype=float)
     limit = np.array([ionization_energy(ion) for ion in lines.ions])
     masses = np.array([atomic_mass(ion.split()[0]) for ion in lines.ions]) * ATOMIC_MASS_G
+    factor = np.array([hydrogen_factor(ion) for ion in lines.ions])
     row = lines.ion_index
     upper = lines.excitation_potential + HC_EV_CM / lines.wavelength_cm
     bound_upper = np.maximum(limit[row] - upper, LEAST_BINDING_EV)
     bound_lower = np.maximum(limit[row] - lines.excitation_potential, bound_upper + 1e-3)
     c6 = UNSOELD_C6 * charge[row] ** 2 * (bound_upper**-2 - bound_lower**-2)
-    speed = np.sqrt(8.0 * BOLTZMANN_ERG_K / np.pi * (1.0 / masses[row] + 1.0 / PROTON_MASS_G))
+    speed = np.sqrt(8.0 * BOLTZMANN_ERG_K / np.pi * (1.0 / masses + 1.0 / PROTON_MASS_G))
     quantum_number = charge[row] * np.sqrt(RYDBERG_EV / bound_upper)
     return LineConstants(
         wavelength_cm=lines.wavelength_cm,
@@ -109,7 +121,7 @@ def line_constants(lines: BlanketingLines, atomic_mass) -> LineConstants:
         gf=10.0**lines.log_gf,
         ion_index=row,
         gamma_rad=10.0**lines.log_gamma_rad,
-        hydrogen=HYDROGEN_FACTOR * UNSOELD_FACTOR * c6**0.4 * speed**0.6,
+        hydrogen=factor[row] * UNSOELD_FACTOR * c6**0.4 * speed[row] ** 0.6,
         stark=STARK_FACTOR * quantum_number**5,
         masses=masses,
     )
