@@ -26,7 +26,7 @@ from specsolve.radiation.transfer import ANGLE_COSINES, ANGLE_WEIGHTS
 
 from .layers import N_LAYERS, Layers, LineOpacities, Structure, doppler_fractions, line_opacities, make_layers
 
-N_PROFILE = 18
+N_PROFILE = 20
 CORE_SCALE = 3.0
 """c of the profile points: about linear over the first 3 Doppler widths, exponential beyond."""
 REFERENCE_LOG_TAU = -1.0
@@ -247,4 +247,82 @@ def reduced_widths_reference(
             flux = emergent_flux(layers, line_part, opacities, continuum, i)
             free = emergent_flux(layers, np.zeros((layers.column_mass.size, 1)), opacities, continuum, i)
             result[i, v] = np.log10(weights[i] @ (1.0 - flux / free))
+    return result
+
+
+def reduced_widths(
+    atmosphere: Structure,
+    composition: Composition,
+    lines: LineList,
+    vmic,
+    abundances_a,
+    *,
+    departures: tuple[np.ndarray, np.ndarray] | None = None,
+    n_layers: int = N_LAYERS,
+    n_profile: int = N_PROFILE,
+) -> np.ndarray:
+    """log10(W / lambda) of lines from one model atmosphere.
+
+    Parameters
+    ----------
+    atmosphere : Structure
+        Column mass [g/cm2], temperature [K], gas pressure [dyn/cm2], electron density [cm-3], each (n,), inwards.
+    composition : Composition
+        Of the atmosphere; the iron of the lines comes from `abundances_a`.
+    lines : LineList
+    vmic : ndarray, shape (n_v,)
+        Microturbulence [km/s].
+    abundances_a : ndarray, shape (n_a,)
+        A(Fe) = log10(N_Fe / N_H) + 12.
+    departures : pair of ndarray, shape (n_lines, n_layers), optional
+        Departure coefficients of the lower and upper levels at the layers of `make_layers`; LTE without.
+
+    Returns
+    -------
+    ndarray, shape (n_lines, n_v, n_a)
+        Nan where a line is in emission. Accurate to 0.3 % of W below log(W / lambda) = -4.9 and 1 % to -4.5 (numerically, for the given structure).
+
+    Raises
+    ------
+    ValueError
+        If the structure is not usable, see `make_layers`.
+
+    Examples
+    --------
+    >>> widths = reduced_widths(model, composition, lines, [1.0], [7.46])  # doctest: +SKIP
+    """
+    from .exponential_integral import table
+    from .kernels import relative_widths
+
+    layers = make_layers(atmosphere, composition, n_layers)
+    opacities = line_opacities(layers, lines, departures)
+    continuum = continuum_field(layers, opacities)
+    abundances_a = np.atleast_1d(np.asarray(abundances_a, float))
+    amounts = np.concatenate([[0.0], 10.0 ** (abundances_a - 12.0)])
+    vmic = np.atleast_1d(np.asarray(vmic, float))
+    result = np.empty((len(lines), vmic.size, abundances_a.size))
+    work, widths = np.empty(n_layers), np.empty((len(lines), abundances_a.size))
+    for v, doppler in enumerate(doppler_fractions(layers, vmic)):
+        points, weights = profile_points(layers, opacities, doppler, abundances_a.max(), n_profile)
+        relative_widths(
+            work,
+            layers.mass_step,
+            layers.column_mass,
+            amounts,
+            doppler,
+            points,
+            weights,
+            opacities.absorption,
+            opacities.scattering,
+            opacities.strength,
+            opacities.damping,
+            opacities.planck,
+            opacities.line_source,
+            continuum.eddington_surplus,
+            continuum.eddington_scale,
+            continuum.edge,
+            table(),
+            widths,
+        )
+        result[:, v] = np.log10(np.where(widths > 0.0, widths, np.nan))
     return result

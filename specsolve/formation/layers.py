@@ -8,7 +8,7 @@ from typing import Protocol
 import numpy as np
 from scipy.interpolate import CubicSpline
 
-from specsolve.constants import ANGSTROM_CM, LIGHT_SPEED_CM_S
+from specsolve.constants import ANGSTROM_CM, LIGHT_SPEED_CM_S, RADIATION_C2_CM_K
 from specsolve.lines import LineList, air_to_vacuum
 from specsolve.matter.broadening import doppler_width
 from specsolve.matter.composition import Composition
@@ -22,7 +22,7 @@ SHALLOWEST, DEEPEST = -6.0, 1.7
 """Range of log tau_5000 that matters to lines between 3500 and 10 000 Angstrom."""
 LEAST_DEPTH = 1.2
 """A structure that ends above this log tau_5000 does not hold the layers where the continuum forms."""
-N_LAYERS = 72
+N_LAYERS = 64
 
 
 class Structure(Protocol):
@@ -199,8 +199,6 @@ def line_opacities(layers: Layers, lines: LineList, departures: tuple[np.ndarray
 
 def _with_departures(strength, thermal, wavelength, gas, lower, upper):
     """Line opacity and source function with departure coefficients b: kappa b_l (1 - b_u/b_l e^-x) / (1 - e^-x)."""
-    from specsolve.constants import RADIATION_C2_CM_K
-
     boltzmann = np.exp(-RADIATION_C2_CM_K / (wavelength[:, None] * gas.temperature[None, :]))
     ratio = upper / lower
     factor = (1.0 - ratio * boltzmann) / (1.0 - boltzmann)
