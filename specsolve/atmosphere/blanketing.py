@@ -148,7 +148,7 @@ def vmic_weights(blanketing: Blanketing, vmic: float) -> np.ndarray:
     return np.array([np.interp(vmic, nodes, row) for row in np.eye(len(nodes))])
 
 
-def line_opacity_reference(blanketing: Blanketing, temperature, gas_pressure, vmic: float, power: float = 1.0) -> np.ndarray:
+def line_opacity_reference(blanketing: Blanketing, temperature, gas_pressure, vmic: float, power: float = 0.0) -> np.ndarray:
     """`line_opacity` in plain NumPy: the test oracle."""
     temperature, gas_pressure = np.asarray(temperature, dtype=float), np.asarray(gas_pressure, dtype=float)
     cell_t, cell_p, weights_t, weights_p, log_taper = table_position(blanketing, temperature, gas_pressure)
@@ -162,7 +162,7 @@ def line_opacity_reference(blanketing: Blanketing, temperature, gas_pressure, vm
     return factors * opacity.T.reshape(blanketing.n_bands, len(blanketing.sub_weights), -1)
 
 
-def line_opacity(blanketing: Blanketing, temperature, gas_pressure, vmic: float, power: float = 1.0) -> np.ndarray:
+def line_opacity(blanketing: Blanketing, temperature, gas_pressure, vmic: float, power: float = 0.0) -> np.ndarray:
     """Line opacity of every band and sub-bin.
 
     Parameters
@@ -175,7 +175,7 @@ def line_opacity(blanketing: Blanketing, temperature, gas_pressure, vmic: float,
     vmic : float
         Microturbulence of the opacity [km/s], inside the table; the logarithm is interpolated linearly.
     power : float
-        The opacity is multiplied by `multiplier` to this power: 0 is the raw line lists, 1 the calibrated opacity.
+        The opacity is multiplied by `multiplier` to this power: 0 (default) is the raw line lists, 1 the calibrated opacity.
 
     Returns
     -------
