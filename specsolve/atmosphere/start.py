@@ -18,6 +18,7 @@ if TYPE_CHECKING:
 #: log10 of optical depth at 5000 A: 0.16 apart near the surface, 0.1 where the continuum forms.
 STANDARD_LOG_TAU = np.concatenate([np.linspace(-6.0, -2.0, 25, endpoint=False), np.linspace(-2.0, 2.0, 41)])
 MAX_STARTING_GRADIENT = 0.25  # d ln T / d ln P of the deep starting structure, somewhat above the adiabatic one
+MAX_PASSES = 60
 _REFERENCE = np.array([5e-5])
 
 
@@ -53,36 +54,32 @@ def starting_structure(
         scaled = PchipInterpolator(neighbour.log_tau, neighbour.temperature, extrapolate=True)
         temperature = scaled(STANDARD_LOG_TAU) * teff / neighbour.teff
 
-    def opacity(t: float, pressure: float) -> float:
-        gas = equilibrium(np.array([t]), np.array([pressure]), composition)
+    mass = gravity**-0.6 * np.sqrt(tau) * 1e3 if neighbour is None else _mass_of(neighbour)
+    for _ in range(MAX_PASSES):
+        limited = temperature if neighbour is not None else _limit_gradient(temperature, tau, mass)
+        gas = equilibrium(limited, gravity * mass, composition)
         absorption, scattering = continuum_opacity(_REFERENCE, gas)
-        return float(absorption[0, 0] + scattering[0, 0])
-
-    mass = np.empty_like(tau)
-    guess = 1e-4
-    for _ in range(60):  # opacity proportional to pressure above the first point: tau = chi m / 2
-        new = 2.0 * tau[0] / opacity(temperature[0], gravity * guess)
-        if abs(new / guess - 1.0) < 1e-4:
+        inverse = 1.0 / (absorption[0] + scattering[0])
+        steps = 0.5 * (inverse[1:] + inverse[:-1]) * np.diff(tau)
+        new = 2.0 * tau[0] * inverse[0] + np.concatenate([[0.0], np.cumsum(steps)])  # opacity ~ pressure above the top
+        change = np.max(np.abs(np.log(new / mass)))
+        mass = np.sqrt(mass * new)  # opacity grows about linearly with pressure: the geometric mean converges fast
+        if change < 1e-3:
             break
-        guess = np.sqrt(new * guess)
-    mass[0] = guess
-    chi = opacity(temperature[0], gravity * mass[0])
+    return mass, limited
+
+
+def _mass_of(neighbour: Atmosphere) -> np.ndarray:
+    return np.exp(PchipInterpolator(neighbour.log_tau, np.log(neighbour.column_mass), extrapolate=True)(STANDARD_LOG_TAU))
+
+
+def _limit_gradient(temperature: np.ndarray, tau: np.ndarray, mass: np.ndarray) -> np.ndarray:
+    """Temperatures (n,) that below tau = 1 rise with pressure no faster than `MAX_STARTING_GRADIENT`."""
+    limited = temperature.copy()
     for d in range(1, len(tau)):
-        step = 2.0 * (tau[d] - tau[d - 1])
-        trial = mass[d - 1] + 0.5 * step / chi
-        t = temperature[d]
-        for _ in range(30):
-            if neighbour is None and tau[d] > 1.0:
-                limit = temperature[d - 1] * (trial / mass[d - 1]) ** MAX_STARTING_GRADIENT
-                t = min(temperature[d], limit)
-            here = opacity(t, gravity * trial)
-            new = mass[d - 1] + step / (chi + here)
-            if abs(new / trial - 1.0) < 1e-5:
-                trial = new
-                break
-            trial = 0.5 * (trial + new)
-        temperature[d], mass[d], chi = t, trial, here
-    return mass, temperature
+        if tau[d] > 1.0:
+            limited[d] = min(temperature[d], limited[d - 1] * (mass[d] / mass[d - 1]) ** MAX_STARTING_GRADIENT)
+    return limited
 
 
 def move_to_standard_depths(

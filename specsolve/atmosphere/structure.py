@@ -21,6 +21,7 @@ ROUGH_TOLERANCE = 3e-3  # flux error at which depth points may be moved
 DEPTH_TOLERANCE = 0.01  # in log tau
 MAX_ITERATIONS = 120
 MAX_RADIATIVE_SHARE = 0.9  # radiative acceleration over gravity; beyond it a static layer does not exist
+RADIATION_LIMIT = "radiation pressure exceeds 0.9 of gravity"
 
 
 def opacity_vmic(logg: float) -> float:
@@ -99,7 +100,7 @@ def solve_structure(
                 raise StructureError("the energy balance is not finite")
             if np.max(balance.radiative_acceleration) > MAX_RADIATIVE_SHARE * gravity:
                 if balance.flux_error < 0.1:
-                    raise StructureError("radiation pressure exceeds 0.9 of gravity")
+                    raise StructureError(RADIATION_LIMIT)
             new_push = np.minimum(balance.radiative_acceleration, MAX_RADIATIVE_SHARE * gravity)
             new_pressure = gas_pressure(column_mass, gravity, new_push)
             pressure_change = np.max(np.abs(np.log(new_pressure / pressure)))

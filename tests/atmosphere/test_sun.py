@@ -37,29 +37,35 @@ def continuum_intensity(model, wavelength_cm, cosines):
     return emergent_intensity(total, source, model.column_mass, np.asarray(cosines))
 
 
-def test_temperature_against_semi_empirical_structure(sun):
+def test_temperature_against_semi_empirical_structure(sun, figure):
     """Within 100 K of Fontenla et al. 1993 for -3.5 < log tau < 0.3."""
     log_tau, temperature = FONTENLA_1993.T
     inside = (log_tau > -3.5) & (log_tau < 0.3)
     ours = np.interp(log_tau[inside], sun.log_tau, sun.temperature)
-    assert np.max(np.abs(ours - temperature[inside])) < 100.0
+    worst = np.max(np.abs(ours - temperature[inside]))
+    figure("worst temperature difference", worst, "K", limit="< 100", source="Fontenla et al. 1993")
+    assert worst < 100.0
 
 
-def test_limb_darkening(sun):
+def test_limb_darkening(sun, figure):
     """Neckel & Labs 1994, 0.45-1.0 um: within 0.02 at mu 0.5, 0.03 at mu 0.2."""
     wavelengths = np.array([w for w in NECKEL_LABS_1994 if 0.45 <= w <= 1.0])
     intensity = continuum_intensity(sun, wavelengths * 1e-4, [1.0, 0.5, 0.2])
     for mu, column, bar in ((0.5, 1, 0.02), (0.2, 2, 0.03)):
         published = np.array([np.polynomial.polynomial.polyval(mu, NECKEL_LABS_1994[w]) for w in wavelengths])
-        assert np.max(np.abs(intensity[:, column] / intensity[:, 0] - published)) < bar
+        worst = np.max(np.abs(intensity[:, column] / intensity[:, 0] - published))
+        figure(f"limb darkening at mu {mu}", worst, limit=f"< {bar}", source="Neckel & Labs 1994")
+        assert worst < bar
 
 
-def test_disc_centre_continuum(sun):
-    """Allen's table, within 5 % above 0.45 um (to 1.8 um; beyond, the table has two digits)."""
+def test_disc_centre_continuum(sun, figure):
+    """Allen's table, within 5 % above 0.45 um (to 1.4 um; beyond, the table has two digits)."""
     wavelengths = np.array([w for w in ALLEN_CENTRE if 0.45 <= w <= 1.4])
     intensity = continuum_intensity(sun, wavelengths * 1e-4, [1.0])[:, 0] / W_M2_SR_A_TO_CGS
     published = np.array([ALLEN_CENTRE[w] for w in wavelengths])
-    assert np.max(np.abs(intensity / published - 1.0)) < 0.05
+    worst = np.max(np.abs(intensity / published - 1.0))
+    figure("disc-centre continuum", worst, limit="< 0.05", source="Allen 4th ed., table 14.13")
+    assert worst < 0.05
 
 
 def flux_spectrum(model, wavelength_cm, power=1.0):
@@ -82,7 +88,7 @@ def flux_spectrum(model, wavelength_cm, power=1.0):
     return flux
 
 
-def test_flux_above_700_nm(sun):
+def test_flux_above_700_nm(sun, figure):
     """ASTM G173 extraterrestrial spectrum (carried by pvlib), 50 nm bands from 0.7 to 2.4 um: within 5 %."""
     spectrum = pytest.importorskip("pvlib").spectrum.get_reference_spectra(standard="ASTM G173-03")["extraterrestrial"]
     solar_radius_cm, astronomical_unit_cm = 6.957e10, 1.495978707e13  # IAU 2015 B3, IAU 2012 B2
@@ -94,4 +100,5 @@ def test_flux_above_700_nm(sun):
         points = (low + 50.0 * (np.arange(5) + 0.5) / 5) * 1e-7
         ours = flux_spectrum(sun, points).mean() * dilution * 1e-3 * 1e-7  # erg / (s cm2 cm) in W / (m2 nm)
         worst[low] = ours / observed - 1.0
+    figure("flux above 0.7 um", max(map(abs, worst.values())), limit="< 0.05", source="ASTM G173")
     assert max(map(abs, worst.values())) < 0.05, worst
