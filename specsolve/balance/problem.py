@@ -170,6 +170,8 @@ class Problem:
         wavelength_ma = self.grid.lines.wavelength_air[self.line_indices] * 1e3  # 1 Angstrom = 1000 mA
         zero, covariance = self.zero_points.for_lines(self.keys)
         differential = self.zero_points.differential
+        if differential:  # the reference star's lines are kept on the list's log gf
+            zero = zero - self.log_gf_shift
         return LineInputs(
             is_fe2=star.ion[rows] == self.pair[1],
             excitation_potential=self.grid.lines.excitation_potential[self.line_indices],
