@@ -98,10 +98,9 @@ def make_header(
     lines: LineList,
     blocks: Sequence[Block],
     missing: Mapping[str, Mapping[tuple[int, ...], str]],
-    engine: Mapping[str, str],
     atmospheres_identity: str,
     description: str,
-    builds: Sequence[str] = (),
+    builds: Sequence[Mapping[str, Any]] = (),
 ) -> dict[str, Any]:
     """Content of `grid.json`. It holds no time, host or path: the same input gives the same bytes.
 
@@ -109,10 +108,8 @@ def make_header(
     ----------
     missing : mapping
         Treatment to {node index: reason}.
-    engine : mapping
-        Names and versions of what computed the widths.
-    builds : sequence of str
-        Keys of the finished builds.
+    builds : sequence of mapping
+        Of every finished build: its key, the engine, the first line, how many lines were computed and taken over.
     """
     return {
         "format": FORMAT_NAME,
@@ -135,9 +132,8 @@ def make_header(
             for name, nodes in missing.items()
         },
         "blocks": [vars(block) for block in blocks],
-        "engine": dict(engine),
         "atmospheres_identity": atmospheres_identity,
-        "builds": list(builds),
+        "builds": [dict(build) for build in builds],
     }
 
 

@@ -103,7 +103,6 @@ def synthetic_grid(
         node_axes=[Axis(n, UNITS[n], axes[n]) for n in ("teff", "logg", "mh")],
         line_axes=[Axis(n, UNITS[n], axes[n]) for n in ("vmic", "dA")],
         missing={"lte": reasons},
-        engine={"name": "synthetic formulas, invented for tests"},
         atmospheres_identity="0" * 64,
         description="Invented responses for tests",
     )

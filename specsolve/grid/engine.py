@@ -1,0 +1,126 @@
+"""What computes equivalent widths for a grid: one atmosphere in, the widths of all lines out."""
+
+from __future__ import annotations
+
+import os
+import threading
+import time
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from specsolve.constants import SOLAR_IRON
+from specsolve.errors import SpecsolveError
+from specsolve.grid.codes import encode
+from specsolve.lines import LineList
+
+FORMATION_SOURCES = ("formation", "matter", "lines/wavelengths.py", "constants.py", "data/matter")
+"""Program text and tables that decide a width."""
+
+SECONDS_PER_WIDTH = 6e-5
+"""Time of one width on one core, for estimates [s]."""
+
+WATCH_S = 0.5
+"""How often a worker looks whether its parent still lives [s]."""
+
+
+@dataclass(frozen=True)
+class Engine:
+    """A function that computes widths, and what identifies it.
+
+    Attributes
+    ----------
+    widths : callable
+        ``widths(atmosphere, lines, vmic, dA)`` -> log10(W/lambda), shape (n_lines, n_vmic, n_dA). A module-level
+        function, so that worker processes find it.
+    version : mapping
+        Names and hashes; equal versions give equal numbers.
+    """
+
+    widths: Callable[[Any, LineList, np.ndarray, np.ndarray], np.ndarray]
+    version: Mapping[str, str]
+
+
+def lte_widths(atmosphere, lines: LineList, vmic: np.ndarray, dA: np.ndarray) -> np.ndarray:
+    """log10(W/lambda) in LTE, shape (n_lines, n_vmic, n_dA); abundances are SOLAR_IRON + mh + dA.
+
+    Parameters
+    ----------
+    atmosphere : specsolve.atmosphere.model.Atmosphere
+    lines : LineList
+    vmic : ndarray, shape (n_vmic,)
+        [km/s].
+    dA : ndarray, shape (n_dA,)
+        [dex].
+    """
+    from specsolve.formation.equivalent_width import reduced_widths
+    from specsolve.matter.composition import composition_for
+
+    composition = composition_for(atmosphere.mh, atmosphere.alpha)
+    return reduced_widths(atmosphere, composition, lines, vmic, SOLAR_IRON + atmosphere.mh + dA)
+
+
+def lte_engine() -> Engine:
+    """The engine of the treatment "lte"."""
+    from specsolve import __version__
+    from specsolve.atmosphere.build import sources_hash
+
+    return Engine(
+        lte_widths, {"name": "lte", "specsolve": __version__, "sources_sha256": sources_hash(FORMATION_SOURCES)}
+    )
+
+
+ENGINES = {"lte": lte_engine}
+"""Engine of each treatment that can be built."""
+
+
+def codes_of_nodes(
+    engine: Engine, atmospheres: Sequence[Any], lines: LineList, vmic: np.ndarray, dA: np.ndarray
+) -> np.ndarray:
+    """Codes of all lines at some nodes, uint16 of shape (n_nodes, n_lines, n_vmic, n_dA); the task of a worker.
+
+    Raises
+    ------
+    SpecsolveError
+        Naming the node at which the engine failed.
+    """
+    codes = []
+    for atmosphere in atmospheres:
+        try:
+            codes.append(encode(engine.widths(atmosphere, lines, vmic, dA)))
+        except (ValueError, ArithmeticError) as error:
+            raise SpecsolveError(
+                f"no widths at teff {atmosphere.teff:g}, logg {atmosphere.logg:g}, mh {atmosphere.mh:g}: {error}"
+            ) from error
+    return np.stack(codes)
+
+
+def start_worker(parent: int) -> None:
+    """Make a worker process end soon after its parent is killed."""
+
+    def watch() -> None:
+        while os.getppid() == parent:
+            time.sleep(WATCH_S)
+        os._exit(1)
+
+    threading.Thread(target=watch, daemon=True).start()
+
+
+def estimated_seconds(n_lines: int, n_nodes: int, n_widths: int, workers: int = 1) -> float:
+    """Time to compute a grid [s].
+
+    Parameters
+    ----------
+    n_lines, n_nodes : int
+        New lines, and nodes that have atmospheres.
+    n_widths : int
+        Widths a line and node, n_vmic n_dA.
+
+    Examples
+    --------
+    >>> round(estimated_seconds(37, 1080, 64))
+    153
+    """
+    return n_lines * n_nodes * n_widths * SECONDS_PER_WIDTH / workers
