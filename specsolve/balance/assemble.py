@@ -266,11 +266,17 @@ def _decisions(problem: Problem, ranking: Ranking, lines: LineResults) -> tuple[
         else:
             predicted = float(lines.predicted_reduced_width[i])
             strength = lines.reason[i] in (REASON_PREDICTED, REASON_MEASURED)
-            value = (predicted if lines.reason[i] == REASON_PREDICTED else float(lines.reduced_width[i])) if strength else nan
+            value = (
+                (predicted if lines.reason[i] == REASON_PREDICTED else float(lines.reduced_width[i]))
+                if strength
+                else nan
+            )
             threshold = (low if value < low else high) if strength else nan
             entries.append(("line_cut", subject, value, threshold, "left out", str(lines.reason[i])))
     first = len(ranking.decisions)
     return ranking.decisions + tuple(
-        Decision(step=first + k, kind=kind, subject=subject, value=value, threshold=threshold, outcome=outcome, reason=reason)
+        Decision(
+            step=first + k, kind=kind, subject=subject, value=value, threshold=threshold, outcome=outcome, reason=reason
+        )
         for k, (kind, subject, value, threshold, outcome, reason) in enumerate(entries, start=1)
     )

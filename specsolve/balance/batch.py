@@ -81,7 +81,9 @@ def solve_stream(
         return
     blocks = [range(first, min(first + STARS_PER_BLOCK, len(stars))) for first in range(0, len(stars), STARS_PER_BLOCK)]
     futures = {
-        executor.submit(_solve_block, str(grid.directory), setting, [stars[i] for i in block], [known[i] for i in block]): block
+        executor.submit(
+            _solve_block, str(grid.directory), setting, [stars[i] for i in block], [known[i] for i in block]
+        ): block
         for block in blocks
     }
     try:
@@ -94,7 +96,9 @@ def solve_stream(
 
 
 def outside_of(star: Star, outside: Any) -> tuple[Outside, ...]:
-    """The Outside terms of one star from what `solve` accepts: one, several, a mapping by star name, or a function."""
+    """The Outside terms of one star from what `solve` accepts: one, several, a mapping by star name, or a
+    function.
+    """
     if outside is None:
         return ()
     if isinstance(outside, Outside):
@@ -127,7 +131,9 @@ def solve_star(star: Star, grid: Any, setting: Setting, known: tuple[Outside, ..
         return replace(failed, notes=(*failed.notes, traceback.format_exc()))
 
 
-def _solve_block(directory: str, setting: Setting, stars: list[Star], known: list[tuple[Outside, ...]]) -> list[Solution]:
+def _solve_block(
+    directory: str, setting: Setting, stars: list[Star], known: list[tuple[Outside, ...]]
+) -> list[Solution]:
     grid = _open_once(directory)
     return [solve_star(star, grid, setting, terms) for star, terms in zip(stars, known, strict=True)]
 

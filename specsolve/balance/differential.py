@@ -54,7 +54,8 @@ def reference_star(
     grid : ResponseGrid
     treatment : str
     parameters : mapping, optional
-        teff [K], logg, feh; `vmic` [km/s] too if it shall not be found. The Sun's nominal ones by default, if the star is called Sun.
+        teff [K], logg, feh; `vmic` [km/s] too if it shall not be found. The Sun's nominal ones by default,
+        if the star is called Sun.
     options : Options, optional
 
     Raises
@@ -94,12 +95,15 @@ def reference_star(
             minima.append(minimum)
     if not minima:
         raise ConvergenceError(
-            f"reference star '{star.name}': no microturbulence balances its lines at the given parameters; give its vmic."
+            f"reference star '{star.name}': no microturbulence balances its lines at the given "
+            "parameters; give its vmic."
         )
     best = min(minima, key=lambda m: m.objective)
     star_covariance, list_covariance = parameter_covariances(problem, best.state)
     vmic_variance = float(star_covariance[3, 3] + list_covariance[3, 3])
-    everything = problem.replace(options=Options.from_dict({**options.as_dict(), "worst_grade": WORST_GRADE_DIFFERENTIAL}))
+    everything = problem.replace(
+        options=Options.from_dict({**options.as_dict(), "worst_grade": WORST_GRADE_DIFFERENTIAL})
+    )
     abundance, d_theta, d_width, _ = everything.line_abundances(best.theta)
     known = np.isfinite(abundance)
     noise = (d_width * everything.inputs.sigma_logw)[known] ** 2
@@ -108,9 +112,8 @@ def reference_star(
     theta = best.theta
     # Both stars use one log gf, so it cancels: the zero point is kept on the list's log gf.
     values = (abundance + everything.log_gf_shift)[known] - theta[2]
-    words = (
-        f"lines of {star.name} at {theta[0]:.0f} K, {theta[1]:.3f}, {theta[2]:+.3f} ({source}), vmic {theta[3]:.3f} km/s"
-    )
+    words = f"lines of {star.name} at {theta[0]:.0f} K, {theta[1]:.3f}, {theta[2]:+.3f} ({source}), "
+        f"vmic {theta[3]:.3f} km/s"
     zero_points = ZeroPoints.reference(
         dict(zip(everything.keys[known].tolist(), values.tolist(), strict=True)), covariance, words
     )

@@ -2,7 +2,8 @@
 
     -2 ln L = sum_i [ (A_i - mu)^2 / v_i + ln v_i - 2 ln |dA_i / dlnW_i| ] + const
 
-with mu the common abundance. The last term is the Jacobian from abundances to widths: without it, corners of parameter space
+with mu the common abundance. The last term is the Jacobian from abundances to widths: without it, corners of
+parameter space
 where the widths hardly depend on the abundance would win.
 """
 
@@ -30,7 +31,8 @@ def minus_two_log_density(
     d_abundance_d_width : ndarray, shape (n_lines,)
         dA/dlog10(W).
     groups : ndarray of int, shape (n_lines,)
-        Lines of one group share a common abundance mu: all zero when both ions must agree, 0 and 1 where the gravity is fixed.
+        Lines of one group share a common abundance mu: all zero when both ions must agree, 0 and 1 where the
+        gravity is fixed.
 
     Returns
     -------

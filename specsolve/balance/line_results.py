@@ -9,9 +9,11 @@ import numpy as np
 
 @dataclass(frozen=True, kw_only=True)
 class LineResults:
-    """Per-line numbers of one star, all arrays of shape (n_lines,) in canonical order (ion, wavelength, excitation potential).
+    """Per-line numbers of one star, all arrays of shape (n_lines,) in canonical order (ion, wavelength, excitation
+    potential).
 
-    Lines of the input that never reached the solve (not in the grid, bad width, ...) are here too, unused, with the reason.
+    Lines of the input that never reached the solve (not in the grid, bad width, ...) are here too, unused, with the
+    reason.
 
     Attributes
     ----------
@@ -24,7 +26,8 @@ class LineResults:
     excitation_potential : ndarray
         [eV].
     log_gf, log_gf_error : ndarray
-        Value used and its error [dex]; the error is nan where the source gives none (it is then part of the line-to-line term).
+        Value used and its error [dex]; the error is nan where the source gives none (it is then part of the
+        line-to-line term).
     equivalent_width, equivalent_width_error : ndarray
         [mA]; `error_assumed` marks errors that the input did not give.
     error_assumed : ndarray of bool
@@ -35,7 +38,8 @@ class LineResults:
     predicted_reduced_width : ndarray
         log10 of the same over the wavelength; the cuts act on this.
     strength : ndarray
-        The strength axis of the plane (mixture of measured and predicted reduced width, uncorrelated with the residual).
+        The strength axis of the plane (mixture of measured and predicted reduced width, uncorrelated with the
+        residual).
     abundance : ndarray
         A(Fe) [dex] at the solution.
     abundance_error : ndarray

@@ -33,7 +33,8 @@ def line_results(problem: Problem, search: Search | None, item: FoundMinimum | N
         columns = {
             name: spread(blank)
             for name in (
-                "predicted_width", "predicted_reduced_width", "strength", "abundance", "abundance_error", "width_error_dex",
+                "predicted_width", "predicted_reduced_width", "strength", "abundance", "abundance_error",
+                "width_error_dex",
                 "relative_abundance", "deviation", "standardized", "d_abundance_d_width",
             )
         }  # fmt: skip
@@ -75,7 +76,9 @@ def line_results(problem: Problem, search: Search | None, item: FoundMinimum | N
     error = star.log_gf_error.copy()
     log_gf[rows], error[rows] = problem.log_gf, problem.log_gf_error
     with np.errstate(invalid="ignore", divide="ignore"):
-        reduced = np.log10(np.where(star.equivalent_width > 0.0, star.equivalent_width, np.nan) / (star.wavelength_air * 1e3))
+        reduced = np.log10(
+            np.where(star.equivalent_width > 0.0, star.equivalent_width, np.nan) / (star.wavelength_air * 1e3)
+        )
     return LineResults(
         key=np.where(found, lines.key[place], ""),
         wavelength_air=np.where(found, lines.wavelength_air[place], star.wavelength_air),

@@ -69,8 +69,10 @@ def whitened_system(problem: Problem, state: BalanceState) -> tuple[np.ndarray, 
 def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = None) -> Minimum:
     """Damped Gauss-Newton from one starting point.
 
-    Each step refreshes weights, line-to-line term and strength axis, so that the end is their common fixed point. A step is accepted if
-    the objective, with the covariance of the point it starts from, does not grow; otherwise it is shortened and turned
+    Each step refreshes weights, line-to-line term and strength axis, so that the end is their common fixed point. A
+    step is accepted if
+    the objective, with the covariance of the point it starts from, does not grow; otherwise it is shortened and
+    turned
     towards the gradient (Levenberg). Parameters that leave the box of the grid stay on its face.
 
     Parameters
@@ -90,7 +92,8 @@ def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = Non
         return Minimum(theta, None, np.inf, False, nowhere, 0, failure)
     free, damping, converged = problem.free, 0.0, False
     iteration, at_bound = 0, nowhere
-    for iteration in range(1, problem.options.max_iterations + 1):
+    for step_number in range(1, problem.options.max_iterations + 1):
+        iteration = step_number
         z, jacobian = whitened_system(problem, state)
         scaled = jacobian * STEP_UNIT
         gradient = scaled.T @ z
@@ -125,7 +128,8 @@ def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = Non
     objective = float(z @ z)
     on_face = (theta <= low + ON_FACE * STEP_UNIT) | (theta >= high - ON_FACE * STEP_UNIT)
     stopped = np.zeros(4, dtype=bool)
-    # A root that happens to lie on a face is not stopped by it. At vmic = 0 the widths are even in vmic: every slope vanishes.
+    # A root that happens to lie on a face is not stopped by it. At vmic = 0 the widths are even in vmic: every
+    # slope vanishes.
     stopped[free] = on_face[free] & (objective > ROOT_OBJECTIVE)
     return Minimum(theta, state, objective, converged, stopped, iteration)
 

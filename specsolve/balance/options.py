@@ -15,16 +15,19 @@ class Options:
     loss : str
         "huber" (k 1.345), "student" (nu 4) or "none".
     reduced_width_range : (float, float)
-        Cut on the PREDICTED log10(W/lambda); weaker lines are noise, stronger ones damping (common practice, no source).
+        Cut on the PREDICTED log10(W/lambda); weaker lines are noise, stronger ones damping (common practice, no
+        source).
     excitation_range : (float, float)
         [eV].
     wavelength_range : (float, float)
         [Angstrom].
     worst_grade : int or None
-        Lines whose log gf has a worse (larger) grade are left out; ungraded lines (0) stay, and so do lines whose log gf comes with the
+        Lines whose log gf has a worse (larger) grade are left out; ungraded lines (0) stay, and so do lines whose
+        log gf comes with the
         star. None: 3, in differential work 4 (there log gf cancels).
     fe2_scale : str
-        "default" or "alternative": the column of the line list that Fe II log gf come from (lines without a second value keep the first).
+        "default" or "alternative": the column of the line list that Fe II log gf come from (lines without a second
+        value keep the first).
     near_equal : float
         Candidates with 2 (ln L_best - ln L) below this are near-equal (6 = odds 20 : 1).
     vmic_relation : bool

@@ -24,7 +24,8 @@ class Outside:
         Each entry a float, or a function of theta = (teff, logg, feh, vmic) that returns the expected value of the
         parameter there and its gradient, shape (4,); so a gravity from a parallax can follow the temperature.
     covariance : ndarray, shape (n, n)
-        Zero variance = fixed: the parameter's own residual is then removed from the solve. A fixed entry must be a number.
+        Zero variance = fixed: the parameter's own residual is then removed from the solve. A fixed entry must be a
+        number.
     source : str
         Where it comes from.
 
@@ -98,7 +99,9 @@ class Outside:
         )
 
     def whitened(self, theta: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Whitened differences L^-1 (theta - mean), shape (n,), and their Jacobian, shape (n, 4); sum of squares is the term."""
+        """Whitened differences L^-1 (theta - mean), shape (n,), and their Jacobian, shape (n, 4); sum of squares is
+        the term.
+        """
         free = [i for i, variance in enumerate(np.diag(self.covariance)) if variance > 0.0]
         if not free:
             return np.zeros(0), np.zeros((0, len(PARAMETER_NAMES)))

@@ -1,4 +1,6 @@
-"""Our own solar zero: A_sun(Fe I) and A_sun(Fe II) from published solar widths on the star's own lines, grid and treatment."""
+"""Our own solar zero: A_sun(Fe I) and A_sun(Fe II) from published solar widths on the star's own lines, grid and
+treatment.
+"""
 
 from __future__ import annotations
 
@@ -45,7 +47,9 @@ class SolarLines:
     abundance: Mapping[str, float] = field(default_factory=dict)
     vmic: float = float("nan")
 
-    def means(self, keys, log_gf_shift: np.ndarray, is_fe2: np.ndarray, weights: np.ndarray) -> tuple[tuple[float, int], ...]:
+    def means(
+        self, keys, log_gf_shift: np.ndarray, is_fe2: np.ndarray, weights: np.ndarray
+    ) -> tuple[tuple[float, int], ...]:
         """(A_sun, number of lines) of each ion, over the lines in common, with the star's weights and log gf.
 
         nan where fewer than 5 Fe I or 2 Fe II lines are in common.
@@ -81,7 +85,9 @@ def solar_star() -> Star:
 
 
 def solar_lines(grid: Any, treatment: str, options: Options | None = None) -> SolarLines:
-    """Line abundances of the Sun at its nominal parameters, vmic from the lines themselves; empty if the grid has too few."""
+    """Line abundances of the Sun at its nominal parameters, vmic from the lines themselves; empty if the grid has
+    too few.
+    """
     options = options or Options()
     problem = Problem(
         star=solar_star(),

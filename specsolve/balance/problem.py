@@ -1,4 +1,6 @@
-"""`Problem`: one star, one grid, one treatment and what is known from elsewhere, with the pure functions of the balance."""
+"""`Problem`: one star, one grid, one treatment and what is known from elsewhere, with the pure functions of the
+balance.
+"""
 
 from __future__ import annotations
 
@@ -93,7 +95,9 @@ class Problem:
 
     @cached_property
     def reasons(self) -> np.ndarray:
-        """Why each line of the star cannot take part whatever the parameters are; empty if it can. Shape (n_star_lines,)."""
+        """Why each line of the star cannot take part whatever the parameters are; empty if it can. Shape
+        (n_star_lines,).
+        """
         reason = self.match.reason.copy()
         lines, options = self.grid.lines, self.options
         found = self.match.index >= 0

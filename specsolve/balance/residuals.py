@@ -4,10 +4,12 @@ With weights frozen, the plane through Fe I,
 
     y = c + b_e (chi - <chi>) + b_s (x - <x>),
 
-and the weighted means are linear in the line abundances y, so that ``r = G y - mh e`` and ``C = G V G^T``. Everything else in
+and the weighted means are linear in the line abundances y, so that ``r = G y - mh e`` and ``C = G V G^T``.
+Everything else in
 this room (Newton steps, covariances, the influence of a line) is algebra on G.
 
-Order of the residuals: excitation_slope [dex/eV], ionization_offset [dex], metallicity_offset [dex], strength_slope [dex/dex], which is
+Order of the residuals: excitation_slope [dex/eV], ionization_offset [dex], metallicity_offset [dex], strength_slope
+[dex/dex], which is
 the order of the parameters (teff, logg, feh, vmic) that they fix.
 """
 
@@ -57,7 +59,8 @@ def plane_operator(excitation_potential: np.ndarray, strength: np.ndarray, weigh
     Returns
     -------
     operator : ndarray, shape (3, n_lines)
-        Rows that applied to abundances give: the weighted mean, the slope against excitation potential at fixed strength, the slope
+        Rows that applied to abundances give: the weighted mean, the slope against excitation potential at fixed
+        strength, the slope
         against strength at fixed excitation potential. A slope whose axis has no spread, or for which fewer than
         three lines carry weight, is nan; the other slope is then that of a line, not of a plane.
 
@@ -129,7 +132,9 @@ def balance_operator(
 
 
 def residual_vector(operator: np.ndarray, relative_abundance: np.ndarray, mh: float) -> np.ndarray:
-    """``r = G y - mh e_metallicity``, shape (4,); y is abundance minus zero point [dex], nan allowed where G is zero."""
+    """``r = G y - mh e_metallicity``, shape (4,); y is abundance minus zero point [dex], nan allowed where G is
+    zero.
+    """
     y = np.where(np.any(operator != 0.0, axis=0), relative_abundance, 0.0)
     residuals = operator @ y
     residuals[METALLICITY] -= mh

@@ -55,7 +55,8 @@ def huber_consistency(k: float = HUBER_K) -> float:
 def line_to_line_term(deviation: np.ndarray, variances: np.ndarray, n_parameters: int) -> float:
     """The term s [dex] that the known errors lack, from the deviations of lines about plane or mean.
 
-    Solves ``sum min(z_i^2, k^2) = (n - p) E[min(z^2, k^2)]`` with ``z_i^2 = deviation_i^2 / (variance_i + s^2)``: Huber's
+    Solves ``sum min(z_i^2, k^2) = (n - p) E[min(z^2, k^2)]`` with ``z_i^2 = deviation_i^2 / (variance_i + s^2)``:
+    Huber's
     second proposal for a scale, so that blended lines do not set it.
 
     Parameters
@@ -106,7 +107,9 @@ def line_to_line_term(deviation: np.ndarray, variances: np.ndarray, n_parameters
     return math.sqrt(0.5 * (low + high))
 
 
-def line_to_line_terms(is_fe2: np.ndarray, deviation: np.ndarray, variances: np.ndarray, used: np.ndarray) -> np.ndarray:
+def line_to_line_terms(
+    is_fe2: np.ndarray, deviation: np.ndarray, variances: np.ndarray, used: np.ndarray
+) -> np.ndarray:
     """s [dex] of each ion, shape (2,); pooled over the ions when the second has fewer than `FEW_FE2_LINES` lines."""
     first, second = used & ~is_fe2, used & is_fe2
     n_first, n_second = int(first.sum()), int(second.sum())

@@ -1,6 +1,7 @@
 """Coarse look at the whole grid: residual vectors at every node, and the starting points that they suggest.
 
-At the nodes nothing is interpolated but the curve of growth (straight lines along dA); lines whose abundance leaves the table are
+At the nodes nothing is interpolated but the curve of growth (straight lines along dA); lines whose abundance leaves
+the table are
 continued with the last slope. This is only for starting points: a candidate never rests on a continued abundance.
 """
 
@@ -115,7 +116,8 @@ def _around(x: np.ndarray, value: float) -> tuple[tuple[int, ...], tuple[float, 
 def _invert_linear(codes: np.ndarray, target: np.ndarray, spacing: np.ndarray) -> np.ndarray:
     """Offset dA at which straight lines between nodes reach the width; continued beyond both ends.
 
-    codes (n_nodes, n_lines, n_vmic, n_dA), target (n_lines,) in code units; result (n_nodes, n_lines, n_vmic); nan where missing.
+    codes (n_nodes, n_lines, n_vmic, n_dA), target (n_lines,) in code units; result (n_nodes, n_lines, n_vmic); nan
+    where missing.
     """
     below = (codes <= target[None, :, None, None]).sum(axis=-1)
     upper = np.clip(below, 1, codes.shape[-1] - 1)
@@ -154,16 +156,16 @@ def scan_nodes(problem: Problem, allowed: np.ndarray) -> Scan:
     for axis, name in enumerate(PARAMETER_NAMES):
         if name in problem.fixed:
             indices, shares = _around(positions[axis], problem.fixed[name])
-            full = sum(
-                share * np.take(full, [index], axis=axis) for index, share in zip(indices, shares, strict=True)
-            )
+            full = sum(share * np.take(full, [index], axis=axis) for index, share in zip(indices, shares, strict=True))
             positions[axis] = np.array([problem.fixed[name]])
     covariance = residual_covariance(operator, variances)[np.ix_(active, active)]
     return Scan(tuple(positions), full, np.linalg.inv(covariance), active)
 
 
 def seeds_from_scan(problem: Problem, scan: Scan) -> list[Seed]:
-    """Starting points: cells in which all residuals can vanish, and local minima of chi2 over the nodes; best first."""
+    """Starting points: cells in which all residuals can vanish, and local minima of chi2 over the nodes; best
+    first.
+    """
     seeds = _cells_with_roots(scan) + _lattice_minima(problem, scan)
     step = np.array([np.median(np.diff(x)) if x.size > 1 else 1.0 for x in scan.positions])
     merged: list[Seed] = []

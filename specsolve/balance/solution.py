@@ -1,6 +1,7 @@
 """What one solve hands back: the frozen `Solution` and its parts.
 
-Everything that a table, a figure or a sheet shows is here as plain floats, strings and arrays; nothing is computed on demand from
+Everything that a table, a figure or a sheet shows is here as plain floats, strings and arrays; nothing is computed
+on demand from
 the grid, so a `Solution` can be sent between processes and written without the store that made it.
 """
 
@@ -169,7 +170,8 @@ class Decision:
     ----------
     step : int
     kind : str
-        "search", "set_aside", "likelihood", "vmic_relation", "choose", "tied", "line_cut", "down_weight", "fix", "outside".
+        "search", "set_aside", "likelihood", "vmic_relation", "choose", "tied", "line_cut", "down_weight", "fix",
+        "outside".
     subject : str
         The candidate ("candidate 1"), line key or parameter concerned.
     value, threshold : float
@@ -216,13 +218,16 @@ class Solution:
     flags : tuple of str
         Informative flags (few_fe2_lines, at_grid_edge, errors_assumed, fe2_blends, lte_metal_poor, ...).
     parameters : ndarray, shape (4,)
-        teff [K], logg [dex cgs], feh [dex], vmic [km/s]; nan if unsolved. With feh fixed this is the fixed value and the lines' own
+        teff [K], logg [dex cgs], feh [dex], vmic [km/s]; nan if unsolved. With feh fixed this is the fixed value
+        and the lines' own
         metallicity stands in `fe1`/`fe2` and in the removed residual.
     fixed : tuple of str
         Names of fixed parameters.
     cov_star, cov_list : ndarray, shape (4, 4)
-        Covariances in the order of PARAMETER_NAMES: the star's own errors, and those shared by all stars on one line list
-        (log gf; in differential work the reference star). Rows of fixed parameters are zero. nan where undefined, with a flag.
+        Covariances in the order of PARAMETER_NAMES: the star's own errors, and those shared by all stars on one
+        line list
+        (log gf; in differential work the reference star). Rows of fixed parameters are zero. nan where undefined,
+        with a flag.
     systematics : mapping of str to ndarray, shape (4,)
         Shift of the parameters for each systematic term, apart from both covariances; empty where none was asked for.
     residuals : ndarray, shape (4,)

@@ -61,14 +61,16 @@ def solve(
     treatment : str
         One of the grid's treatments.
     reference : str or Star, optional
-        Reference star for differential work: a name in `source` (then left out of the result's list), "Sun" for the packaged solar
+        Reference star for differential work: a name in `source` (then left out of the result's list), "Sun" for the
+        packaged solar
         widths if the table has no such star, or a `Star`.
     reference_parameters : mapping, optional
         Its teff, logg, feh (and vmic, if it shall not be found); not needed for the Sun.
     fix : mapping, optional
         Parameter name to value (a number in K, dex, dex, km/s, or a Quantity) for all stars.
     outside : optional
-        What else is known: an `Outside`, several of them, a mapping from star name to either, or a function of the star.
+        What else is known: an `Outside`, several of them, a mapping from star name to either, or a function of the
+        star.
     options : Options, optional
     columns, ions : mapping, optional
         Other headings and spellings, see `specsolve.star_table.read_stars`.
@@ -83,7 +85,8 @@ def solve(
     Raises
     ------
     SpecsolveError
-        If input, grid or reference star cannot be used. A star that cannot be solved is a `Solution` whose status says so.
+        If input, grid or reference star cannot be used. A star that cannot be solved is a `Solution` whose status
+        says so.
 
     Examples
     --------
@@ -103,7 +106,9 @@ def solve(
     zero_points = ZeroPoints.solar()
     if reference is not None:
         chosen, stars = _split_reference(reference, stars)
-        zero_points = reference_star(chosen, grid, treatment, bare_parameters(reference_parameters), options).zero_points
+        zero_points = reference_star(
+            chosen, grid, treatment, bare_parameters(reference_parameters), options
+        ).zero_points
     setting = Setting(
         treatment=treatment,
         fixed=fixed_outside(fix),
@@ -125,7 +130,9 @@ def solve_problem(problem: Problem, sun: SolarLines | None = None) -> Solution:
         For our own solar zero.
     """
     if problem.match.looks_like_vacuum:
-        return unsolved(problem, "the wavelengths look like vacuum wavelengths: convert them to air", flags=("vacuum_wavelengths",))
+        return unsolved(
+            problem, "the wavelengths look like vacuum wavelengths: convert them to air", flags=("vacuum_wavelengths",)
+        )
     trouble = _fixed_outside_grid(problem)
     if trouble:
         return unsolved(problem, trouble, status="outside_grid", flags=("outside_grid",))
@@ -143,7 +150,9 @@ def solve_problem(problem: Problem, sun: SolarLines | None = None) -> Solution:
 
 
 def other_fe2_scale(problem: Problem, start: np.ndarray) -> np.ndarray | None:
-    """Parameters of the candidate when Fe II log gf come from the other column; None where there is none or it does not matter."""
+    """Parameters of the candidate when Fe II log gf come from the other column; None where there is none or it does
+    not matter.
+    """
     if problem.zero_points.differential or problem.options.fe2_scale != "default":
         return None
     lines, place = problem.grid.lines, problem.line_indices
@@ -190,7 +199,9 @@ def bare_parameters(values: Mapping[str, Any] | None) -> dict[str, float] | None
                 value = value.to_value(unit) if unit else getattr(value, "value", value)
             number = float(value)
         except (TypeError, ValueError) as error:
-            raise UsageError(f"{name} = {value!r} is not a number in {PARAMETER_UNITS[PARAMETER_NAMES.index(name)]}.") from error
+            raise UsageError(
+                f"{name} = {value!r} is not a number in {PARAMETER_UNITS[PARAMETER_NAMES.index(name)]}."
+            ) from error
         if not np.isfinite(number):
             raise UsageError(f"{name} = {number} is not a finite number.")
         out[name] = number
@@ -223,7 +234,9 @@ def _split_reference(reference: str | Star, stars: list[Star]) -> tuple[Star, li
     if reference.strip().lower() == SUN_NAME.lower():
         return solar_star(), stars
     names = ", ".join(star.name for star in stars[:10])
-    raise InputError(f"the reference star '{reference}' is not in the table; it has {names}{', ...' if len(stars) > 10 else ''}.")
+    raise InputError(
+        f"the reference star '{reference}' is not in the table; it has {names}{', ...' if len(stars) > 10 else ''}."
+    )
 
 
 def _fixed_outside_grid(problem: Problem) -> str:

@@ -145,7 +145,9 @@ class Match:
 
 
 def nearest_lines(wavelength_air, ion, excitation_potential, list_wavelength, list_ion, list_energy) -> np.ndarray:
-    """Index of the nearest line of the same ion within 0.05 Angstrom (and 0.02 eV where an energy is given), else -1."""
+    """Index of the nearest line of the same ion within 0.05 Angstrom (and 0.02 eV where an energy is given), else
+    -1.
+    """
     index = np.full(len(wavelength_air), -1, dtype=np.int64)
     for name in np.unique(ion):
         of_list = np.flatnonzero(list_ion == name)

@@ -1,6 +1,7 @@
 """The balance at one point: line abundances turned into residuals with weights that have settled.
 
-At a given theta the robust weights w, the line-to-line term s and the strength axis x depend on each other; they are iterated to a
+At a given theta the robust weights w, the line-to-line term s and the strength axis x depend on each other; they
+are iterated to a
 fixed point here, which needs no further look at the grid. NumPy reference; `kernel.py` holds the compiled twin.
 """
 

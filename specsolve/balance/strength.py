@@ -1,7 +1,8 @@
 """The strength axis of the plane, and the errors of a line.
 
 Measured widths carry the same noise as the abundances that come from them, so a slope against them is biased and the
-microturbulence comes out too high (Magain 1984, A&A 134, 189); predicted widths carry the log gf errors instead, which biases it downwards
+microturbulence comes out too high (Magain 1984, A&A 134, 189); predicted widths carry the log gf errors instead,
+which biases it downwards
 where those dominate. The mixture
 
     x = (x_measured s_d^2 + x_predicted s_W^2) / (s_W^2 + s_d^2),    s_d = sigma_gf dlogW/dA,   s_W = sigma(log W)
@@ -91,7 +92,8 @@ def strength_axis(
     variances : LineVariances
         By origin, at the same point.
     sigma_gf : ndarray, shape (n_lines,)
-        Error of log gf; where it is nan the line-to-line term stands for it, elsewhere that term counts as error of the width.
+        Error of log gf; where it is nan the line-to-line term stands for it, elsewhere that term counts as error of
+        the width.
     differential : bool
         log gf cancels: the line-to-line term counts as error of the width for all lines.
     """

@@ -1,6 +1,7 @@
 """Systematic terms that can be had from one solve, kept apart from both covariances.
 
-Terms that need other stores (blanketing multiplier, [alpha/Fe], treatment) are differences of two solves and are not made here.
+Terms that need other stores (blanketing multiplier, [alpha/Fe], treatment) are differences of two solves and are
+not made here.
 """
 
 from __future__ import annotations

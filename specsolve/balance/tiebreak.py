@@ -1,8 +1,10 @@
 """Which candidate is reported, by a rule in four steps, each recorded.
 
-1. Candidates outside the grid, not converged, or beside missing nodes are set aside (kept, flagged). Outside knowledge is in already.
+1. Candidates outside the grid, not converged, or beside missing nodes are set aside (kept, flagged). Outside
+knowledge is in already.
 2. Near-equal means 2 (ln L_best - ln L) < 6, odds of 20 : 1. If none is near the best, the best is it.
-3. Else a published vmic(teff, logg) relation enters as a Gaussian; it decides only beyond the same 6, and is skipped if any of the
+3. Else a published vmic(teff, logg) relation enters as a Gaussian; it decides only beyond the same 6, and is
+skipped if any of the
    candidates lies outside its range.
 4. Else the star is tied: all near-equal candidates with odds proportional to L x prior x sqrt|Cov|.
 """
@@ -85,25 +87,50 @@ def rank(problem: Problem, search: Search) -> Ranking:
     status, by_relation, chosen = SOLVED, False, 0
     odds = {0: 1.0}
     if not eligible:
-        log.append(("choose", _name(0), rows[0].chi2, float("nan"), "reported", "every candidate is set aside; the best of them"))
+        log.append(
+            (
+                "choose",
+                _name(0),
+                rows[0].chi2,
+                float("nan"),
+                "reported",
+                "every candidate is set aside; the best of them",
+            )
+        )
     else:
         deltas = {i: 2.0 * (_posterior(problem, rows[0]) - _posterior(problem, rows[i])) for i in eligible}
         near = [i for i in eligible if deltas[i] < problem.options.near_equal]
         for i in eligible[1:]:
             word = "near-equal" if i in near else "rejected"
             log.append(
-                ("likelihood", _name(i), deltas[i], problem.options.near_equal, word, "2 (ln L_best - ln L) on common lines")
+                (
+                    "likelihood",
+                    _name(i),
+                    deltas[i],
+                    problem.options.near_equal,
+                    word,
+                    "2 (ln L_best - ln L) on common lines",
+                )
             )
         odds = _odds(problem, rows, near)
         if len(near) == 1:
-            log.append(("choose", _name(0), 0.0, problem.options.near_equal, "chosen", "no other candidate is near the best"))
+            log.append(
+                ("choose", _name(0), 0.0, problem.options.near_equal, "chosen", "no other candidate is near the best")
+            )
         else:
             chosen, by_relation, entry = _relation_step(problem, rows, near)
             log.append(entry)
             if chosen < 0:
                 status, chosen = TIED, 0
                 log.append(
-                    ("tied", "star", float(len(near)), 1.0, "tied", "the rule cannot separate the near-equal candidates")
+                    (
+                        "tied",
+                        "star",
+                        float(len(near)),
+                        1.0,
+                        "tied",
+                        "the rule cannot separate the near-equal candidates",
+                    )
                 )
     best = rows[chosen]
     candidates = [
@@ -121,7 +148,9 @@ def rank(problem: Problem, search: Search) -> Ranking:
         log = [(kind, names.get(subject, subject), *rest) for kind, subject, *rest in log]
     candidates = [replace(row, index=i) for i, row in enumerate(candidates)]
     decisions = tuple(
-        Decision(step=step, kind=kind, subject=subject, value=value, threshold=threshold, outcome=outcome, reason=reason)
+        Decision(
+            step=step, kind=kind, subject=subject, value=value, threshold=threshold, outcome=outcome, reason=reason
+        )
         for step, (kind, subject, value, threshold, outcome, reason) in enumerate(log, start=1)
     )
     return Ranking(found, tuple(candidates), decisions, status, by_relation)
@@ -192,13 +221,17 @@ def _odds(problem: Problem, rows: list[Candidate], near: list[int]) -> dict[int,
 def _relation_step(problem: Problem, rows: list[Candidate], near: list[int]) -> tuple[int, bool, tuple]:
     limit = problem.options.near_equal
     if not _relation_applies(problem, rows, near):
-        return -1, False, (
-            "vmic_relation",
-            "star",
-            float("nan"),
-            limit,
-            "skipped",
-            "switched off, vmic fixed, or a near-equal candidate lies outside the range of the relation",
+        return (
+            -1,
+            False,
+            (
+                "vmic_relation",
+                "star",
+                float("nan"),
+                limit,
+                "skipped",
+                "switched off, vmic fixed, or a near-equal candidate lies outside the range of the relation",
+            ),
         )
     scores, sources = {}, set()
     for i in near:

@@ -1,4 +1,6 @@
-"""Covariances of the parameters, the star's own part and the list's part apart; sensitivities; influence of single lines."""
+"""Covariances of the parameters, the star's own part and the list's part apart; sensitivities; influence of single
+lines.
+"""
 
 from __future__ import annotations
 
@@ -16,7 +18,8 @@ from .state import BalanceState
 SENSITIVITY_SHIFTS = {"teff": 100.0, "logg": 0.3, "feh": 0.2, "vmic": 0.2}
 # A direction of parameter space whose curvature is below this share of the largest is undetermined.
 SINGULAR_SHARE = 1e-12
-# Variance of Huber's estimate over that of weighted least squares on the same normal errors, E[psi^2]/E[psi']^2 at k = 1.345,
+# Variance of Huber's estimate over that of weighted least squares on the same normal errors, E[psi^2]/E[psi']^2 at
+# k = 1.345,
 # over the variance that frozen weights suggest, E[w^2]/E[w]^2 (both from the normal distribution).
 HUBER_INEFFICIENCY = 1.04
 
@@ -24,8 +27,10 @@ HUBER_INEFFICIENCY = 1.04
 def parameter_covariances(problem: Problem, state: BalanceState) -> tuple[np.ndarray, np.ndarray]:
     """Cov_star and Cov_list, shape (4, 4) each; rows of fixed parameters are zero; nan where undetermined.
 
-    The estimate moves by ``d theta = -K d r``, ``K = H^-1 J^T C^-1``, ``H = J^T C^-1 J + Lambda`` with the precision Lambda of the
-    Outside terms. So ``Cov_list = K C_list K^T`` and ``Cov_star = K C_star K^T + H^-1 Lambda H^-1``; where residuals and
+    The estimate moves by ``d theta = -K d r``, ``K = H^-1 J^T C^-1``, ``H = J^T C^-1 J + Lambda`` with the
+    precision Lambda of the
+    Outside terms. So ``Cov_list = K C_list K^T`` and ``Cov_star = K C_star K^T + H^-1 Lambda H^-1``; where
+    residuals and
     free parameters are equally many, K is the inverse Jacobian.
     """
     free = problem.free
@@ -57,7 +62,9 @@ def parameter_covariances(problem: Problem, state: BalanceState) -> tuple[np.nda
 
 
 def parameter_gain(problem: Problem, state: BalanceState) -> np.ndarray:
-    """d theta / d r, shape (4, 4): minus K of `parameter_covariances`, zero for fixed parameters and removed residuals."""
+    """d theta / d r, shape (4, 4): minus K of `parameter_covariances`, zero for fixed parameters and removed
+    residuals.
+    """
     free = problem.free
     rows = np.flatnonzero(problem.active & np.isfinite(state.residuals))
     gain = np.zeros((4, 4))
@@ -123,5 +130,7 @@ def sensitivities(problem: Problem, state: BalanceState) -> tuple[Sensitivity, .
                 abundance = np.full(weights.shape, np.nan)
             if np.isfinite(abundance[weights > 0.0]).all() and both.any():
                 difference = np.where(both, common_abundances(is_fe2, abundance, weights) - here, np.nan)
-            table.append(Sensitivity(parameter=name, shift=shift, d_fe1=float(difference[0]), d_fe2=float(difference[1])))
+            table.append(
+                Sensitivity(parameter=name, shift=shift, d_fe1=float(difference[0]), d_fe2=float(difference[1]))
+            )
     return tuple(table)

@@ -35,7 +35,10 @@ def validity_statements(parameters: np.ndarray, treatment: str) -> tuple[tuple[s
         table.append(("plane_parallel", "log g < 1.5: plane-parallel atmospheres err by 0.03-0.1 dex"))
     if teff < K_DWARF_TEFF_K and logg > K_DWARF_LOGG:
         table.append(
-            ("fe2_blends", "K dwarf (< 5000 K, log g > 4.3): blends raise Fe II; take the gravity from elsewhere and fix it")
+            (
+                "fe2_blends",
+                "K dwarf (< 5000 K, log g > 4.3): blends raise Fe II; take the gravity from elsewhere and fix it",
+            )
         )
     if feh < METAL_POOR_FEH and treatment == "lte":
         table.append(("lte_metal_poor", "[Fe/H] < -1.5 in LTE: teff and log g are physically biased low"))
@@ -43,8 +46,8 @@ def validity_statements(parameters: np.ndarray, treatment: str) -> tuple[tuple[s
         table.append(
             (
                 "wants_outside_teff",
-                "cool metal-poor giant: the excitation balance is unsafe in 1D even beyond LTE; give a temperature from elsewhere "
-                "(Bergemann et al. 2012)",
+                "cool metal-poor giant: the excitation balance is unsafe in 1D even beyond LTE; "
+                "give a temperature from elsewhere (Bergemann et al. 2012)",
             )
         )
     if feh < NLTE_UNVALIDATED_FEH and treatment != "lte":

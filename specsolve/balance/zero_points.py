@@ -64,7 +64,9 @@ class ZeroPoints:
         )
 
     def for_lines(self, keys) -> tuple[np.ndarray, np.ndarray | None]:
-        """Zero points of these lines, shape (n,), nan where there is none; and their covariance (n, n), or None if exact."""
+        """Zero points of these lines, shape (n,), nan where there is none; and their covariance (n, n), or None if
+        exact.
+        """
         if self.keys is None:
             return np.full(len(keys), float(self.values)), None
         place = {key: i for i, key in enumerate(self.keys)}
