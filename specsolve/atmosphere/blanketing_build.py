@@ -6,6 +6,7 @@
 from __future__ import annotations
 
 import argparse
+import os
 from pathlib import Path
 
 import numpy as np
@@ -179,7 +180,10 @@ def main(arguments: list[str] | None = None) -> None:
     options = parser.parse_args(arguments)
     options.output.mkdir(parents=True, exist_ok=True)
     for mh in options.mh or PACKAGED_MH:
-        save_blanketing(build(mh, n_samples=options.samples), table_path(mh, options.output))
+        path = table_path(mh, options.output)
+        aside = path.with_name(f".{path.name}")
+        save_blanketing(build(mh, n_samples=options.samples), aside)
+        os.replace(aside, path)
 
 
 if __name__ == "__main__":

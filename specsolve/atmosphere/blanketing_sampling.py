@@ -39,13 +39,14 @@ OSCILLATOR_CM2_HZ = np.pi * ELECTRON_CHARGE_ESU**2 / (ELECTRON_MASS_G * LIGHT_SP
 UNSOELD_FACTOR = 17.0
 #: C6 = 0.3e-30 Z^2 [1/(I - E_up)^2 - 1/(I - E_low)^2], energies in eV (same source).
 UNSOELD_C6 = 0.3e-30
-#: Factor on that gamma_6 for neutral atoms: median over the lines of each element (Ca: its strong lines) tabulated by
-#: Barklem, Piskunov & O'Mara 2000, A&AS 142, 467, at 10 000 K; other elements as iron. For ions 1 (Mg II 1.02, Ca II 0.91 there).
+#: Factor on that gamma_6: median over the lines of an ion (Na I, Ca I: their strong lines) of the widths at 10 000 K tabulated by
+#: Barklem, Piskunov & O'Mara 2000, A&AS 142, 467, and for Fe II by Barklem & Aspelund-Johansson 2005, A&A 435, 373.
 HYDROGEN_FACTORS = {
-    "Li": 2.1, "C": 2.1, "N": 1.9, "Na": 2.4, "Mg": 2.4, "Al": 2.2, "Si": 2.2, "P": 1.6, "S": 2.2, "K": 2.4, "Ca": 1.8,
+    "Li I": 2.1, "C I": 2.1, "N I": 1.9, "Na I": 1.7, "Mg I": 2.4, "Mg II": 1.6, "Al I": 2.2, "Si I": 2.2, "P I": 1.6,
+    "S I": 2.2, "K I": 2.4, "Ca I": 1.8, "Ca II": 1.5, "Fe I": 1.4, "Fe II": 0.9,
 }  # fmt: skip
-HYDROGEN_FACTOR_IRON = 1.4
-HYDROGEN_FACTOR_IONS = 1.0
+#: The same for ions that are not in that table, by stage: as iron.
+HYDROGEN_FACTORS_OTHERWISE = {"I": HYDROGEN_FACTORS["Fe I"], "II": HYDROGEN_FACTORS["Fe II"]}
 #: Broadening by a helium atom against that by a hydrogen atom: (polarizability 1.384/4.5)^(2/5) (reduced mass)^(3/10)
 #: gives 0.41 for iron.
 HELIUM_RELATIVE = 0.41
@@ -98,8 +99,7 @@ class LineConstants:
 
 def hydrogen_factor(ion: str) -> float:
     """Factor on Unsoeld's broadening by hydrogen for the lines of an ion."""
-    symbol, stage = ion.split()
-    return HYDROGEN_FACTORS.get(symbol, HYDROGEN_FACTOR_IRON) if stage == "I" else HYDROGEN_FACTOR_IONS
+    return HYDROGEN_FACTORS.get(ion, HYDROGEN_FACTORS_OTHERWISE[ion.split()[1]])
 
 
 def line_constants(lines: BlanketingLines, atomic_mass) -> LineConstants:
