@@ -45,6 +45,7 @@ def read_stars(
     ions: Mapping[str, str] | None = None,
     units: Mapping[str, str] | None = None,
     name: str | None = None,
+    path: str | Path | None = None,
 ) -> list[Star]:
     """Read a table of one star or many.
 
@@ -60,6 +61,8 @@ def read_stars(
         Unit of a column (our name) that the table does not state, for example ``{"equivalent_width": "mAngstrom"}``.
     name : str, optional
         Name of the star where the table has no `star` column; the file's stem by default.
+    path : path-like, optional
+        Where a table in memory comes from, for messages and the star's name.
 
     Returns
     -------
@@ -74,8 +77,10 @@ def read_stars(
     --------
     >>> stars = read_stars("widths.ecsv")                                      # doctest: +SKIP
     """
-    path = None if hasattr(source, "colnames") else Path(source)
-    table = source if path is None else read_table(path)
+    if not hasattr(source, "colnames"):
+        path = Path(source)
+    path = None if path is None else Path(path)
+    table = source if hasattr(source, "colnames") else read_table(path)
     where = f"{path}: " if path is not None else ""
     names = _names(table, columns or {}, where, path)
     if len(table) == 0:

@@ -112,8 +112,10 @@ def reference_star(
     theta = best.theta
     # Both stars use one log gf, so it cancels: the zero point is kept on the list's log gf.
     values = (abundance + everything.log_gf_shift)[known] - theta[2]
-    words = f"lines of {star.name} at {theta[0]:.0f} K, {theta[1]:.3f}, {theta[2]:+.3f} ({source}), "
+    words = (
+        f"lines of {star.name} at {theta[0]:.0f} K, {theta[1]:.3f}, {theta[2]:+.3f} ({source}), "
         f"vmic {theta[3]:.3f} km/s"
+    )
     zero_points = ZeroPoints.reference(
         dict(zip(everything.keys[known].tolist(), values.tolist(), strict=True)), covariance, words
     )
