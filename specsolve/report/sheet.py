@@ -123,7 +123,9 @@ def print_sheet(one: Solution, console: Console) -> None:
         words = ", ".join(f"{key} {_short(value)}" for key, value in entry.items())
         console.print(f"  from elsewhere: {words}", markup=False)
     for name, shift in one.systematics.items():
-        words = ", ".join(f"{NAMES[key]} {value:+.{DECIMALS[key]}f}" for key, value in zip(NAMES, shift, strict=True))
+        words = ", ".join(
+            f"{NAMES[key]} {_signed(value, DECIMALS[key])}" for key, value in zip(NAMES, shift, strict=True)
+        )
         console.print(f"  systematic {name.replace('_', ' ')}: {words}", markup=False)
     if one.flags:
         console.print(f"  flags: {', '.join(one.flags)}", markup=False)
@@ -170,7 +172,7 @@ def _residual_table(one: Solution) -> Any:
         removed = name in one.removed_residuals
         table.add_row(
             words,
-            f"{value + 0.0:+.{digits}f}" if np.isfinite(value) else "-",
+            _signed(value, digits),
             _number(error, digits),
             unit,
             "reported, not used" if removed else "",
@@ -184,8 +186,8 @@ def _sensitivity_table(one: Solution) -> Any:
         unit = UNITS[item.parameter]
         table.add_row(
             f"{NAMES[item.parameter]} {item.shift:+g}{' ' + unit if unit else ''}",
-            f"{item.d_fe1:+.3f}" if np.isfinite(item.d_fe1) else "-",
-            f"{item.d_fe2:+.3f}" if np.isfinite(item.d_fe2) else "-",
+            _signed(item.d_fe1, 3),
+            _signed(item.d_fe2, 3),
         )
     return table
 
@@ -204,7 +206,9 @@ def _print_lines(one: Solution, console: Console) -> None:
     if concerned.size > LISTED_LINES:
         console.print(f"    and {concerned.size - LISTED_LINES} more, all in the lines table (--output)", style="dim")
     for i in most_influential(one)[:LISTED_INFLUENCES]:
-        shifts = ", ".join(f"{NAMES[name]} {lines.influence[i, j]:+.{DECIMALS[name]}f}" for j, name in enumerate(NAMES))
+        shifts = ", ".join(
+            f"{NAMES[name]} {_signed(lines.influence[i, j], DECIMALS[name])}" for j, name in enumerate(NAMES)
+        )
         console.print(f"    without {_line_name(one, i)}: {shifts}", style="dim", markup=False)
 
 
@@ -255,6 +259,11 @@ def _with_error(one: Solution, name: str) -> str:
 
 def _number(value: float, digits: int) -> str:
     return f"{value:.{digits}f}" if np.isfinite(value) else "-"
+
+
+def _signed(value: float, digits: int) -> str:
+    """With sign, and without the sign of a zero."""
+    return f"{round(float(value), digits) + 0.0:+.{digits}f}" if np.isfinite(value) else "-"
 
 
 def _short(value: Any) -> str:

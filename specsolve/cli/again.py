@@ -1,0 +1,84 @@
+"""``specsolve again``: repeat a solve from what it wrote."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+import click
+import numpy as np
+
+from specsolve.cli.inputs import Inputs
+from specsolve.cli.settings import Settings, common_options
+from specsolve.cli.solve import Request, carry_out, delivery_options
+from specsolve.errors import InputError
+
+if TYPE_CHECKING:
+    from astropy.table import Table
+
+    from specsolve.balance.star import Star
+
+NOT_USED = "marked_unused"
+
+
+@click.command(epilog="Exit codes as for solve.")
+@click.argument("result", metavar="RESULT.ecsv")
+@click.option("--grid", "grid_path", metavar="DIR", help="The grid of the first run, if it was not the packaged one.")
+@delivery_options
+@common_options()
+def again(settings: Settings, result: str, grid_path: str | None, **delivery: Any) -> int:
+    """Repeat an analysis from its own output: RESULT.ecsv holds the options, RESULT_lines.ecsv the widths.
+
+    \b
+    Example:
+      specsolve again result.ecsv --output second
+    """
+    from specsolve.report.tables import output_paths, read_table
+
+    paths = output_paths(result)
+    stars = read_table(paths["stars"], "stars")
+    lines = read_table(paths["lines"], "lines")
+    arguments = stars.meta["provenance"].get("options", {})
+    if not arguments:
+        raise InputError(f"{result} does not say with which options it was made", path=result)
+    request = Request.from_arguments(arguments, grid_path=grid_path, **delivery)
+    recorded = str(stars["grid_identity"][0]) if len(stars) else ""
+    inputs = Inputs(stars=stars_of(lines), files=[])
+    return carry_out(settings, inputs, [str(path) for path in (paths["stars"], paths["lines"])], request, recorded)
+
+
+def stars_of(lines: Table) -> list[Star]:
+    """The stars of a lines table, with the widths as they were given.
+
+    Parameters
+    ----------
+    lines : Table
+        As `specsolve.report.tables.read_table` reads ``X_lines.ecsv``.
+    """
+    from specsolve.balance.star import Star
+
+    names = np.asarray(lines["star"])
+    order = list(dict.fromkeys(names.tolist()))
+    found = []
+    for name in order:
+        rows = lines[(names == name)]
+        rows = rows[np.asarray(rows["treatment"]) == rows["treatment"][0]]
+        assumed = np.asarray(rows["error_assumed"], bool)
+        error = _plain(rows["equivalent_width_error"])
+        found.append(
+            Star.from_arrays(
+                name,
+                _plain(rows["wavelength_air"]),
+                np.asarray(rows["ion"]),
+                _plain(rows["equivalent_width"]),
+                np.where(assumed, np.nan, error),
+                excitation_potential=_plain(rows["excitation_potential"]),
+                log_gf=_plain(rows["log_gf"]),
+                log_gf_error=_plain(rows["log_gf_error"]),
+                use=np.asarray(rows["reason"]) != NOT_USED,
+            )
+        )
+    return found
+
+
+def _plain(column: Any) -> np.ndarray:
+    return np.ma.filled(np.ma.asarray(column).astype(float), np.nan)

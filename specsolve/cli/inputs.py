@@ -1,0 +1,179 @@
+"""From the arguments of ``solve`` and ``check`` to stars: reading, naming, and what the grid has of their lines."""
+
+from __future__ import annotations
+
+import shlex
+import sys
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from specsolve.cli.settings import Settings
+from specsolve.errors import InputError, SpecsolveError
+
+if TYPE_CHECKING:
+    from specsolve.balance.star import Star
+    from specsolve.grid.store import ResponseGrid
+
+STDIN = "-"
+LISTED = 5
+SECONDS_PER_WIDTH = 40e-6
+"""Cost of one width when a grid is built, one core; the design's aim, measured figures are in DEVELOPERS.md."""
+START_UP_SECONDS = 45.0  # compilation and reading of the atmospheres, measured
+
+
+@dataclass
+class Inputs:
+    """Stars of all tables, in the order of the command line.
+
+    Attributes
+    ----------
+    stars : list of Star
+    files : list of (str, list of Star)
+        Each usable table with its stars.
+    failed : list of SpecsolveError
+        One for each table that could not be used.
+    """
+
+    stars: list[Star] = field(default_factory=list)
+    files: list[tuple[str, list[Star]]] = field(default_factory=list)
+    failed: list[SpecsolveError] = field(default_factory=list)
+
+
+def read_inputs(
+    tables: Iterable[str],
+    settings: Settings,
+    *,
+    columns: Mapping[str, str],
+    ions: Mapping[str, str],
+    units: Mapping[str, str],
+) -> Inputs:
+    """Read all tables; one that cannot be used is told in one line and the others are kept.
+
+    Raises
+    ------
+    SpecsolveError
+        If no table can be used: the error of the first.
+    """
+    from specsolve.star_table import read_stars
+
+    found = Inputs()
+    taken: set[str] = set()
+    for name in tables:
+        try:
+            table = _read(name, columns, units)
+            path = None if name == STDIN else Path(name)
+            stars = read_stars(table, columns=columns, ions=ions, units=units, path=path)
+        except SpecsolveError as error:
+            found.failed.append(error)
+            continue
+        stars = [_unique(star, name, taken) for star in stars]
+        found.stars += stars
+        found.files.append((name, stars))
+    if not found.files:
+        for error in found.failed[1:]:
+            settings.warn(f"specsolve: {error}")
+        raise found.failed[0]
+    for error in found.failed:
+        settings.warn(f"specsolve: {error}")
+    return found
+
+
+def shared_notes(stars: list[Star]) -> dict[str, str]:
+    """Notes made on reading, each once, with the stars it holds for."""
+    whom: dict[str, list[str]] = {}
+    for star in stars:
+        for note in star.notes:
+            whom.setdefault(note, []).append(star.name)
+    return {
+        note: "all stars" if len(names) == len(stars) and len(stars) > 1 else ", ".join(names)
+        for note, names in whom.items()
+    }
+
+
+def coverage(stars: Iterable[Star], grid: ResponseGrid) -> tuple[int, int]:
+    """(distinct lines that the grid has, distinct lines) of some stars.
+
+    Lines are distinct if ion, wavelength (0.01 Angstrom) and excitation potential (0.01 eV) differ.
+    """
+    from specsolve.balance.star import match_lines
+
+    inside: set[tuple[str, float, float]] = set()
+    outside: set[tuple[str, float, float]] = set()
+    for star in stars:
+        index = match_lines(star, grid.lines).index
+        potential = np.nan_to_num(star.excitation_potential, nan=-1.0)
+        for ion, wavelength, energy, place in zip(star.ion, star.wavelength_air, potential, index, strict=True):
+            key = (str(ion), round(float(wavelength), 2), round(float(energy), 2))
+            (inside if place >= 0 else outside).add(key)
+    return len(inside), len(inside | outside)
+
+
+def coverage_message(name: str, n_inside: int, n_all: int, grid: ResponseGrid) -> str:
+    """How many lines the grid has and the command that adds the others.
+
+    Returns
+    -------
+    str
+        For example "64 of 101 lines are in the grid; `specsolve grid build my.ecsv --output my_grid` adds 37 in
+        about 3 min".
+    """
+    text = f"{n_inside} of {n_all} lines are in the grid"
+    absent = n_all - n_inside
+    if absent == 0:
+        return text
+    table = shlex.quote(name) if name != STDIN else "TABLE"
+    return f"{text}; `specsolve grid build {table} --output my_grid` adds {absent} in about {_minutes(absent, grid)}"
+
+
+def _minutes(n_lines: int, grid: ResponseGrid) -> str:
+    widths = n_lines * int(np.prod([len(values) for values in grid.axes.values()]))
+    seconds = START_UP_SECONDS + SECONDS_PER_WIDTH * widths
+    return f"{max(1, round(seconds / 60))} min"
+
+
+def _read(name: str, columns: Mapping[str, str], units: Mapping[str, str]) -> Any:
+    from astropy.units import Unit
+
+    from specsolve.lines.reading import read_table
+
+    table = _read_stdin() if name == STDIN else read_table(Path(name))
+    for ours, unit in units.items():
+        theirs = columns.get(ours, ours)
+        given = table[theirs].unit if theirs in table.colnames else None
+        if given is not None and Unit(given) != Unit(unit):
+            raise InputError(f"{name}: column '{theirs}' is in {given}, but --unit says {unit}", path=name)
+    return table
+
+
+def _read_stdin() -> Any:
+    from astropy.table import Table
+
+    text = sys.stdin.read()
+    if not text.strip():
+        raise InputError("standard input is empty")
+    style = "ascii.ecsv" if text.startswith("# %ECSV") else "ascii.csv"
+    try:
+        return Table.read(text.splitlines(), format=style)
+    except Exception as error:
+        first = (str(error).splitlines() or [type(error).__name__])[0]
+        raise InputError(f"standard input is not a readable table ({first})") from error
+
+
+def _unique(star: Star, file_name: str, taken: set[str]) -> Star:
+    """Give the star another name if an earlier table has one of that name."""
+    from dataclasses import replace
+
+    name = star.name
+    if name in taken:
+        name = f"{star.name} ({Path(file_name).name})"
+        count = 2
+        while name in taken:
+            name = f"{star.name} ({Path(file_name).name} {count})"
+            count += 1
+        star = replace(star, name=name, notes=(*star.notes, f"renamed: another table has a star {star.name}."))
+    taken.add(name)
+    return star

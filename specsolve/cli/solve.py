@@ -1,0 +1,379 @@
+"""``specsolve solve``: the main job."""
+
+from __future__ import annotations
+
+import json
+import sys
+from collections.abc import Mapping, Sequence
+from concurrent.futures import Executor
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from specsolve.cli import parsing
+from specsolve.cli.inputs import Inputs, coverage, coverage_message, read_inputs, shared_notes
+from specsolve.cli.settings import Settings, common_options, wants_colour
+from specsolve.errors import EXIT_INTERRUPTED, EXIT_SOLVED, EXIT_UNSOLVED, InputError, UsageError
+
+if TYPE_CHECKING:
+    from specsolve.balance.solution import Solution
+    from specsolve.balance.star import Star
+
+STDOUT = "-"
+REFERENCE_FLAG = "reference_star"
+
+
+@dataclass(frozen=True, kw_only=True)
+class Request:
+    """What a solve was asked for, as plain values; its `arguments` go into the output.
+
+    Attributes
+    ----------
+    treatment, loss : str
+    columns, ions, units : dict
+        Headings, spellings and units of the tables.
+    limits : dict
+        Line cuts by option name.
+    reference : str or None
+    at : dict or None
+        Parameters of the reference star.
+    fix : dict
+        Parameter to value.
+    known : dict
+        Parameter to (value, error).
+    wanted : tuple of str
+        Names of stars; empty for all.
+    grid_path, output, plots, plot_format, sheets, workers, seed
+        Where things come from and go to.
+    """
+
+    treatment: str = "lte"
+    loss: str = "huber"
+    columns: Mapping[str, str] = field(default_factory=dict)
+    ions: Mapping[str, str] = field(default_factory=dict)
+    units: Mapping[str, str] = field(default_factory=dict)
+    limits: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    reference: str | None = None
+    at: Mapping[str, float] | None = None
+    fix: Mapping[str, float] = field(default_factory=dict)
+    known: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    wanted: tuple[str, ...] = ()
+    grid_path: str | None = None
+    output: str | None = None
+    plots: str | None = None
+    plot_format: str = "pdf"
+    sheets: bool | None = None
+    workers: int = 1
+    seed: int | None = None
+
+    def arguments(self) -> dict[str, Any]:
+        """What decides the numbers, ready for JSON."""
+        return {
+            "treatment": self.treatment,
+            "loss": self.loss,
+            "columns": dict(self.columns),
+            "ions": dict(self.ions),
+            "units": dict(self.units),
+            "limits": {name: list(pair) for name, pair in self.limits.items()},
+            "reference": self.reference,
+            "reference_parameters": dict(self.at) if self.at else None,
+            "fix": dict(self.fix),
+            "known": {name: list(pair) for name, pair in self.known.items()},
+            "stars": list(self.wanted),
+        }
+
+    @classmethod
+    def from_arguments(cls, arguments: Mapping[str, Any], **delivery: Any) -> Request:
+        """Inverse of `arguments`; headings and units of the first tables are not needed again."""
+        return cls(
+            treatment=arguments["treatment"],
+            loss=arguments["loss"],
+            limits={name: tuple(pair) for name, pair in arguments["limits"].items()},
+            reference=arguments["reference"],
+            at=arguments["reference_parameters"],
+            fix=arguments["fix"],
+            known={name: tuple(pair) for name, pair in arguments["known"].items()},
+            **delivery,
+        )
+
+
+def input_options(function: Any) -> Any:
+    """Options that say how to read the tables; ``solve`` and ``check`` share them."""
+    for option in (
+        click.option("--fix", "fixed", multiple=True, metavar="NAME=VALUE", help="Hold teff, logg, feh or vmic."),
+        click.option(
+            "--cut",
+            "cuts",
+            multiple=True,
+            metavar="NAME=LOW:HIGH",
+            help="Lines kept: reduced_width (predicted), excitation [eV], wavelength [Angstrom].",
+        ),
+        click.option("--unit", "units", multiple=True, metavar="OURS=UNIT", help="Unit of a column without one."),
+        click.option("--ion", "ions", multiple=True, metavar='THEIRS="Fe I"', help="Another spelling of an ion."),
+        click.option("--column", "columns", multiple=True, metavar="OURS=THEIRS", help="Another column heading."),
+        click.option("--treatment", default="lte", show_default=True, help="Line formation; the grid must have it."),
+        click.option("--grid", "grid_path", metavar="DIR", help="A response grid of your own."),
+    ):
+        function = option(function)
+    return function
+
+
+def delivery_options(function: Any) -> Any:
+    """Options that say where the result goes."""
+    for option in (
+        click.option(
+            "--sheets/--overview", default=None, help="A sheet a star, or a line a star; default sheets up to three."
+        ),
+        click.option("--plot-format", type=click.Choice(["pdf", "png", "svg"]), default="pdf", show_default=True),
+        click.option("--plots", metavar="DIR", help="Draw one page a star into this folder."),
+        click.option(
+            "--output", metavar="FILE", help="Write FILE.ecsv and its lines, candidates, decisions; - for stdout."
+        ),
+    ):
+        function = option(function)
+    return function
+
+
+@click.command(
+    epilog="Exit codes: 0 all solved; 3 no usable input; 4 a star or table unsolved, tied or outside the grid.",
+)
+@click.argument("tables", nargs=-1, required=True, metavar="TABLE...")
+@delivery_options
+@input_options
+@click.option("--reference", metavar="STAR", help="Work relative to this star of the tables, or to the Sun.")
+@click.option("--reference-parameters", multiple=True, metavar="NAME=VALUE", help="Its teff, logg, feh.")
+@click.option("--known", multiple=True, metavar="NAME=VALUE:ERROR", help="A parameter known from elsewhere.")
+@click.option(
+    "--loss",
+    type=click.Choice(["huber", "student", "none"]),
+    default="huber",
+    show_default=True,
+    help="Robust weights of discordant lines.",
+)
+@click.option("--star", "wanted", multiple=True, metavar="STAR", help="Only this star (may be repeated).")
+@click.option("--workers", type=click.IntRange(1), default=1, show_default=True, help="Processes, for many stars.")
+@click.option("--seed", type=int, hidden=True, help="Kept in the output; this analysis draws no random numbers.")
+@common_options()
+def solve(settings: Settings, tables: tuple[str, ...], **chosen: Any) -> int:
+    """Teff, log g, [Fe/H] and microturbulence of the stars in one or more tables of equivalent widths.
+
+    \b
+    Examples:
+      specsolve solve widths.ecsv
+      specsolve solve widths.ecsv --output result --plots figures
+      specsolve solve widths.csv --column equivalent_width=EW --unit equivalent_width=mAngstrom
+      specsolve solve widths.ecsv --fix logg=2.45 --known teff=4810:60
+      specsolve solve widths.ecsv --reference Sun --json
+
+    Columns: specsolve columns input. A TABLE of - is read from standard input.
+    """
+    request = Request(
+        columns=parsing.column_names(chosen.pop("columns")),
+        ions=parsing.ion_names(chosen.pop("ions")),
+        units=parsing.unit_names(chosen.pop("units")),
+        limits=parsing.cuts(chosen.pop("cuts")),
+        fix=parsing.numbers(chosen.pop("fixed"), "--fix"),
+        known=parsing.gaussians(chosen.pop("known"), "--known"),
+        at=parsing.numbers(chosen.pop("reference_parameters"), "--reference-parameters") or None,
+        **chosen,
+    )
+    parsing.disjoint(request.fix, request.known)
+    if request.at and request.reference is None:
+        raise UsageError("--reference-parameters needs --reference")
+    before(settings, request)
+    inputs = read_inputs(tables, settings, columns=request.columns, ions=request.ions, units=request.units)
+    return carry_out(settings, inputs, tables, request)
+
+
+def before(settings: Settings, request: Request) -> None:
+    """What can be refused before any work."""
+    if settings.json and request.output == STDOUT:
+        raise UsageError("--json and --output - both want standard output")
+    if request.output not in (None, STDOUT):
+        from specsolve.report.tables import check_writable
+
+        check_writable(request.output)
+
+
+def carry_out(
+    settings: Settings, inputs: Inputs, tables: Sequence[str], request: Request, grid_identity: str = ""
+) -> int:
+    """Solve the stars of the inputs, deliver, and return the exit code.
+
+    Parameters
+    ----------
+    settings : Settings
+    inputs : Inputs
+    tables : sequence of str
+        Their file names, for the provenance.
+    request : Request
+    grid_identity : str
+        Of the grid that ought to be used; a difference is said.
+    """
+    before(settings, request)
+    stars = chosen_stars(inputs, request.wanted, request.reference)
+
+    from specsolve.balance.options import Options
+    from specsolve.balance.solve import open_grid
+    from specsolve.provenance import collect
+
+    grid = open_grid(request.grid_path)
+    if grid_identity and grid_identity != grid.identity:
+        settings.warn(
+            f"specsolve: this grid ({grid.identity[:12]}) is not that of the first run ({grid_identity[:12]})"
+        )
+    for name, of_file in inputs.files:
+        settings.say(f"{name}: {coverage_message(name, *coverage(of_file, grid), grid)}")
+    for note, whom in shared_notes(stars).items():
+        settings.say(f"{note} ({whom})")
+    provenance = collect(
+        inputs=tables,
+        options=request.arguments(),
+        seed=request.seed,
+        grid={
+            "identity": grid.identity,
+            "atmospheres_identity": grid.atmospheres_identity,
+            "description": grid.description,
+        },
+    )
+    solutions, interrupted, n_stars = solve_all(
+        settings, stars, grid, request, Options(loss=request.loss, **request.limits)
+    )
+    solutions = [solution.with_provenance(provenance) for solution in solutions]
+    deliver(settings, solutions, provenance, request)
+    if interrupted:
+        left = n_stars - len(solutions)
+        settings.warn(f"specsolve: interrupted; {len(solutions)} stars are finished and kept, {left} are not")
+        return EXIT_INTERRUPTED
+    bad = [one for one in solutions if one.status != "solved"]
+    for one in bad:
+        settings.warn(f"specsolve: {one.star}: {one.status}: {one.reason}")
+    return EXIT_UNSOLVED if bad or inputs.failed else EXIT_SOLVED
+
+
+def chosen_stars(inputs: Inputs, wanted: Sequence[str], reference: str | None) -> list[Star]:
+    """The stars to solve: all, or the wanted ones and the reference star."""
+    if not wanted:
+        return inputs.stars
+    names = [star.name for star in inputs.stars]
+    for name in wanted:
+        if name not in names:
+            shown = ", ".join(names[:10]) + (", ..." if len(names) > 10 else "")
+            raise InputError(f"no star '{name}' in the tables; they have {shown}")
+    return [star for star in inputs.stars if star.name in wanted or star.name == reference]
+
+
+def solve_all(
+    settings: Settings, stars: list[Star], grid: Any, request: Request, options: Any
+) -> tuple[list[Solution], bool, int]:
+    """Solve the stars; on Ctrl-C the finished ones are kept.
+
+    Returns
+    -------
+    solutions : list of Solution
+        In the order of the input; the reference star first, at its own parameters.
+    interrupted : bool
+    n_stars : int
+        How many there should be.
+    """
+    from specsolve.balance.batch import solve_stream
+    from specsolve.balance.outside import Outside
+    from specsolve.cli.progress import counting
+
+    stars, setting, first = prepare(stars, grid, request, options)
+    known = Outside.gaussian("given by the user", **request.known) if request.known else None
+    done: dict[int, Solution] = {}
+    interrupted = False
+    executor = make_executor(request.workers)
+    try:
+        with counting("stars", quiet=settings.verbosity < 0 or len(stars) < 3) as progress:
+            for place, solution in solve_stream(stars, grid, setting, outside=known, executor=executor):
+                done[place] = solution
+                if progress:
+                    progress(len(done), len(stars))
+    except KeyboardInterrupt:
+        interrupted = True
+    finally:
+        if executor is not None:
+            executor.shutdown(wait=not interrupted, cancel_futures=True)
+    return first + [done[place] for place in sorted(done)], interrupted, len(first) + len(stars)
+
+
+def prepare(stars: list[Star], grid: Any, request: Request, options: Any) -> tuple[list[Star], Any, list[Solution]]:
+    """The stars to solve, what they share, and the reference star's own solution if there is one.
+
+    Raises
+    ------
+    UsageError
+        If the grid lacks the treatment.
+    InputError
+        If the reference star is not in the tables, or its parameters are not known.
+    """
+    from dataclasses import replace
+
+    from specsolve.balance.batch import Setting, solve_star
+    from specsolve.balance.differential import reference_star
+    from specsolve.balance.own_sun import SUN_NAME, solar_lines, solar_star
+    from specsolve.balance.solution import PARAMETER_NAMES
+    from specsolve.balance.solve import fixed_outside
+
+    if request.treatment not in grid.treatments:
+        raise UsageError(f"treatment '{request.treatment}' is not in the grid; it has {', '.join(grid.treatments)}")
+    shared = {"treatment": request.treatment, "options": options}
+    setting = Setting(**shared, fixed=fixed_outside(request.fix), sun=solar_lines(grid, request.treatment, options))
+    if request.reference is None:
+        return stars, setting, []
+    same = [star for star in stars if star.name == request.reference]
+    if not same and request.reference.strip().lower() != SUN_NAME.lower():
+        raise InputError(f"the reference star '{request.reference}' is not in the tables")
+    chosen = same[0] if same else solar_star()
+    found = reference_star(chosen, grid, request.treatment, request.at, options)
+    at = dict(zip(PARAMETER_NAMES, found.theta.tolist(), strict=True))
+    own = solve_star(chosen, grid, Setting(**shared, fixed=fixed_outside(at), sun=setting.sun))
+    own = replace(own, flags=(REFERENCE_FLAG, *own.flags))
+    return [star for star in stars if star.name != chosen.name], replace(setting, zero_points=found.zero_points), [own]
+
+
+def make_executor(workers: int) -> Executor | None:
+    """Processes for many stars; `None` for one."""
+    if workers == 1:
+        return None
+    import multiprocessing
+    from concurrent.futures import ProcessPoolExecutor
+
+    return ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context("spawn"))
+
+
+def deliver(settings: Settings, solutions: Sequence[Solution], provenance: Mapping[str, Any], request: Request) -> None:
+    """Write tables and figures, print sheets or JSON."""
+    from specsolve.report import tables
+
+    if request.output == STDOUT:
+        tables.tables_of(solutions, provenance)["stars"].write(sys.stdout, format="ascii.ecsv", delimiter=",")
+    elif settings.json:
+        click.echo(json.dumps(tables.to_json(solutions, provenance), indent=1, allow_nan=False))
+    else:
+        print_sheets(solutions, request.sheets)
+    if request.output not in (None, STDOUT) and solutions:
+        paths = tables.write_solutions(solutions, request.output, provenance)
+        settings.say("wrote " + ", ".join(str(path) for path in paths.values()))
+    if request.plots is not None:
+        from specsolve.report.figures import save_pages
+
+        pages = save_pages(solutions, Path(request.plots), request.plot_format)
+        settings.say(f"drew {len(pages)} page{'s' if len(pages) != 1 else ''} into {request.plots}")
+
+
+def print_sheets(solutions: Sequence[Solution], sheets: bool | None) -> None:
+    """Sheets on stdout, coloured if it is a terminal and NO_COLOR is not set."""
+    from rich.console import Console
+
+    from specsolve.report.sheet import print_solutions
+
+    terminal = sys.stdout.isatty()
+    console = Console(
+        no_color=not wants_colour(sys.stdout), highlight=False, width=None if terminal else 160, soft_wrap=not terminal
+    )
+    print_solutions(solutions, console, full=sheets)
