@@ -1,8 +1,8 @@
 """Line blanketing: distribution of the line opacity in bands of wavelength, over temperature and gas pressure.
 
-In every band the line opacities (per gram) of equally spaced wavelengths are sorted, and averaged inside fixed intervals
-of cumulative fraction, the sub-bins (opacity distribution; Strom & Kurucz 1966, JQSRT 6, 591). The tables lie on
-uniform grids of log10 T and log10 P and are read by a cubic spline in both, with continuous second derivatives.
+In every band the line opacities (per gram) of equally spaced wavelengths are sorted, and averaged inside fixed
+intervals of cumulative fraction, the sub-bins (opacity distribution functions). The tables lie on uniform grids of
+log10 T and log10 P and are read by a cubic spline in both, with continuous second derivatives.
 """
 
 from __future__ import annotations
@@ -123,7 +123,8 @@ def table_position(blanketing: Blanketing, temperature: np.ndarray, gas_pressure
     grid_t, grid_p = blanketing.log_temperature, blanketing.log_pressure
     if not np.all(log_t >= grid_t[0] - 1e-9):
         raise ValueError(
-            f"temperature {np.min(temperature):.0f} K is below the blanketing tables, which begin at {10 ** grid_t[0]:.0f} K."
+            f"temperature {np.min(temperature):.0f} K is below the blanketing tables, "
+            f"which begin at {10 ** grid_t[0]:.0f} K."
         )
     if not np.all((log_p >= grid_p[0] - 1e-9) & (log_p <= grid_p[-1] + 1e-9)):
         raise ValueError(
@@ -144,11 +145,15 @@ def vmic_weights(blanketing: Blanketing, vmic: float) -> np.ndarray:
     """Weights (n_v,) of linear interpolation in the microturbulence; ValueError outside the table."""
     nodes = blanketing.vmic
     if not nodes[0] <= vmic <= nodes[-1]:
-        raise ValueError(f"opacity microturbulence {vmic} km/s is outside the blanketing tables ({nodes[0]} to {nodes[-1]}).")
+        raise ValueError(
+            f"opacity microturbulence {vmic} km/s is outside the blanketing tables ({nodes[0]} to {nodes[-1]})."
+        )
     return np.array([np.interp(vmic, nodes, row) for row in np.eye(len(nodes))])
 
 
-def line_opacity_reference(blanketing: Blanketing, temperature, gas_pressure, vmic: float, power: float = 0.0) -> np.ndarray:
+def line_opacity_reference(
+    blanketing: Blanketing, temperature, gas_pressure, vmic: float, power: float = 0.0
+) -> np.ndarray:
     """`line_opacity` in plain NumPy: the test oracle."""
     temperature, gas_pressure = np.asarray(temperature, dtype=float), np.asarray(gas_pressure, dtype=float)
     cell_t, cell_p, weights_t, weights_p, log_taper = table_position(blanketing, temperature, gas_pressure)
@@ -175,7 +180,8 @@ def line_opacity(blanketing: Blanketing, temperature, gas_pressure, vmic: float,
     vmic : float
         Microturbulence of the opacity [km/s], inside the table; the logarithm is interpolated linearly.
     power : float
-        The opacity is multiplied by `multiplier` to this power: 0 (default) is the raw line lists, 1 the calibrated opacity.
+        The opacity is multiplied by `multiplier` to this power: 0 (default) is the raw line lists, 1 the calibrated
+        opacity.
 
     Returns
     -------
@@ -245,7 +251,7 @@ def load_blanketing(mh: float, folder: Path = DATA_FOLDER) -> Blanketing:
     if not path.exists():
         raise FileNotFoundError(f"no blanketing table for [M/H] = {mh:+.2f}; packaged are {PACKAGED_MH}.")
     with np.load(path, allow_pickle=False) as stored:
-        scaled = np.cumsum(stored["log_opacity_steps"], axis=-1, dtype=np.int32)
+        scaled = np.cumsum(stored["log_opacity_steps"], axis=-1, dtype=np.int32) & 0xFFFF  # differences wrap at 16 bits
         log_opacity = (LOG_OPACITY_LOWEST + LOG_OPACITY_STEP * scaled).astype(np.float32)
         names = ("band_edges_cm", "sub_weights", "log_temperature", "log_pressure", "vmic")
         arrays = {name: stored[name] for name in names}

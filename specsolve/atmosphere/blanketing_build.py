@@ -1,6 +1,6 @@
 """Build the opacity distribution tables from the packaged lines, for any metallicity.
 
-    python -m specsolve.atmosphere.blanketing_build --output DIR [--mh -1 --mh 0]
+python -m specsolve.atmosphere.blanketing_build --output DIR [--mh -1 --mh 0]
 """
 
 from __future__ import annotations
@@ -33,8 +33,8 @@ from specsolve.matter.continuum import continuum_opacity
 from specsolve.matter.equation_of_state import Gas, equilibrium, ion_density
 from specsolve.matter.partition import partition_function
 
-#: Edges of the bands, vacuum wavelengths [nm]. 168.2 Si I, 207.6 Al I, 251.4 Mg I: photoionization edges; 364.7 and 820.4:
-#: Balmer and Paschen limits; 1642: limit of the bound-free absorption of H-.
+#: Edges of the bands, vacuum wavelengths [nm]. 168.2 Si I, 207.6 Al I, 251.4 Mg I: photoionization edges;
+#: 364.7 and 820.4: Balmer and Paschen limits; 1642: limit of the bound-free absorption of H-.
 BAND_EDGES_NM = np.array([
     150.0, 168.2, 185.0, 207.6, 225.0, 251.4, 265.0, 277.0, 290.0, 303.0, 315.0, 328.0, 340.0, 352.0, 364.7,
     375.0, 387.0, 400.0, 413.0, 427.0, 440.0, 455.0, 470.0, 487.0, 505.0, 525.0, 550.0, 580.0, 615.0, 655.0,
@@ -148,7 +148,9 @@ def build(
 
     Examples
     --------
-    >>> tables = build(-0.75)                              # doctest: +SKIP
+    >>> tables = build(-0.75, vmic=(1.0,), n_samples=200, log_temperature=np.linspace(3.6, 3.9, 4))
+    >>> tables.log_opacity.shape
+    (1, 37, 10, 4, 20)
     """
     lines = load_lines() if lines is None else lines
     constants = line_constants(lines, atomic_mass)
@@ -175,7 +177,7 @@ def main(arguments: list[str] | None = None) -> None:
     """Command line of the module."""
     parser = argparse.ArgumentParser(description=__doc__.split("\n")[0])
     parser.add_argument("--output", type=Path, required=True)
-    parser.add_argument("--mh", type=float, action="append", help="one metallicity; may be repeated (default: all packaged)")
+    parser.add_argument("--mh", type=float, action="append", help="may be repeated; default all packaged")
     parser.add_argument("--samples", type=int, default=SAMPLES)
     options = parser.parse_args(arguments)
     options.output.mkdir(parents=True, exist_ok=True)

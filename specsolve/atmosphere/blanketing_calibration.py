@@ -2,8 +2,8 @@
 
 The line lists lack molecules and part of the ultraviolet. In each band below 0.7 um the factor is the one with which a
 model of the Sun emits the observed flux; the logarithm times `FRACTION` is kept, because the full correction overshoots
-the limb darkening at 0.45-0.55 um. Observed: the extraterrestrial spectrum of ASTM G173-03 (Gueymard 2004, Solar Energy 76,
-423), as the package pvlib carries it, averaged over the bands in the packaged `solar_flux.csv`.
+the limb darkening at 0.45-0.55 um. Observed: the extraterrestrial spectrum of ASTM G173-03 (Gueymard 2004, Solar
+Energy 76, 423), as the package pvlib carries it, averaged over the bands in the packaged `solar_flux.csv`.
 
     python -m specsolve.atmosphere.blanketing_calibration --output DIR        # makes solar_flux.csv (needs pvlib)
 """
@@ -13,6 +13,7 @@ from __future__ import annotations
 import argparse
 from collections.abc import Callable
 from dataclasses import dataclass
+from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
@@ -65,7 +66,7 @@ def observed_in_bands(band_edges_cm: np.ndarray, sun: SolarFlux) -> np.ndarray:
     """Observed flux of those bands that the table has, `nan` elsewhere; shape (n_bands,)."""
     edges_nm = band_edges_cm * 1e7
     observed = np.full(len(edges_nm) - 1, np.nan)
-    for i, (low, high) in enumerate(zip(edges_nm[:-1], edges_nm[1:], strict=True)):
+    for i, (low, high) in enumerate(pairwise(edges_nm)):
         match = np.isclose(sun.low_nm, low, atol=1e-3) & np.isclose(sun.high_nm, high, atol=1e-3)
         if match.any():
             observed[i] = sun.flux[match][0]
@@ -125,13 +126,22 @@ def save_multiplier(band_edges_cm: np.ndarray, multiplier: np.ndarray, path: Pat
         raise ValueError(f"not a factor in every band: {multiplier}")
     edges = band_edges_cm * 1e7
     header = (
-        "Factor on the line opacity of each band, calibrated on the solar flux (specsolve.atmosphere.blanketing_calibration);\n"
-        "1 where nothing is calibrated. Vacuum wavelengths.\nwavelength_low_nm,wavelength_high_nm,multiplier"
+        "Factor on the line opacity of each band, calibrated on the solar flux\n"
+        "(specsolve.atmosphere.blanketing_calibration); 1 where nothing is calibrated. Vacuum wavelengths.\n"
+        "wavelength_low_nm,wavelength_high_nm,multiplier"
     )
-    np.savetxt(path, np.column_stack([edges[:-1], edges[1:], multiplier]), fmt=["%.1f", "%.1f", "%.5f"], delimiter=",", header=header)
+    np.savetxt(
+        path,
+        np.column_stack([edges[:-1], edges[1:], multiplier]),
+        fmt=["%.1f", "%.1f", "%.5f"],
+        delimiter=",",
+        header=header,
+    )
 
 
-def average_bands(low_nm: np.ndarray, high_nm: np.ndarray, wavelength_nm: np.ndarray, irradiance: np.ndarray) -> np.ndarray:
+def average_bands(
+    low_nm: np.ndarray, high_nm: np.ndarray, wavelength_nm: np.ndarray, irradiance: np.ndarray
+) -> np.ndarray:
     """Means of a tabulated spectrum, linear between its points, between pairs of wavelengths."""
     steps = 0.5 * (irradiance[1:] + irradiance[:-1]) * np.diff(wavelength_nm)
     total = np.concatenate([[0.0], np.cumsum(steps)])
@@ -156,12 +166,13 @@ def main(arguments: list[str] | None = None) -> None:
     options = parser.parse_args(arguments)
     spectrum = pvlib.spectrum.get_reference_spectra(standard="ASTM G173-03")["extraterrestrial"]
     wavelength, irradiance = spectrum.index.to_numpy(dtype=float), spectrum.to_numpy(dtype=float)
-    covered = BAND_EDGES_NM[BAND_EDGES_NM >= wavelength[0]]
+    covered = BAND_EDGES_NM[np.searchsorted(BAND_EDGES_NM, wavelength[0]) :]
     blocks = np.arange(700.0, 2501.0, 50.0)
     low, high = np.append(covered[:-1], blocks[:-1]), np.append(covered[1:], blocks[1:])
     header = (
-        "Solar irradiance at one astronomical unit, mean over each band: first the opacity bands, then blocks of 50 nm.\n"
-        f"Extraterrestrial spectrum of ASTM G173-03 (Gueymard 2004, Solar Energy 76, 423), from pvlib {pvlib.__version__}.\n"
+        "Solar irradiance at one astronomical unit, mean over each band: the opacity bands, then blocks of 50 nm.\n"
+        f"Extraterrestrial spectrum of ASTM G173-03 (Gueymard 2004, Solar Energy 76, 423), "
+        f"from pvlib {pvlib.__version__}.\n"
         "wavelength_low_nm,wavelength_high_nm,irradiance_W_m2_nm"
     )
     table = np.column_stack([low, high, average_bands(low, high, wavelength, irradiance)])

@@ -44,11 +44,12 @@ SAME_ENERGY_EV = 0.002
 #: Classical damping constant times wavelength^2 [s^-1 cm^2]: 8 pi^2 e^2 / (3 m c).
 CLASSICAL_DAMPING = 0.2223
 
-SYMBOLS = (
-    "H He Li Be B C N O F Ne Na Mg Al Si P S Cl Ar K Ca Sc Ti V Cr Mn Fe Co Ni Cu Zn Ga Ge As Se Br Kr Rb Sr Y Zr Nb Mo "
-    "Tc Ru Rh Pd Ag Cd In Sn Sb Te I Xe Cs Ba La Ce Pr Nd Pm Sm Eu Gd Tb Dy Ho Er Tm Yb Lu Hf Ta W Re Os Ir Pt Au Hg Tl "
-    "Pb Bi Po At Rn Fr Ra Ac Th Pa U"
-).split()
+_SYMBOLS = (
+    "H He Li Be B C N O F Ne Na Mg Al Si P S Cl Ar K Ca Sc Ti V Cr Mn Fe Co Ni Cu Zn Ga Ge As Se Br Kr Rb Sr Y Zr Nb "
+    "Mo Tc Ru Rh Pd Ag Cd In Sn Sb Te I Xe Cs Ba La Ce Pr Nd Pm Sm Eu Gd Tb Dy Ho Er Tm Yb Lu Hf Ta W Re Os Ir Pt Au "
+    "Hg Tl Pb Bi Po At Rn Fr Ra Ac Th Pa U"
+)
+SYMBOLS = _SYMBOLS.split()
 STAGES = ("I", "II")
 
 
@@ -58,7 +59,9 @@ def read_atomic_line_list(path: Path) -> dict[str, np.ndarray]:
         data = np.genfromtxt(stream, delimiter=",", names=True)
     data = data[(data["A_s1"] > 0) & (data["E_up_cm1"] > data["E_low_cm1"])]
     wavelength = 1e8 / (data["E_up_cm1"] - data["E_low_cm1"])
-    ion = [f"{SYMBOLS[int(z) - 1]} {STAGES[int(stage) - 1]}" for z, stage in zip(data["Z"], data["ion_stage"], strict=True)]
+    ion = [
+        f"{SYMBOLS[int(z) - 1]} {STAGES[int(stage) - 1]}" for z, stage in zip(data["Z"], data["ion_stage"], strict=True)
+    ]
     return {
         "ion": np.array(ion),
         "wavelength": wavelength,

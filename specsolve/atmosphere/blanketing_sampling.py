@@ -35,12 +35,13 @@ from specsolve.matter.partition import ionization_energy
 
 #: pi e^2 / m c [cm^2 Hz].
 OSCILLATOR_CM2_HZ = np.pi * ELECTRON_CHARGE_ESU**2 / (ELECTRON_MASS_G * LIGHT_SPEED_CM_S)
-#: gamma_6 = 17 C6^(2/5) v^(3/5) N (Unsoeld 1955, Physik der Sternatmosphaeren, sec. 83; numbers as in Gray, eq. 11.29).
+#: gamma_6 = 17 C6^(2/5) v^(3/5) N (Unsoeld 1955, Physik der Sternatmosphaeren, sec. 83; numbers from memory).
 UNSOELD_FACTOR = 17.0
 #: C6 = 0.3e-30 Z^2 [1/(I - E_up)^2 - 1/(I - E_low)^2], energies in eV (same source).
 UNSOELD_C6 = 0.3e-30
-#: Factor on that gamma_6: median over the lines of an ion (Na I, Ca I: their strong lines) of the widths at 10 000 K tabulated by
-#: Barklem, Piskunov & O'Mara 2000, A&AS 142, 467, and for Fe II by Barklem & Aspelund-Johansson 2005, A&A 435, 373.
+#: Factor on that gamma_6: median over the lines of an ion (Na I, Ca I: their strong lines) of the widths at 10 000 K
+#: tabulated by Barklem, Piskunov & O'Mara 2000, A&AS 142, 467, and for Fe II by Barklem &
+#: Aspelund-Johansson 2005, A&A 435, 373.
 HYDROGEN_FACTORS = {
     "Li I": 2.1, "C I": 2.1, "N I": 1.9, "Na I": 1.7, "Mg I": 2.4, "Mg II": 1.6, "Al I": 2.2, "Si I": 2.2, "P I": 1.6,
     "S I": 2.2, "K I": 2.4, "Ca I": 1.8, "Ca II": 1.5, "Fe I": 1.4, "Fe II": 0.9,
@@ -162,7 +163,9 @@ def hjerting(a, v, table):
         return (top / (16.4955 + t * (38.82363 + t * (39.27121 + t * (21.69274 + t * (6.699398 + t)))))).real
     u = t * t
     top = 36183.31 - u * (3321.9905 - u * (1540.787 - u * (219.0313 - u * (35.76683 - u * (1.320522 - u * 0.56419)))))
-    low = 32066.6 - u * (24322.84 - u * (9022.228 - u * (2186.181 - u * (364.2191 - u * (61.57037 - u * (1.841439 - u))))))
+    low = 32066.6 - u * (
+        24322.84 - u * (9022.228 - u * (2186.181 - u * (364.2191 - u * (61.57037 - u * (1.841439 - u)))))
+    )
     return (np.exp(u) - t * top / low).real
 
 

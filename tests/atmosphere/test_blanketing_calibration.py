@@ -32,7 +32,9 @@ def test_calibration_finds_the_factors():
 
 
 def test_unobserved_bands_stay_and_unreachable_ones_are_nan():
-    sun = SolarFlux(low_nm=np.array([400.0, 500.0]), high_nm=np.array([500.0, 600.0]), flux=np.array([2.0, emitted(2.0)]))
+    sun = SolarFlux(
+        low_nm=np.array([400.0, 500.0]), high_nm=np.array([500.0, 600.0]), flux=np.array([2.0, emitted(2.0)])
+    )
     found = calibrate(emitted, EDGES_CM, sun)
     assert found[0] == 1.0
     assert np.isnan(found[1])

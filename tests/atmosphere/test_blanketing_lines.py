@@ -50,7 +50,7 @@ def test_order_and_content(lines):
 
 @pytest.mark.parametrize(
     ("ion", "wavelength", "log_gf"),
-    # NIST Atomic Spectra Database, vacuum wavelengths [A]; Fe I 5269.54 (air), log gf -1.321: the same, O'Brian et al. 1991.
+    # NIST Atomic Spectra Database, vacuum wavelengths [A]; the Fe I value is of O'Brian et al. 1991.
     [
         ("Na I", 5891.583, 0.108),
         ("Ca II", 3934.777, 0.135),
@@ -68,7 +68,9 @@ def test_strong_lines_are_there_once_with_the_published_strength(lines, ion, wav
 
 def test_no_transition_is_counted_twice(lines):
     """Two rows of the same ion, lower level, wavelength and strength would be one transition from two lists."""
-    key = np.stack([lines.ion_index, np.rint(lines.excitation_potential * 500), np.rint(lines.wavelength_cm * 1e8 / 0.03)])
+    key = np.stack(
+        [lines.ion_index, np.rint(lines.excitation_potential * 500), np.rint(lines.wavelength_cm * 1e8 / 0.03)]
+    )
     foreign = np.array([not ion.startswith("Fe ") for ion in lines.ions])[lines.ion_index]
     strong = foreign & (lines.log_gf - lines.excitation_potential > -3.0)
     unique = np.unique(key[:, strong], axis=1)
@@ -84,7 +86,7 @@ def test_round_trip(lines, tmp_path):
 
 
 def test_hydrogen_broadening_against_published(lines):
-    """log10 of the full width per perturber at 10 000 K, Barklem, Piskunov & O'Mara 2000, A&AS 142, 467, their table."""
+    """log10 of the full width per perturber at 10 000 K: Barklem, Piskunov & O'Mara 2000, A&AS 142, 467."""
     constants = line_constants(lines, atomic_mass)
     published = [
         ("Mg II", 2796.352, -7.761),
