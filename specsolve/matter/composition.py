@@ -151,7 +151,7 @@ def composition_for(mh: float, alpha: float | None = None) -> Composition:
     Examples
     --------
     >>> round(float(composition_for(0.0).mass_per_hydrogen) / ATOMIC_MASS_G, 3)
-    1.354
+    1.355
     """
     alpha = alpha_law(mh) if alpha is None else float(alpha)
     abundances = np.array([number_abundance(symbol, mh, alpha) for symbol in ELEMENTS])

@@ -1,7 +1,7 @@
 """Continuous absorption and scattering of the gas.
 
-H- bound-free and free-free (John 1988, A&A 193, 189), hydrogen bound-free and free-free, He- free-free, bound-free of
-neutral atoms, Rayleigh scattering by H, He and H2, Thomson scattering. Line absorption is elsewhere.
+H- bound-free and free-free (John 1988, A&A 193, 189), hydrogen bound-free and free-free, H2+ and colliding H + H+, He-
+free-free, bound-free of neutral atoms, Rayleigh scattering by H, He and H2, Thomson scattering. Lines are elsewhere.
 
 Valid from 0.125 um (the H- fit) to 100 um. The free-free fit of H- was made for 1400 to 10 080 K and wavelengths above
 0.1823 um. Above 10 080 K its expressions, nearly linear in 1/T, are continued: there hydrogen itself absorbs more than
@@ -26,6 +26,7 @@ from specsolve.constants import (
     THOMSON_CM2,
 )
 from specsolve.matter.equation_of_state import Gas
+from specsolve.matter.hydrogen import rayleigh_hydrogen
 from specsolve.matter.photoionization import TABLE_PATH, bound_free
 
 SHORTEST_CM, LONGEST_CM = 0.125e-4, 100e-4  # validity [cm]
@@ -58,9 +59,8 @@ H_MINUS_FREE_FREE_SHORT = np.array(  # 0.1823 to 0.3645 um
 )
 THETA_K = 5040.0  # K, theta = 5040 K / T as in John 1988
 
-# Rayleigh scattering, wavelength in Angstrom: coefficients of l^-4, l^-6, l^-8 [cm^2]; Dalgarno & Williams 1962,
-# ApJ 136, 690 (H2), and for H the same form.
-RAYLEIGH_H = (5.799e-13, 1.422e-6, 2.784)
+# Rayleigh scattering by H2, wavelength in Angstrom: coefficients of l^-4, l^-6, l^-8 [cm^2]; Dalgarno & Williams 1962,
+# ApJ 136, 690.
 RAYLEIGH_H2 = (8.14e-13, 1.28e-6, 1.61)
 # Helium: static polarizability 1.38319 a.u. (Pachucki & Sapirstein 2000, Phys. Rev. A 63, 012504) and dispersion
 # 1 + (494 A / l)^2; Dalgarno & Kingston 1960, Proc. R. Soc. A 259, 424, from memory.
@@ -129,7 +129,7 @@ class _Tables(NamedTuple):
 @cache
 def _tables() -> _Tables:
     with np.load(TABLE_PATH, allow_pickle=False) as data:
-        logs = np.stack([data["log_hydrogen_gaunt"], data["log_helium_minus_cm5"]])
+        logs = np.stack([data["log_hydrogen_gaunt"], data["log_helium_minus_cm5"], data["log_h2_plus_cm5"]])
         return _Tables(data["log_temperature"], data["log_wavelength_cm"], logs)
 
 
@@ -165,9 +165,10 @@ def _tables_at(wavelength_bytes: bytes) -> np.ndarray:
 def rayleigh(wavelength_cm: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Rayleigh scattering cross-sections of H I, He I and H2 [cm^2], each of the shape of `wavelength_cm` [cm]."""
     inverse = 1e-16 / np.asarray(wavelength_cm) ** 2  # 1 / l^2 with l in Angstrom
-    h1, h2 = (a * inverse**2 + b * inverse**3 + c * inverse**4 for a, b, c in (RAYLEIGH_H, RAYLEIGH_H2))
+    a, b, c = RAYLEIGH_H2
+    h2 = a * inverse**2 + b * inverse**3 + c * inverse**4
     helium = RAYLEIGH_HE * (inverse * (1.0 + RAYLEIGH_HE_DISPERSION_A2 * inverse)) ** 2
-    return h1, helium, h2
+    return rayleigh_hydrogen(wavelength_cm), helium, h2
 
 
 # Free-free absorption of hydrogen without Gaunt factor: 4 e^6 / (3 m h c) sqrt(2 pi / (3 k m)) [cm^5 K^1/2 s^-3].
@@ -216,13 +217,14 @@ def continuum_opacity(wavelength_cm: np.ndarray, gas: Gas) -> tuple[np.ndarray, 
     frequency = LIGHT_SPEED_CM_S / wavelength_cm[:, None]
     stimulated = -np.expm1(-RADIATION_C2_CM_K / (wavelength_cm[:, None] * gas.temperature))
     temperature_weights = _weights(_tables().log_temperature, np.log(gas.temperature))
-    gaunt, helium_minus = np.exp(_tables_at(wavelength_cm.tobytes()) @ temperature_weights.T)
+    gaunt, helium_minus, h2_plus = np.exp(_tables_at(wavelength_cm.tobytes()) @ temperature_weights.T)
 
     absorption = bound_free(wavelength_cm, gas)
     absorption += h_minus_bound_free(wavelength_cm)[:, None] * gas.h_minus
     absorption += (
         FREE_FREE_CONSTANT * gaunt / frequency**3 * (gas.electron_density * gas.protons / np.sqrt(gas.temperature))
     )
+    absorption += h2_plus * (gas.h1 * gas.protons)
     absorption *= stimulated
     electron_pressure = gas.electron_density * BOLTZMANN_ERG_K * gas.temperature
     absorption += h_minus_free_free(wavelength_cm, gas.temperature) * (gas.h1 * electron_pressure)

@@ -26,6 +26,8 @@ from specsolve.constants import (
     RADIATION_C2_CM_K,
     RYDBERG_EV,
 )
+from specsolve.matter.h2_plus_build import log_absorption
+from specsolve.matter.hydrogen import KRAMERS_CM2
 from specsolve.matter.partition import ionization_energy
 from specsolve.matter.photoionization import TABLE_PATH
 
@@ -40,6 +42,19 @@ HELIUM_CROSS_SECTION = np.array([4.9, 5.2, 5.6, 5.8, 6.1, 6.5, 6.85, 6.99, 6.89,
 # Neutral atoms whose bound-free absorption is counted.
 ABSORBERS = ("C", "N", "O", "Na", "Mg", "Al", "Si", "S", "K", "Ca", "Ti", "Cr", "Mn", "Fe", "Ni")
 LEVEL_BIN_EV = 0.08  # levels closer than this are merged: Boltzmann factors change by < 1e-3 of the whole
+# Ground terms with the fits of Verner et al. 1996, ApJ 465, 487: highest energy of the term [eV] (NIST).
+GROUND_TERMS = {"Na I": 0.0, "Mg I": 0.0, "Al I": 0.02, "Si I": 0.03, "Ca I": 0.0, "Fe I": 0.13}
+ATOMIC_NUMBERS = {"Na I": 11, "Mg I": 12, "Al I": 13, "Si I": 14, "Ca I": 20, "Fe I": 26}
+# Low excited terms whose edges are known: ion, range of energy [eV], cross-section at the threshold [1e-18 cm^2] and
+# the power of wavelength with which it falls. Mg I 3p 3P, Si I 1D and 1S: Travis & Matsushima 1968, ApJ 154, 689, and
+# Vernazza, Avrett & Loeser 1976, ApJS 30, 1; Na I 3p: Rothe 1969, J. Quant. Spectrosc. Radiat. Transfer 9, 49.
+# All four from memory.
+EXCITED_EDGES = (
+    ("Mg I", 2.6, 2.8, 20.0, 2.7),
+    ("Si I", 0.7, 0.8, 35.0, 3.0),
+    ("Si I", 1.8, 2.0, 46.0, 5.0),
+    ("Na I", 2.0, 2.2, 7.6, 3.0),
+)
 LOWEST_BINDING_EV = 0.4  # levels bound less than this start to absorb beyond 3.1 um, where free-free rules
 
 
@@ -90,7 +105,11 @@ def helium_free_free() -> np.ndarray:
 
 
 def atomic_levels(folder: Path) -> dict[str, np.ndarray]:
-    """Levels of the neutral absorbers, neighbours merged: ion, g, energy [eV], binding energy [eV]."""
+    """Levels of the neutral absorbers, neighbours merged: ion, g, energy [eV], binding energy [eV], cross-section.
+
+    The cross-section is given at the threshold [cm^2] with its power of wavelength: hydrogenic with the effective
+    quantum number of the level (7.9e-18 n*, 3) but for `EXCITED_EDGES`.
+    """
     levels = {f"{symbol} I": [] for symbol in ABSORBERS}
     with gzip.open(folder / "levels.csv.gz", "rt") as lines:
         for g, energy, name in list(csv.reader(lines))[1:]:
@@ -112,7 +131,15 @@ def atomic_levels(folder: Path) -> dict[str, np.ndarray]:
                 energies.append(centre)
                 bindings.append(limit - centre)
                 start = i
+    thresholds, slopes = KRAMERS_CM2 * np.sqrt(RYDBERG_EV / np.array(bindings)), np.full(len(ions), 3.0)
+    for name, low, high, megabarn, slope in EXCITED_EDGES:
+        chosen = (np.array(ions) == name) & (np.array(energies) > low) & (np.array(energies) < high)
+        if not chosen.any():
+            raise ValueError(f"no level of {name} between {low} and {high} eV")
+        thresholds[chosen], slopes[chosen] = 1e-18 * megabarn, slope
     return {
+        "level_threshold_cm2": thresholds,
+        "level_slope": slopes,
         "level_ion": np.array(ions),
         "level_weight": np.array(weights),
         "level_energy_ev": np.array(energies),
@@ -120,17 +147,36 @@ def atomic_levels(folder: Path) -> dict[str, np.ndarray]:
     }
 
 
+def ground_fits(path: Path, levels: dict[str, np.ndarray]) -> dict[str, np.ndarray]:
+    """Fits of Verner et al. 1996 for the ground terms: level, and E0 [eV], sigma0 [1e-18 cm^2], ya, P, yw, y0, y1."""
+    fits = {}
+    for line in path.read_text().splitlines():
+        fields = line.split()
+        if len(fields) == 12 and fields[0] == "Phot" and fields[1] == fields[2]:
+            fits[int(fields[1])] = [float(field) for field in fields[5:]]
+    rows, parameters = [], []
+    for i, (name, energy) in enumerate(zip(levels["level_ion"], levels["level_energy_ev"], strict=True)):
+        if energy <= GROUND_TERMS.get(str(name), -1.0):
+            rows.append(i)
+            parameters.append(fits[ATOMIC_NUMBERS[str(name)]])
+    return {"ground_level": np.array(rows), "ground_fit": np.array(parameters)}
+
+
 def build(reference: Path) -> dict[str, np.ndarray]:
     """All arrays of the packaged table."""
+    levels = atomic_levels(reference / "atomic" / "nist")
     return {
         "log_temperature": LOG_TEMPERATURE,
         "log_wavelength_cm": LOG_WAVELENGTH,
         "log_hydrogen_gaunt": hydrogen_gaunt(reference / "continuum" / "gaunt"),
         "log_helium_minus_cm5": helium_free_free(),
-        **atomic_levels(reference / "atomic" / "nist"),
+        "log_h2_plus_cm5": log_absorption(LOG_TEMPERATURE, LOG_WAVELENGTH),
+        **levels,
+        **ground_fits(reference / "continuum" / "photoionization" / "photo_vfky.data", levels),
         "source": np.array(
             "Gaunt factors: Sutherland 1998, MNRAS 300, 321; He-: momentum transfer cross-sections with the low-energy "
-            "theorem of Dalgarno & Lane 1966, ApJ 145, 623; levels: NIST ASD."
+            "theorem of Dalgarno & Lane 1966, ApJ 145, 623; H2+: own calculation, quasi-static (Bates 1952, MNRAS 112, "
+            "40); levels: NIST ASD; ground terms: Verner et al. 1996, ApJ 465, 487."
         ),
     }
 
