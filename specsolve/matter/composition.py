@@ -112,6 +112,11 @@ def solar_abundance(symbol: str) -> float:
     -------
     float
         log10(N / N_H) + 12 [dex] (Asplund, Amarsi & Grevesse 2021); `-inf` for an element without a photospheric value.
+
+    Examples
+    --------
+    >>> solar_abundance("Fe")
+    7.46
     """
     return SOLAR_ABUNDANCES.get(symbol, -np.inf)
 
@@ -127,6 +132,15 @@ def number_abundance(symbol: str, mh: float, alpha: float | None = None) -> floa
         [Fe/H] [dex]; scales everything but H and He.
     alpha : float, optional
         [alpha/Fe] [dex], added for O, Ne, Mg, Si, S, Ca, Ti; `alpha_law(mh)` if not given.
+
+    Returns
+    -------
+    float
+
+    Examples
+    --------
+    >>> print(f"{number_abundance('Fe', -1.0):.2e}")
+    2.88e-06
     """
     if symbol in ("H", "He"):
         return 10.0 ** (solar_abundance(symbol) - 12.0)

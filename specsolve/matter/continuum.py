@@ -80,6 +80,11 @@ def h_minus_bound_free(wavelength_cm: np.ndarray) -> np.ndarray:
     -------
     ndarray, shape (n_w,)
         [cm^2], per H- ion, without stimulated emission; zero beyond 1.6419 um.
+
+    Examples
+    --------
+    >>> print(f"{h_minus_bound_free(np.array([0.85e-4]))[0]:.2e}")
+    3.99e-17
     """
     x = np.asarray(wavelength_cm) * CM_MICROMETRE
     depth = np.sqrt(np.maximum(1.0 / x - 1.0 / H_MINUS_THRESHOLD_UM, 0.0))
@@ -101,6 +106,11 @@ def h_minus_free_free(wavelength_cm: np.ndarray, temperature: np.ndarray) -> np.
     -------
     ndarray, shape (n_w, n)
         [cm^4 dyn^-1] per neutral hydrogen atom and unit electron pressure.
+
+    Examples
+    --------
+    >>> print(f"{h_minus_free_free(np.array([5.063e-5]), np.array([5040.0]))[0, 0]:.2e}")
+    1.96e-27
     """
     theta = THETA_K / np.asarray(temperature)
     return _h_minus_free_free_terms(np.asarray(wavelength_cm, dtype=float).tobytes()) @ (
@@ -128,7 +138,7 @@ class _Tables(NamedTuple):
 
 @cache
 def _tables() -> _Tables:
-    with np.load(TABLE_PATH, allow_pickle=False) as data:
+    with np.load(TABLE_PATH) as data:
         logs = np.stack([data["log_hydrogen_gaunt"], data["log_helium_minus_cm5"], data["log_h2_plus_cm5"]])
         return _Tables(data["log_temperature"], data["log_wavelength_cm"], logs)
 

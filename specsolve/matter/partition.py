@@ -50,7 +50,7 @@ class PartitionTable(NamedTuple):
 @cache
 def partition_table() -> PartitionTable:
     """The packaged table, read once a process."""
-    with np.load(TABLE_PATH, allow_pickle=False) as data:
+    with np.load(TABLE_PATH) as data:
         x, values = data["log_temperature"], data["log_partition"]
         rows = {str(name): row for row, name in enumerate(data["species"])}
         energies = data["ionization_energy_ev"]

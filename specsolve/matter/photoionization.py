@@ -60,7 +60,7 @@ class Levels(NamedTuple):
 @cache
 def absorbing_levels() -> Levels:
     """Hydrogen first (n = 1, 2, ...), then the levels of the packaged table."""
-    with np.load(TABLE_PATH, allow_pickle=False) as data:
+    with np.load(TABLE_PATH) as data:
         names, weight = data["level_ion"].astype(str), data["level_weight"]
         energy, binding = data["level_energy_ev"], data["level_binding_ev"]
         threshold, slope = data["level_threshold_cm2"], data["level_slope"]

@@ -107,3 +107,17 @@ def test_order_of_points_and_wavelengths_does_not_matter(rng):
     mixed = continuum_opacity(wavelength[waves], equilibrium(temperature[points], pressure[points], composition))
     np.testing.assert_allclose(mixed[0], absorption[np.ix_(waves, points)], rtol=1e-11)
     np.testing.assert_allclose(mixed[1], scattering[np.ix_(waves, points)], rtol=1e-11)
+
+
+def test_small_differences_of_temperature_are_clean():
+    """Differences of 2e-5 in ln T, as a structure solver takes them, agree with those of 1e-3."""
+    temperature, pressure = np.linspace(3000.0, 14000.0, 70), np.geomspace(10.0, 1e6, 70)
+    wavelength = np.geomspace(0.16e-4, 20e-4, 40)
+    composition = composition_for(0.0)
+
+    def log_opacity(step):
+        absorption, _ = continuum_opacity(wavelength, equilibrium(temperature * np.exp(step), pressure, composition))
+        return np.log(absorption)
+
+    slopes = [(log_opacity(step) - log_opacity(-step)) / (2 * step) for step in (2e-5, 1e-3)]
+    np.testing.assert_allclose(slopes[0], slopes[1], atol=0.01, rtol=1e-3)
