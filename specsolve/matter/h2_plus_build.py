@@ -18,7 +18,6 @@ from specsolve.constants import (
     ELECTRON_MASS_G,
     HC_EV_CM,
     LIGHT_SPEED_CM_S,
-    RADIATION_C2_CM_K,
     RYDBERG_EV,
 )
 
@@ -74,8 +73,10 @@ def two_centre_states(distance: float) -> tuple[float, float, float]:
         overlap = half**3 * (
             np.kron(moment(radial, radial, xi**2), ones) - np.kron(moment(radial, radial, 1.0), squares)
         )
-        kinetic = 0.5 * half * (
-            np.kron(moment(d_radial, d_radial, xi**2 - 1.0), ones) + np.kron(moment(radial, radial, 1.0), slopes)
+        kinetic = (
+            0.5
+            * half
+            * (np.kron(moment(d_radial, d_radial, xi**2 - 1.0), ones) + np.kron(moment(radial, radial, 1.0), slopes))
         )
         attraction = -2.0 * half**2 * np.kron(moment(radial, radial, xi), ones)
         cholesky = np.linalg.cholesky(overlap)
