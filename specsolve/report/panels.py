@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from specsolve.balance.residuals import plane_operator
-from specsolve.report.sheet import DECIMALS, NAMES, most_influential
+from specsolve.report.sheet import DECIMALS, NAMES, most_influential, signed
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -30,6 +30,7 @@ DEVIATION_LIMIT = 3.0  # standard deviations at the ends of the colour scale
 AREA_PER_SHARE, AREA_LEAST = 2600.0, 9.0  # square points for the whole weight; least that is still seen
 TEFF_STEP, VMIC_STEP, LOGG_STEP = 100.0, 0.2, 0.3  # K, km/s, dex: the steps of the sensitivity table
 KERNEL_POINTS = 300
+ROOM_FOR_WORDS = 0.22  # of the ladder's width
 LEVER_LINES = 7
 
 
@@ -172,7 +173,7 @@ def draw_trend(axes: Axes, one: Solution, axis: str, *, upright: bool) -> None:
     axes.legend(loc="best", frameon=False, fontsize=6)
     unit = "dex/eV" if axis != "strength" else "dex/dex"
     digits = 4 if axis != "strength" else 3
-    text = f"slope {trend.slope + 0.0:+.{digits}f} ± {trend.slope_error:.{digits}f} {unit}"
+    text = f"slope {signed(trend.slope, digits)} ± {trend.slope_error:.{digits}f} {unit}"
     axes.set_title(text, loc="left")
     name = "[Fe/H] of the line"
     if upright:
@@ -224,11 +225,13 @@ def draw_ladder(axes: Axes, one: Solution) -> None:
             fontsize=6.5,
             va="center",
         )
+    low, high = axes.get_xlim()
+    axes.set_xlim(low - ROOM_FOR_WORDS * (high - low), high)
     axes.set_ylim(-0.18, 1.72)
     axes.set_yticks([])
     axes.set_xlabel("[Fe/H] of the line")
     offset, error = one.residuals[1], float(np.sqrt(max(one.residual_covariance[1, 1], 0.0)))
-    note = f"Fe I - Fe II: {offset + 0.0:+.3f} ± {error:.3f} dex" if np.isfinite(offset) else "ionization not measured"
+    note = f"Fe I - Fe II: {signed(offset, 3)} ± {error:.3f} dex" if np.isfinite(offset) else "ionization not measured"
     axes.set_title(f"{note}   (> <: log g +{LOGG_STEP} and -{LOGG_STEP})", loc="left")
 
 

@@ -96,11 +96,16 @@ def print_overview(solutions: Sequence[Solution], console: Console) -> None:
     )
     notes: dict[str, list[str]] = {}
     for one in solutions:
-        for note in (*one.validity, *one.notes):
+        for note in remarks(one):
             notes.setdefault(note, []).append(one.star)
     for note, stars in notes.items():
         whom = "all stars" if len(stars) == len(solutions) else ", ".join(stars)
         console.print(f"- {note} ({whom})", style="dim", markup=False)
+
+
+def remarks(one: Solution) -> list[str]:
+    """Limits and notes of a star, without the count of lines that the sheet shows anyway."""
+    return [text for text in (*one.validity, *one.notes) if not text.endswith("lines are in the grid")]
 
 
 def print_sheet(one: Solution, console: Console) -> None:
@@ -124,12 +129,12 @@ def print_sheet(one: Solution, console: Console) -> None:
         console.print(f"  from elsewhere: {words}", markup=False)
     for name, shift in one.systematics.items():
         words = ", ".join(
-            f"{NAMES[key]} {_signed(value, DECIMALS[key])}" for key, value in zip(NAMES, shift, strict=True)
+            f"{NAMES[key]} {signed(value, DECIMALS[key])}" for key, value in zip(NAMES, shift, strict=True)
         )
         console.print(f"  systematic {name.replace('_', ' ')}: {words}", markup=False)
     if one.flags:
         console.print(f"  flags: {', '.join(one.flags)}", markup=False)
-    for text in (*one.validity, *one.notes):
+    for text in remarks(one):
         console.print(f"  - {text}", style="dim", markup=False)
 
 
@@ -172,7 +177,7 @@ def _residual_table(one: Solution) -> Any:
         removed = name in one.removed_residuals
         table.add_row(
             words,
-            _signed(value, digits),
+            signed(value, digits),
             _number(error, digits),
             unit,
             "reported, not used" if removed else "",
@@ -186,8 +191,8 @@ def _sensitivity_table(one: Solution) -> Any:
         unit = UNITS[item.parameter]
         table.add_row(
             f"{NAMES[item.parameter]} {item.shift:+g}{' ' + unit if unit else ''}",
-            _signed(item.d_fe1, 3),
-            _signed(item.d_fe2, 3),
+            signed(item.d_fe1, 3),
+            signed(item.d_fe2, 3),
         )
     return table
 
@@ -207,7 +212,7 @@ def _print_lines(one: Solution, console: Console) -> None:
         console.print(f"    and {concerned.size - LISTED_LINES} more, all in the lines table (--output)", style="dim")
     for i in most_influential(one)[:LISTED_INFLUENCES]:
         shifts = ", ".join(
-            f"{NAMES[name]} {_signed(lines.influence[i, j], DECIMALS[name])}" for j, name in enumerate(NAMES)
+            f"{NAMES[name]} {signed(lines.influence[i, j], DECIMALS[name])}" for j, name in enumerate(NAMES)
         )
         console.print(f"    without {_line_name(one, i)}: {shifts}", style="dim", markup=False)
 
@@ -261,8 +266,14 @@ def _number(value: float, digits: int) -> str:
     return f"{value:.{digits}f}" if np.isfinite(value) else "-"
 
 
-def _signed(value: float, digits: int) -> str:
-    """With sign, and without the sign of a zero."""
+def signed(value: float, digits: int) -> str:
+    """A number with its sign; a zero never gets a minus.
+
+    Examples
+    --------
+    >>> signed(-1e-9, 3)
+    '+0.000'
+    """
     return f"{round(float(value), digits) + 0.0:+.{digits}f}" if np.isfinite(value) else "-"
 
 
