@@ -40,8 +40,8 @@ BAND_EDGES_NM = np.array([
     375.0, 387.0, 400.0, 413.0, 427.0, 440.0, 455.0, 470.0, 487.0, 505.0, 525.0, 550.0, 580.0, 615.0, 655.0,
     700.0, 760.0, 820.4, 900.0, 1050.0, 1250.0, 1642.0, 2500.0,
 ])  # fmt: skip
-LOG_TEMPERATURE = np.linspace(3.36, 4.20, 25)
-LOG_PRESSURE = np.linspace(-2.0, 7.5, 20)
+LOG_TEMPERATURE = np.linspace(3.325, 4.20, 26)
+LOG_PRESSURE = np.linspace(-3.5, 7.5, 23)
 VMIC = (1.0, 2.0)
 #: Samples in each band; more change a model by less than 5 K.
 SAMPLES = 3000
