@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from specsolve.errors import InputError
+from specsolve.errors import InputError, UsageError
 
 NODE_AXES = ("teff", "logg", "mh")
 """Axes that need one model atmosphere per node."""
@@ -69,7 +69,7 @@ def parse_axis_subset(text: str) -> np.ndarray:
 
     Raises
     ------
-    InputError
+    UsageError
         If the text is none of these, or STOP is not START plus a whole number of steps.
 
     Examples
@@ -85,11 +85,15 @@ def parse_axis_subset(text: str) -> np.ndarray:
             start, stop, step = (float(part) for part in text.split(":"))
             count = (stop - start) / step
         else:
-            return np.unique([float(part) for part in text.split(",")])
+            values = np.unique([float(part) for part in text.split(",")])
     except (ValueError, ZeroDivisionError) as error:
-        raise InputError(question) from error
+        raise UsageError(question) from error
+    if ":" not in text:
+        if not np.all(np.isfinite(values)):
+            raise UsageError(question)
+        return values
     if not np.isfinite(count) or count < 0 or step <= 0 or abs(count - round(count)) > SAME_NODE:
-        raise InputError(f"{question}; STOP must be START plus a whole number of positive steps")
+        raise UsageError(f"{question}; STOP must be START plus a whole number of positive steps")
     return start + step * np.arange(round(count) + 1)
 
 

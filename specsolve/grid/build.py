@@ -49,6 +49,7 @@ def build_grid(
     executor: Executor | None = None,
     engine: Engine | None = None,
     progress: Callable[[int, int], None] | None = None,
+    announce: Callable[[Plan], None] | None = None,
 ) -> ResponseGrid:
     """Build a grid, extend the one in `directory` by lines that it lacks, or finish an interrupted build.
 
@@ -75,6 +76,8 @@ def build_grid(
         What computes widths; that of the treatment by default.
     progress : callable, optional
         Called with (finished nodes, all nodes).
+    announce : callable, optional
+        Called once with the `Plan`, before work begins.
 
     Returns
     -------
@@ -99,7 +102,11 @@ def build_grid(
         if plan.old is not None:
             remove_finished(directory, [build["key"] for build in plan.old.header["builds"]])
             if plan.covered == len(plan.lines):
+                if announce is not None:
+                    announce(plan)
                 return plan.old
+        if announce is not None:
+            announce(plan)
         check_space(directory, plan)
         shapes = [(len(chunk), plan.computed.size, *(len(axis) for axis in plan.line_axes)) for chunk in plan.chunks]
         parts = Parts(directory, plan.key, shapes)

@@ -16,7 +16,7 @@ from specsolve.errors import SpecsolveError
 from specsolve.grid.codes import encode
 from specsolve.lines import LineList
 
-FORMATION_SOURCES = ("formation", "matter", "lines/wavelengths.py", "constants.py", "data/matter")
+FORMATION_SOURCES = ("formation", "matter", "radiation", "lines/wavelengths.py", "constants.py", "data/matter")
 """Program text and tables that decide a width."""
 
 SECONDS_PER_WIDTH = 6e-5

@@ -224,7 +224,7 @@ class ResponseGrid:
                 )
             if verify and file_sha256(path) != block.sha256:
                 raise StoreError(f"{path} has a wrong checksum: it is damaged; build the grid anew", path=path)
-        except (OSError, ValueError) as error:
+        except (OSError, ValueError, EOFError) as error:
             raise StoreError(f"{path} cannot be read ({error}); build the grid anew", path=path) from error
 
 
