@@ -104,8 +104,12 @@ def print_overview(solutions: Sequence[Solution], console: Console) -> None:
 
 
 def remarks(one: Solution) -> list[str]:
-    """Limits and notes of a star, without the count of lines that the sheet shows anyway."""
-    return [text for text in (*one.validity, *one.notes) if not text.endswith("lines are in the grid")]
+    """Limits and notes of a star, without the count of lines (shown anyway) and without tracebacks (in the table)."""
+    return [
+        text
+        for text in (*one.validity, *one.notes)
+        if not text.endswith("lines are in the grid") and not text.startswith("Traceback")
+    ]
 
 
 def print_sheet(one: Solution, console: Console) -> None:
