@@ -136,11 +136,17 @@ def _minutes(n_lines: int, grid: ResponseGrid) -> str:
 
 
 def _read(name: str, columns: Mapping[str, str], units: Mapping[str, str]) -> Any:
+    import warnings
+
     from astropy.units import Unit
+    from astropy.utils.exceptions import AstropyWarning
 
     from specsolve.lines.reading import read_table
 
-    table = _read_stdin() if name == STDIN else read_table(Path(name))
+    with warnings.catch_warnings():
+        # What matters in a warning of a reader (a unit that is not understood, a file cut short) ends as an error below.
+        warnings.simplefilter("ignore", AstropyWarning)
+        table = _read_stdin() if name == STDIN else read_table(Path(name))
     for ours, unit in units.items():
         theirs = columns.get(ours, ours)
         given = table[theirs].unit if theirs in table.colnames else None

@@ -26,6 +26,8 @@ def giant(made_up_grid, rng):
     return star_table(made_up_grid.lines, "giant", TRUTHS["giant"], rng)
 
 
+# Astropy warns when it WRITES Angstrom into a VOTable; the tables under test are read.
+pytestmark = pytest.mark.filterwarnings("ignore:The unit 'Angstrom' has been deprecated in the VOUnit standard")
 FORMATS = {".ecsv": "ascii.ecsv", ".csv": "ascii.csv", ".fits": "fits", ".vot": "votable"}
 
 
