@@ -225,7 +225,7 @@ def trends(problem: Problem, state: BalanceState) -> tuple[Trend, ...]:
         energy = inputs.excitation_potential if ion == 0 else np.zeros(x.size)
         weights = weighting.weights[mask]
         operator = plane_operator(energy[mask], weighting.strength[mask], weights)[[0, row]]
-        if not np.isfinite(operator).all():
+        if mask.sum() < 3 or not np.isfinite(operator).all():
             continue
         y = state.relative_abundance[mask]
         covariance = (operator * total[mask]) @ operator.T

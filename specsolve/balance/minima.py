@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -14,6 +14,7 @@ from .scan import Scan, scan_nodes, seeds_from_scan
 
 PRELIMINARY_MARGIN_DEX = 0.15  # how much wider the first cut, on measured widths, is than the one on predicted widths
 SAME_MINIMUM = 0.02  # ends closer than this in STEP_UNIT are one minimum: 5 K, 0.01 dex, 0.01 km/s
+ROUGH_TOLERANCE = 1e-3  # in STEP_UNIT: 0.25 K; enough to fix the cut on predicted strength
 REASON_PREDICTED = "predicted_strength_cut"
 REASON_MEASURED = "measured_strength_cut"
 MIN_FE1_LINES = 4  # the plane has three coefficients
@@ -79,16 +80,18 @@ def predicted_lines(problem: Problem, minimum: Minimum, preliminary: np.ndarray)
 
 def local_solve(problem: Problem, start: np.ndarray, preliminary: np.ndarray) -> tuple[Minimum, np.ndarray]:
     """Refine with the wide cut, fix the cut on predicted strength there, refine again."""
-    first = refine(problem, start, preliminary)
-    if first.state is None:
-        return first, preliminary
-    allowed = predicted_lines(problem, first, preliminary)
-    if np.array_equal(allowed, preliminary):
-        return first, allowed
+    return finish(problem, refine(problem, start, preliminary, ROUGH_TOLERANCE), preliminary)
+
+
+def finish(problem: Problem, rough: Minimum, preliminary: np.ndarray) -> tuple[Minimum, np.ndarray]:
+    """The second half of `local_solve`: freeze the cut on predicted strength where the first ended, and refine."""
+    if rough.state is None:
+        return rough, preliminary
+    allowed = predicted_lines(problem, rough, preliminary)
     if not enough_lines(problem, allowed):
-        return first, preliminary
-    second = refine(problem, first.theta, allowed)
-    return (first, preliminary) if second.state is None else (second, allowed)
+        allowed = preliminary
+    minimum = refine(problem, rough.theta, allowed)
+    return (rough, preliminary) if minimum.state is None else (minimum, allowed)
 
 
 def enough_lines(problem: Problem, allowed: np.ndarray) -> bool:
@@ -126,17 +129,25 @@ def search(problem: Problem) -> Search:
     found: list[FoundMinimum] = []
     failures: list[str] = []
     refined = 0
+    reached: list[tuple[np.ndarray, int]] = []  # ends of first refinements, and the candidate that each led to
     for seed in seeds[: problem.options.max_seeds]:
-        minimum, allowed = local_solve(problem, seed.theta, preliminary)
+        rough = refine(problem, seed.theta, preliminary, ROUGH_TOLERANCE)
         refined += 1
-        if minimum.state is None:
-            failures.append(minimum.failure)
+        if rough.state is None:
+            failures.append(rough.failure)
             continue
+        known = next((place for theta, place in reached if _same(theta, rough.theta)), None)
+        if known is not None:
+            found[known] = replace(found[known], seeds=found[known].seeds + seed.count)
+            continue
+        minimum, allowed = finish(problem, rough, preliminary)
         for i, other in enumerate(found):
-            if np.all(np.abs(minimum.theta - other.minimum.theta) < SAME_MINIMUM * STEP_UNIT):
-                found[i] = FoundMinimum(other.minimum, other.allowed, other.seeds + seed.count, other.flags)
+            if _same(minimum.theta, other.minimum.theta):
+                found[i] = replace(other, seeds=other.seeds + seed.count)
+                reached.append((rough.theta, i))
                 break
         else:
+            reached.append((rough.theta, len(found)))
             found.append(FoundMinimum(minimum, allowed, seed.count, minimum_flags(problem, minimum, preliminary)))
     return Search(
         found=tuple(found),
@@ -146,6 +157,10 @@ def search(problem: Problem) -> Search:
         n_refined=refined,
         failures=tuple(dict.fromkeys(failures)),
     )
+
+
+def _same(first: np.ndarray, second: np.ndarray) -> bool:
+    return bool(np.all(np.abs(first - second) < SAME_MINIMUM * STEP_UNIT))
 
 
 def minimum_flags(problem: Problem, minimum: Minimum, preliminary: np.ndarray) -> tuple[str, ...]:

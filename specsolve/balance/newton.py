@@ -66,7 +66,9 @@ def whitened_system(problem: Problem, state: BalanceState) -> tuple[np.ndarray, 
     return np.concatenate([z, outside]), np.vstack([jacobian, outside_jacobian])
 
 
-def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = None) -> Minimum:
+def refine(
+    problem: Problem, start: np.ndarray, allowed: np.ndarray | None = None, tolerance: float = STEP_TOLERANCE
+) -> Minimum:
     """Damped Gauss-Newton from one starting point.
 
     Each step refreshes weights, line-to-line term and strength axis, so that the end is their common fixed point. A
@@ -80,6 +82,8 @@ def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = Non
     problem : Problem
     start : ndarray, shape (4,)
     allowed : ndarray of bool, shape (n_lines,), optional
+    tolerance : float
+        Step at which it ends, in `STEP_UNIT`.
     """
     low, high = problem.bounds
     theta = np.clip(np.asarray(start, float), low, high)
@@ -121,7 +125,7 @@ def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = Non
             break
         theta, state = trial, new_state
         damping = 0.0 if damping <= LEVENBERG_START else 0.1 * damping
-        if moved < STEP_TOLERANCE:
+        if moved < tolerance:
             converged = True
             break
     z, _ = whitened_system(problem, state)

@@ -182,7 +182,7 @@ def settle(
         strength = strength_axis(inputs.log_reduced_width, x_predicted, variances, sigma_gf, inputs.differential)
         total = variances.total
         deviation = deviations(inputs.is_fe2, inputs.excitation_potential, strength, weights / total, y)
-        new_scatter = line_to_line_terms(inputs.is_fe2, deviation, variances.width + variances.gf, used)
+        new_scatter = line_to_line_terms(inputs.is_fe2, deviation, variances.width + variances.gf, used, scatter)
         total = variances.width + variances.gf + new_scatter[inputs.is_fe2.astype(int)] ** 2
         new_weights = np.where(used, robust_weights(deviation / np.sqrt(total), loss), 0.0)
         change = float(np.max(np.abs(new_weights - weights), initial=0.0))
