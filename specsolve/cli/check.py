@@ -62,7 +62,7 @@ def check(
     options = Options(**parsing.cuts(cuts))
     reports = []
     for name, stars in inputs.files:
-        message = coverage_message(name, *coverage(stars, grid), grid)
+        message = coverage_message(name, coverage(stars, grid), grid)
         of_file = [star_report(star, grid, treatment, options, fix) for star in stars]
         reports.append({"table": name, "coverage": message, "stars": of_file})
     if settings.json:

@@ -20,8 +20,6 @@ if TYPE_CHECKING:
 
 STDIN = "-"
 LISTED = 5
-SECONDS_PER_WIDTH = 40e-6
-"""Cost of one width when a grid is built, one core; the design's aim, measured figures are in DEVELOPERS.md."""
 START_UP_SECONDS = 45.0  # compilation and reading of the atmospheres, measured
 
 
@@ -94,25 +92,45 @@ def shared_notes(stars: list[Star]) -> dict[str, str]:
     }
 
 
-def coverage(stars: Iterable[Star], grid: ResponseGrid) -> tuple[int, int]:
-    """(distinct lines that the grid has, distinct lines) of some stars.
+@dataclass(frozen=True)
+class Coverage:
+    """Distinct lines of some stars: how many there are, the grid has, and a grid build could add."""
 
-    Lines are distinct if ion, wavelength (0.01 Angstrom) and excitation potential (0.01 eV) differ.
+    n_lines: int
+    n_inside: int
+    n_addable: int
+
+    @property
+    def n_absent(self) -> int:
+        """Lines that the grid does not have."""
+        return self.n_lines - self.n_inside
+
+
+def coverage(stars: Iterable[Star], grid: ResponseGrid) -> Coverage:
+    """What a grid has of the lines of some stars.
+
+    Lines are distinct if ion, wavelength (0.01 Angstrom) and excitation potential (0.01 eV) differ. A grid build can
+    add those whose excitation potential and log gf the table gives.
     """
     from specsolve.balance.star import match_lines
 
     inside: set[tuple[str, float, float]] = set()
-    outside: set[tuple[str, float, float]] = set()
+    absent: dict[tuple[str, float, float], bool] = {}
     for star in stars:
         index = match_lines(star, grid.lines).index
+        known = np.isfinite(star.excitation_potential) & np.isfinite(star.log_gf)
         potential = np.nan_to_num(star.excitation_potential, nan=-1.0)
-        for ion, wavelength, energy, place in zip(star.ion, star.wavelength_air, potential, index, strict=True):
+        rows = zip(star.ion, star.wavelength_air, potential, index, known, strict=True)
+        for ion, wavelength, energy, place, addable in rows:
             key = (str(ion), round(float(wavelength), 2), round(float(energy), 2))
-            (inside if place >= 0 else outside).add(key)
-    return len(inside), len(inside | outside)
+            if place >= 0:
+                inside.add(key)
+            else:
+                absent[key] = bool(addable)
+    return Coverage(len(inside) + len(absent), len(inside), sum(absent.values()))
 
 
-def coverage_message(name: str, n_inside: int, n_all: int, grid: ResponseGrid) -> str:
+def coverage_message(name: str, found: Coverage, grid: ResponseGrid) -> str:
     """How many lines the grid has and the command that adds the others.
 
     Returns
@@ -121,17 +139,22 @@ def coverage_message(name: str, n_inside: int, n_all: int, grid: ResponseGrid) -
         For example "64 of 101 lines are in the grid; `specsolve grid build my.ecsv --output my_grid` adds 37 in
         about 3 min".
     """
-    text = f"{n_inside} of {n_all} lines are in the grid"
-    absent = n_all - n_inside
-    if absent == 0:
+    text = f"{found.n_inside} of {found.n_lines} lines are in the grid"
+    if found.n_absent == 0:
         return text
+    if found.n_addable == 0:
+        return f"{text}; a grid build adds the others if the table has excitation_potential and log_gf"
     table = shlex.quote(name) if name != STDIN else "TABLE"
-    return f"{text}; `specsolve grid build {table} --output my_grid` adds {absent} in about {_minutes(absent, grid)}"
+    time = _minutes(found.n_addable, grid)
+    return f"{text}; `specsolve grid build {table} --output my_grid` adds {found.n_addable} in about {time}"
 
 
 def _minutes(n_lines: int, grid: ResponseGrid) -> str:
-    widths = n_lines * int(np.prod([len(values) for values in grid.axes.values()]))
-    seconds = START_UP_SECONDS + SECONDS_PER_WIDTH * widths
+    from specsolve.grid.engine import estimated_seconds
+
+    n_nodes = int(np.prod(grid.node_shape))
+    n_widths = int(np.prod([len(axis) for axis in grid.line_axes]))
+    seconds = START_UP_SECONDS + estimated_seconds(n_lines, n_nodes, n_widths)
     return f"{max(1, round(seconds / 60))} min"
 
 
@@ -144,7 +167,7 @@ def _read(name: str, columns: Mapping[str, str], units: Mapping[str, str]) -> An
     from specsolve.lines.reading import read_table
 
     with warnings.catch_warnings():
-        # What matters in a warning of a reader (a unit that is not understood, a file cut short) ends as an error below.
+        # What matters in a warning of a reader (a unit not understood, a file cut short) ends as an error below.
         warnings.simplefilter("ignore", AstropyWarning)
         table = _read_stdin() if name == STDIN else read_table(Path(name))
     for ours, unit in units.items():

@@ -225,7 +225,7 @@ def carry_out(
             f"specsolve: this grid ({grid.identity[:12]}) is not that of the first run ({grid_identity[:12]})"
         )
     for name, of_file in inputs.files:
-        settings.say(f"{name}: {coverage_message(name, *coverage(of_file, grid), grid)}")
+        settings.say(f"{name}: {coverage_message(name, coverage(of_file, grid), grid)}")
     for note, whom in shared_notes(stars).items():
         settings.say(f"{note} ({whom})")
     provenance = collect(

@@ -103,6 +103,11 @@ def test_lines_outside_the_grid_are_counted_with_the_command_that_adds_them(star
     table = Table.read(stars_file)
     table["wavelength_air"][:4] += 1.5
     table.write(stars_file, format="ascii.ecsv", overwrite=True)
+    assert cli.run(["check", str(stars_file), *grid_option]) == 0
+    assert "adds the others if the table has excitation_potential and log_gf" in capsys.readouterr().out
+    table["log_gf"] = -2.0
+    table["log_gf"][4:] = np.nan
+    table.write(stars_file, format="ascii.ecsv", overwrite=True)
     assert cli.run(["solve", str(stars_file), *grid_option]) == 0
     text = capsys.readouterr().err
     assert f"`specsolve grid build {stars_file} --output my_grid` adds 4 in about" in text
