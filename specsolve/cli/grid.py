@@ -128,7 +128,7 @@ def info(settings: Settings, directory: Path | None, list_lines: bool) -> None:
 @click.argument("directory", type=FOLDER, required=False)
 @click.option("--points", "n_points", type=click.IntRange(1), default=20, show_default=True, help="Points.")
 @click.option("--metallicities", type=click.IntRange(0), default=2, show_default=True,
-              help="Different [M/H] of the points, each about a minute for its opacity tables. 0: on nodes.")  # fmt: skip
+              help="Different [M/H] of the points, a minute each for opacity tables. 0: on nodes.")  # fmt: skip
 @click.option("--treatment", default="lte", show_default=True, help="Line formation.")
 @click.option("--atmospheres", type=FOLDER, help="The store that the grid was built on; default the packaged one.")
 @click.option("--parameters/--no-parameters", default=True, show_default=True, help="Solve each point as a star.")

@@ -80,19 +80,18 @@ def parse_axis_subset(text: str) -> np.ndarray:
     [2.5]
     """
     question = f"'{text}' is not an axis subset: write START:STOP:STEP (4500:6000:250), A,B,C or one number"
+    is_range = ":" in text
     try:
-        if ":" in text:
-            start, stop, step = (float(part) for part in text.split(":"))
-            count = (stop - start) / step
-        else:
-            values = np.unique([float(part) for part in text.split(",")])
-    except (ValueError, ZeroDivisionError) as error:
+        numbers = [float(part) for part in text.split(":" if is_range else ",")]
+    except ValueError as error:
         raise UsageError(question) from error
-    if ":" not in text:
-        if not np.all(np.isfinite(values)):
-            raise UsageError(question)
-        return values
-    if not np.isfinite(count) or count < 0 or step <= 0 or abs(count - round(count)) > SAME_NODE:
+    if not np.all(np.isfinite(numbers)) or (is_range and len(numbers) != 3):
+        raise UsageError(question)
+    if not is_range:
+        return np.unique(numbers)
+    start, stop, step = numbers
+    count = (stop - start) / step if step > 0 else -1.0
+    if count < 0 or abs(count - round(count)) > SAME_NODE:
         raise UsageError(f"{question}; STOP must be START plus a whole number of positive steps")
     return start + step * np.arange(round(count) + 1)
 

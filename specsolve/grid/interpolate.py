@@ -14,7 +14,7 @@ from specsolve.constants import SOLAR_IRON
 from specsolve.errors import InputError, OutOfGridError
 from specsolve.grid.codes import decode
 from specsolve.grid.inversion import dA_slope_matrices, invert_curves, values_on_curves
-from specsolve.grid.stencil import cell_of, hermite_basis, line_axis_slopes
+from specsolve.grid.stencil import cell_of, hermite_basis, spline_slopes
 from specsolve.grid.store import ResponseGrid
 
 AT_EDGE = 1
@@ -88,7 +88,7 @@ class Interpolator:
         self.names = (*(axis.name for axis in grid.node_axes), grid.line_axes[0].name)
         self.mh_axis = self.names.index("mh")
         self.stencils = grid.stencils(treatment)
-        self.vmic_slopes = line_axis_slopes(self.vmic, even=True)
+        self.vmic_slopes = spline_slopes(self.vmic, even=True)
         self.dA_slopes = dA_slope_matrices(self.dA)
         self._cell: tuple[int, ...] | None = None
         self._numbers: np.ndarray | None = None

@@ -1,15 +1,14 @@
 """From a width to an abundance on curves of growth, and back: the cubic along the dA axis.
 
-A curve is given at the nodes of dA; between them it is the cubic with the values and slopes of the two nodes, the
-slopes from at most five neighbouring nodes (`specsolve.grid.stencil`). Widths missing at an end of the axis shorten the
-curve; it is never continued beyond its last node.
+A curve is given at the nodes of dA and continued between them by a cubic spline. Widths missing at an end of the axis
+shorten the curve; it is never continued beyond its last node.
 """
 
 from __future__ import annotations
 
 import numpy as np
 
-from specsolve.grid.stencil import line_axis_slopes
+from specsolve.grid.stencil import spline_slopes
 
 OUTSIDE = 4
 """Flag of `invert_curves`: the width lies beyond the ends of the curve."""
@@ -29,9 +28,7 @@ def dA_slope_matrices(dA: np.ndarray) -> np.ndarray:
     matrices = np.zeros((n, n + 1, n, n))
     for first in range(n):
         for end in range(first + 2, n + 1):
-            usable = np.zeros(n, dtype=bool)
-            usable[first:end] = True
-            matrices[first, end] = line_axis_slopes(dA, usable)
+            matrices[first, end, first:end, first:end] = spline_slopes(dA[first:end])
     return matrices
 
 

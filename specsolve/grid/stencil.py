@@ -12,6 +12,9 @@ cell that asks. So the interpolant and its first derivatives are continuous acro
 A slope comes from the polynomial through the nearest `PURE_POINTS` nodes of the unbroken run of valid nodes around the
 node along the axis (mixed slopes: `MIXED_POINTS` an axis): central inside, one-sided at the ends of the grid and beside
 missing nodes. A missing node ends the run; nothing reaches across it.
+
+Along the axes that need no atmosphere (vmic, dA) the slopes are those of a cubic spline through all nodes: widths vary
+faster there, and no node is missing for lack of an atmosphere.
 """
 
 from __future__ import annotations
@@ -92,29 +95,38 @@ def slope_stencil(x: np.ndarray, usable: np.ndarray, node: int, n_points: int) -
     return indices, derivative_weights(x[indices], x[node])
 
 
-def line_axis_slopes(x: np.ndarray, usable: np.ndarray | None = None, even: bool = False) -> np.ndarray:
-    """Matrix from node values along an axis to slopes at its nodes, shape (n, n).
+def spline_slopes(x: np.ndarray, even: bool = False) -> np.ndarray:
+    """Matrix from node values to the node slopes of the cubic spline through them, shape (n, n).
+
+    The spline has continuous second derivatives and one cubic each over the first two and the last two intervals; for
+    three nodes it is the parabola, for two the line.
 
     Parameters
     ----------
     x : ndarray, shape (n,)
-    usable : ndarray of bool, shape (n,), optional
-        Rows of unusable nodes are zero.
     even : bool
-        The function is even in x and x starts at 0: mirrored nodes serve as neighbours. So it is with vmic, which
-        enters the Doppler width squared.
+        The function is even in x and x starts at 0: nodes mirrored at 0 take part. So it is with vmic, which enters
+        the Doppler width squared.
     """
     n = x.size
-    usable = np.ones(n, dtype=bool) if usable is None else usable
-    matrix = np.zeros((n, n))
-    mirrored = even and n > 1 and x[0] == 0.0
-    source = np.concatenate([np.arange(n - 1, 0, -1), np.arange(n)]) if mirrored else np.arange(n)
-    position = np.concatenate([-x[:0:-1], x]) if mirrored else x
-    for node in range(n):
-        stencil = slope_stencil(position, usable[source], node + position.size - n, PURE_POINTS)
-        if stencil is not None:
-            np.add.at(matrix[node], source[stencil[0]], stencil[1])
-    return matrix
+    if even and n > 1 and x[0] == 0.0:
+        whole = spline_slopes(np.concatenate([-x[:0:-1], x]))[n - 1 :]
+        matrix = whole[:, n - 1 :].copy()
+        matrix[:, 1:] += whole[:, n - 2 :: -1]
+        return matrix
+    if n <= 3:
+        return np.array([derivative_weights(x, at) for at in x]) if n > 1 else np.zeros((1, 1))
+    h = np.diff(x)
+    unit = np.eye(n)
+    chord = np.diff(unit, axis=0) / h[:, None]  # slopes of the intervals, as rows over node values
+    left, right = np.zeros((n, n)), np.zeros((n, n))  # left @ slopes = right @ values
+    for i in range(1, n - 1):  # equal second derivatives at node i
+        left[i, i - 1 : i + 2] = h[i], 2.0 * (h[i - 1] + h[i]), h[i - 1]
+        right[i] = 3.0 * (h[i] * chord[i - 1] + h[i - 1] * chord[i])
+    for row, i in ((0, 0), (n - 1, n - 3)):  # equal third derivatives in intervals i and i + 1
+        left[row] = (unit[i] + unit[i + 1]) / h[i] ** 2 - (unit[i + 1] + unit[i + 2]) / h[i + 1] ** 2
+        right[row] = 2.0 * chord[i] / h[i] ** 2 - 2.0 * chord[i + 1] / h[i + 1] ** 2
+    return np.linalg.solve(left, right)
 
 
 def cell_of(x: np.ndarray, value: float) -> int:

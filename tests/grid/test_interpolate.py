@@ -310,3 +310,42 @@ def test_importing_and_using_the_plain_path_does_not_load_numba(grid):
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=False)
     assert done.returncode == 0, done.stderr
+
+
+def test_spline_slopes_are_those_of_the_interpolating_spline(rng):
+    from scipy.interpolate import CubicSpline
+
+    from specsolve.grid.stencil import spline_slopes
+
+    for n in (4, 5, 8):
+        x = np.cumsum(rng.uniform(0.2, 1.0, n))
+        y = rng.normal(size=n)
+        assert np.allclose(spline_slopes(x) @ y, CubicSpline(x, y)(x, 1))
+    x = np.concatenate([[0.0], np.cumsum(rng.uniform(0.2, 1.0, 6))])
+    y = rng.normal(size=7)
+    mirrored = CubicSpline(np.concatenate([-x[:0:-1], x]), np.concatenate([y[:0:-1], y]))
+    assert np.allclose(spline_slopes(x, even=True) @ y, mirrored(x, 1))
+
+
+@pytest.mark.parametrize("nodes", [[0.0, 1.0, 2.0, 3.0, 4.0], [0.0, 0.3, 1.0, 1.4, 2.5]])
+def test_node_slopes_are_exact_for_polynomials_of_their_degree(nodes):
+    from specsolve.grid.stencil import slope_stencil
+
+    x = np.array(nodes)
+    usable = np.ones(5, dtype=bool)
+    for node in range(5):
+        indices, weights = slope_stencil(x, usable, node, 5)
+        for power in range(5):
+            expected = power * x[node] ** (power - 1) if power else 0.0
+            assert np.isclose(weights @ x[indices] ** power, expected, atol=1e-10)
+
+
+def test_node_slopes_stop_at_unusable_nodes():
+    from specsolve.grid.stencil import slope_stencil
+
+    x = np.arange(9.0)
+    usable = np.array([1, 1, 0, 1, 1, 1, 0, 1, 0], dtype=bool)
+    assert slope_stencil(x, usable, 0, 5)[0].tolist() == [0, 1]
+    assert slope_stencil(x, usable, 4, 5)[0].tolist() == [3, 4, 5]
+    assert slope_stencil(x, usable, 2, 5) is None
+    assert slope_stencil(x, usable, 7, 5) is None
