@@ -37,7 +37,8 @@ def make_star(
 ) -> Star:
     """A star of the grid: widths at theta, with relative width noise and line-by-line abundance noise [dex].
 
-    `ion_offset` [dex] is added to A(Fe I); `feh` is the lines' own metallicity where it differs from the atmosphere's.
+    `ion_offset` [dex] is added to A(Fe I); `feh` is the lines' own metallicity where it differs from the
+    atmosphere's.
     """
     lines = interpolator.grid.lines
     n = len(lines)

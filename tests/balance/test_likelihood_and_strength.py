@@ -23,7 +23,9 @@ def test_density_is_the_normal_density_of_log_widths(rng):
 
 
 def test_insensitive_corner_does_not_win():
-    """Halving every dlnW/dA halves nothing in chi2 when the errors follow, but the density of the widths drops to less."""
+    """Halving every dlnW/dA halves nothing in chi2 when the errors follow, but the density of the widths drops to
+    less.
+    """
     y, n = np.linspace(-0.1, 0.1, 20), 20
     sharp = minus_two_log_density(y, np.full(n, 0.01), np.full(n, 1.0), np.zeros(n, int))
     flat = minus_two_log_density(y, np.full(n, 0.01 + 0.03), np.full(n, 4.0), np.zeros(n, int))
@@ -41,7 +43,9 @@ def test_two_groups_have_their_own_abundance(rng):
 
 @pytest.mark.parametrize(("sigma_gf", "sigma_width"), [(0.10, 0.03), (0.02, 0.08), (0.06, 0.06)])
 def test_slope_against_the_mixture_is_unbiased(rng, sigma_gf, sigma_width):
-    """Weak lines (dA/dlogW = 1), width errors and gf errors: measured widths bias the slope up, predicted ones down."""
+    """Weak lines (dA/dlogW = 1), width errors and gf errors: measured widths bias the slope up, predicted ones
+    down.
+    """
     n = 200_000
     true = rng.uniform(-5.6, -5.0, n)
     gf_error = rng.normal(size=n) * sigma_gf  # assumed minus true log gf

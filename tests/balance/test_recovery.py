@@ -168,7 +168,9 @@ def test_gravity_fixed_takes_the_metallicity_from_the_first_ion(interpolator):
 
 
 def test_gaussian_outside_pulls_by_the_inverse_variances(interpolator):
-    """One outside gravity, 0.2 dex off: the answer is the weighted mean of it and of what the lines say (linear limit)."""
+    """One outside gravity, 0.2 dex off: the answer is the weighted mean of it and of what the lines say (linear
+    limit).
+    """
     star = make_star(interpolator, TRUTHS[1], stated_error=0.05)
     alone = solve(star, interpolator.grid, options=WIDE)
     sigma = float(alone.errors[1])

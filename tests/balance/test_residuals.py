@@ -26,7 +26,7 @@ def lines(rng):
 
 
 def test_plane_is_weighted_least_squares(lines, rng):
-    is_fe2, chi, x, weights = (v[:40] for v in lines)
+    _is_fe2, chi, x, weights = (v[:40] for v in lines)
     y = rng.normal(7.5, 0.1, 40)
     root = np.sqrt(weights)
     design = np.column_stack([np.ones(40), chi - np.average(chi, weights=weights), x - np.average(x, weights=weights)])
@@ -77,7 +77,7 @@ def test_full_covariance_of_lines(lines, rng):
 
 
 def test_common_axis_of_excitation_and_strength_has_no_plane(lines):
-    is_fe2, chi, _, weights = lines
+    _is_fe2, chi, _, weights = lines
     operator = plane_operator(chi, -6.0 + 0.2 * chi, weights)
     assert np.isnan(operator[1:]).all()
     assert np.isfinite(operator[0]).all()

@@ -63,7 +63,8 @@ def test_line_to_line_term_is_recovered_with_and_without_blends(rng, bad):
     blended = rng.random(n) < bad
     deviation = deviation + np.where(blended, 0.5, 0.0)
     found = line_to_line_term(deviation, np.full(n, known**2), 3)
-    # statistical error about s/sqrt(2n) = 0.001; one-sided blends of 7 sigma in a tenth of the lines inflate by up to a third
+    # statistical error about s/sqrt(2n) = 0.001; one-sided blends of 7 sigma in a tenth of the lines inflate by up
+    # to a third
     assert found == pytest.approx(s, abs=0.004 if bad == 0.0 else 0.022)
     if bad:
         assert found < 0.5 * np.std(deviation)
