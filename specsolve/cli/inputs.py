@@ -19,8 +19,7 @@ if TYPE_CHECKING:
     from specsolve.grid.store import ResponseGrid
 
 STDIN = "-"
-LISTED = 5
-START_UP_SECONDS = 45.0  # compilation and reading of the atmospheres, measured
+START_UP_SECONDS = 45.0  # compilation of the kernels and reading of the atmospheres, rounded up
 
 
 @dataclass
