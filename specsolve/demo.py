@@ -1,8 +1,8 @@
 """The invented demo cluster: widths made by the full engine, noise and mishaps added.
 
-Nothing here is real: the open cluster Marsk 7, its members and the spectrograph Tarn are invented.  Each member's atmosphere
-is converged at its own parameters with opacity tables of the cluster's own metallicity; no response grid is involved,
-so that solving the demo tests the grid too.
+Nothing here is real: the open cluster Marsk 7, its members and the spectrograph Tarn are invented.  Each member's
+atmosphere is converged at its own parameters with opacity tables of the cluster's own metallicity; no response grid is
+involved, so that solving the demo tests the grid too.
 
 ``python -m specsolve.demo --output demo_data`` writes ``cluster_widths.ecsv`` and ``cluster_truth.ecsv`` (about three
 minutes, of which most is the opacity table).
@@ -101,8 +101,13 @@ MEMBERS = (
     Member(f"{CLUSTER} 305", 4885.0, 2.52, 1.43, 180.0, 1),
     Member(f"{CLUSTER} 309", 4640.0, 2.11, 1.56, 160.0, 2),
 )
-MISHAPS = (("blend", 1.45), ("cosmic-ray hit", 0.55), ("misplaced continuum", 0.78), ("telluric line", 1.9))
-"""Kind and factor on the width; invented."""
+MISHAPS = (
+    ("blend", 1.45, 0.0),
+    ("cosmic-ray hit", 0.55, 0.0),
+    ("misplaced continuum", 0.78, 0.0),
+    ("telluric line", 1.9, 6270.0),
+)
+"""Kind, factor on the width, and wavelength above which it happens [Angstrom]; invented."""
 UNKNOWN_LOG_GF_ERROR = 0.08  # dex, for lines whose source gives none
 LEAST_SIGNIFICANCE = 5.0  # widths below this many errors are not reported
 WIDEST_MA = 180.0  # wider lines were not measured, mA
@@ -159,7 +164,8 @@ def observe(
     index = np.flatnonzero(seen)
     spoiled = []
     for i in rng.choice(index, size=member.n_bad, replace=False):
-        kind, factor = MISHAPS[rng.integers(len(MISHAPS))]
+        possible = [item for item in MISHAPS if lines.wavelength_air[i] > item[2]]
+        kind, factor, _ = possible[rng.integers(len(possible))]
         measured[i] *= factor
         spoiled.append(f"{lines.ion[i]} {lines.wavelength_air[i]:.2f} {kind}")
     return index, np.round(measured[index], 2), np.round(errors[index], 2), spoiled
@@ -174,6 +180,8 @@ def make(output: str | Path, *, seed: int = SEED, members: tuple[Member, ...] = 
         Folder.
     seed : int
         Of the noise, the mishaps, and the errors of log gf, which are drawn once and shared by all members.
+    members : tuple of Member
+        Some of `MEMBERS`; what one of them gets does not depend on the others.
 
     Returns
     -------
@@ -186,9 +194,10 @@ def make(output: str | Path, *, seed: int = SEED, members: tuple[Member, ...] = 
     columns: dict[str, list] = {name: [] for name in ("star", "wavelength_air", "ion", "excitation_potential")}
     columns |= {"equivalent_width": [], "equivalent_width_error": []}
     spoiled_by_star = []
-    for member, model, child in zip(members, atmospheres(members, CLUSTER_FEH), rng.spawn(len(members)), strict=True):
+    noise = dict(zip(MEMBERS, rng.spawn(len(MEMBERS)), strict=True))
+    for member, model in zip(members, atmospheres(members, CLUSTER_FEH), strict=True):
         widths = true_widths(member, model, nature, CLUSTER_FEH)
-        index, measured, errors, spoiled = observe(member, widths, lines, TARN, child)
+        index, measured, errors, spoiled = observe(member, widths, lines, TARN, noise[member])
         columns["star"] += [member.name] * len(index)
         columns["wavelength_air"] += list(np.round(lines.wavelength_air[index], 3))
         columns["ion"] += list(lines.ion[index])
