@@ -7,6 +7,7 @@ first derivatives (`specsolve.grid.stencil`). The nodes of a cell are gathered o
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -65,8 +66,8 @@ class Interpolator:
     line_indices : array-like of int, optional
         Positions in ``grid.lines``; all lines by default.
     compiled : bool
-        Use the compiled kernels (bulk work: loads numba and holds the codes of the lines in memory). The results agree
-        with the plain path to 1e-9.
+        Use the compiled kernels, for bulk work: this loads numba, which takes a second or two. The results agree with
+        the plain path to 1e-9.
 
     Examples
     --------
@@ -88,8 +89,8 @@ class Interpolator:
         self.names = (*(axis.name for axis in grid.node_axes), grid.line_axes[0].name)
         self.mh_axis = self.names.index("mh")
         self.stencils = grid.stencils(treatment)
-        self.vmic_slopes = spline_slopes(self.vmic, even=True)
-        self.dA_slopes = dA_slope_matrices(self.dA)
+        self.vmic_slopes = slopes_of(tuple(self.vmic))
+        self.dA_slopes = dA_slopes_of(tuple(self.dA))
         self._cell: tuple[int, ...] | None = None
         self._numbers: np.ndarray | None = None
         self._cell_flags = 0
@@ -99,8 +100,6 @@ class Interpolator:
             from specsolve.grid import kernels
 
             self._kernels = kernels
-            nodes = np.indices(grid.node_shape).reshape(len(grid.node_shape), -1)
-            self._all_codes = grid.gather(treatment, tuple(nodes), self.line_indices)
 
     def abundances(self, theta, log_reduced_widths) -> LineAbundances:
         """Abundance of each line from its width.
@@ -241,10 +240,11 @@ class Interpolator:
         nodes, matrix = self.stencils.cell_map(node_cell)
         vmic_map = self._vmic_map(vmic_cell)
         if self._kernels is not None:
-            flat = np.ravel_multi_index(tuple(nodes.T), self.grid.node_shape)
-            self._numbers = self._kernels.gather_cell(
-                self._all_codes, flat, *self._kernels.sparse_rows(matrix), vmic_map
-            )
+            shape = (self.line_indices.size, len(matrix), len(vmic_map), self.dA.size)
+            self._numbers = np.full(shape, np.nan)
+            sparse = self.stencils.sparse_map(node_cell)
+            for codes, inside, place in self.grid.flat_blocks(self.treatment, self.line_indices):
+                self._kernels.gather_cell(codes, inside, place, *sparse, vmic_map, self._numbers)
         else:
             values = decode(self.grid.gather(self.treatment, tuple(nodes.T), self.line_indices))
             self._numbers = apply_maps(matrix, vmic_map, values)
@@ -297,6 +297,18 @@ class Interpolator:
         shape = self._numbers.shape
         curves = (weights @ self._numbers.reshape(shape[0] * shape[1], -1)).reshape(-1, *shape[2:])
         return curves[0], curves[1:]
+
+
+@lru_cache
+def slopes_of(vmic: tuple[float, ...]) -> np.ndarray:
+    """Slope matrix of the vmic axis; see `specsolve.grid.stencil.spline_slopes`."""
+    return spline_slopes(np.array(vmic), even=True)
+
+
+@lru_cache
+def dA_slopes_of(dA: tuple[float, ...]) -> np.ndarray:
+    """Slope matrices of the dA axis; see `specsolve.grid.inversion.dA_slope_matrices`."""
+    return dA_slope_matrices(np.array(dA))
 
 
 def apply_maps(matrix: np.ndarray, vmic_map: np.ndarray, values: np.ndarray) -> np.ndarray:

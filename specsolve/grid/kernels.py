@@ -15,39 +15,30 @@ from specsolve.grid.inversion import MISSING as FLAG_MISSING
 from specsolve.grid.inversion import OUTSIDE as FLAG_OUTSIDE
 
 
-def sparse_rows(matrix: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Row starts, columns and weights of the non-zero elements of a matrix."""
-    rows, columns = np.nonzero(matrix)
-    starts = np.searchsorted(rows, np.arange(len(matrix) + 1))
-    return starts.astype(np.int64), columns.astype(np.int64), np.ascontiguousarray(matrix[rows, columns])
-
-
 @njit(cache=True, nogil=True)
-def gather_cell(codes, nodes, starts, columns, weights, vmic_map):
-    """Hermite numbers of a cell from the codes of its nodes.
+def gather_cell(codes, inside, place, nodes, starts, columns, weights, vmic_map, out):
+    """Hermite numbers of a cell from the codes of its nodes, for the lines of one block.
 
     Parameters
     ----------
-    codes : ndarray of uint16, shape (n_all_nodes, n_lines, n_vmic, n_dA)
-    nodes : ndarray of int, shape (n_nodes,)
-    starts, columns, weights : ndarray
-        Sparse map from nodes to numbers, see `sparse_rows`.
+    codes : ndarray of uint16, shape (n_all_nodes, n_block_lines, n_vmic, n_dA)
+    inside, place : ndarray of int, shape (n_lines,)
+        Positions of the lines in the block and in `out`.
+    nodes, starts, columns, weights : ndarray
+        Sparse map from nodes to numbers, see `stencil.NodeStencils.sparse_map`.
     vmic_map : ndarray, shape (n_vmic_numbers, n_vmic)
-
-    Returns
-    -------
-    ndarray, shape (n_lines, n_numbers, n_vmic_numbers, n_dA)
+    out : ndarray, shape (n_all_lines, n_numbers, n_vmic_numbers, n_dA)
+        Filled at `place`.
     """
-    n_lines, n_vmic, n_dA = codes.shape[1:]
+    n_vmic, n_dA = codes.shape[2:]
     n_numbers = starts.size - 1
     n_vmic_numbers = vmic_map.shape[0]
     n_inner = n_vmic_numbers * n_dA
-    out = np.zeros((n_lines, n_numbers, n_vmic_numbers, n_dA))
     at_node = np.empty((nodes.size, n_inner))
     widths = np.empty((n_vmic, n_dA))
-    for line in range(n_lines):
+    for line in range(inside.size):
         for k in range(nodes.size):
-            here = codes[nodes[k], line]
+            here = codes[nodes[k], inside[line]]
             for j in range(n_vmic):
                 for a in range(n_dA):
                     widths[j, a] = here[j, a] * STEP + FIRST_LOG_WIDTH if here[j, a] != MISSING else np.nan
@@ -59,14 +50,14 @@ def gather_cell(codes, nodes, starts, columns, weights, vmic_map):
                     if weight != 0.0:
                         for a in range(n_dA):
                             target[q, a] += weight * widths[j, a]
-        numbers = out[line].reshape(n_numbers, n_inner)
+        numbers = out[place[line]].reshape(n_numbers, n_inner)
+        numbers[:] = 0.0
         for row in range(n_numbers):
-            for place in range(starts[row], starts[row + 1]):
-                weight = weights[place]
-                source = at_node[columns[place]]
+            for entry in range(starts[row], starts[row + 1]):
+                weight = weights[entry]
+                source = at_node[columns[entry]]
                 for i in range(n_inner):
                     numbers[row, i] += weight * source[i]
-    return out
 
 
 @njit(cache=True, nogil=True)

@@ -153,6 +153,7 @@ class NodeStencils:
             for axes in combinations(self.active, size):
                 self._usable[axes] = has_neighbour(self._usable[axes[:-1]], axes[-1])
         self._cells: dict[tuple[int, ...], tuple[np.ndarray, np.ndarray]] = {}
+        self._sparse: dict[tuple[int, ...], tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]] = {}
         self._stencils: dict[tuple[int, int, int, bytes], list[tuple[int, float]]] = {}
 
     @property
@@ -206,6 +207,16 @@ class NodeStencils:
                     matrix[i, place[node]] = weight
             self._cells[cell] = np.array(nodes), matrix
         return self._cells[cell]
+
+    def sparse_map(self, cell: tuple[int, ...]) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """`cell_map` for kernels: flat node numbers; row starts, columns and weights of the non-zero elements."""
+        if cell not in self._sparse:
+            nodes, matrix = self.cell_map(cell)
+            rows, columns = np.nonzero(matrix)
+            starts = np.searchsorted(rows, np.arange(len(matrix) + 1))
+            flat = np.ravel_multi_index(tuple(nodes.T), self.valid.shape)
+            self._sparse[cell] = flat, starts.astype(np.int64), columns.astype(np.int64), matrix[rows, columns]
+        return self._sparse[cell]
 
     def _weights(self, node: tuple[int, ...], axes: tuple[int, ...], n_points: int) -> dict[tuple[int, ...], float]:
         if not axes:

@@ -107,6 +107,10 @@ class ResponseGrid:
             grid._check_block(block, verify)
         return grid
 
+    def __reduce__(self):
+        """Pickled by folder: another process maps the same files."""
+        return _reopen, (self.directory, self.identity)
+
     @cached_property
     def axes(self) -> dict[str, np.ndarray]:
         """Node values of every axis by name: teff, logg, mh, vmic, dA."""
@@ -179,19 +183,33 @@ class ResponseGrid:
         -------
         ndarray of uint16, shape (n_nodes, n_lines, n_vmic, n_dA)
         """
-        self._treatment(treatment)
         shape = (nodes[0].size, line_indices.size, *(len(axis) for axis in self.line_axes))
         out = np.full(shape, MISSING, dtype=CODE_TYPE)
+        flat = np.ravel_multi_index(nodes, self.node_shape)
+        for codes, inside, place in self.flat_blocks(treatment, line_indices):
+            out[:, place] = codes[flat[:, None], inside[None, :]]
+        return out
+
+    def flat_blocks(self, treatment: str, line_indices: np.ndarray) -> list[tuple[np.ndarray, np.ndarray, np.ndarray]]:
+        """The blocks that hold some lines, with the node axes flattened; for kernels.
+
+        Returns
+        -------
+        list of (codes, inside, place)
+            Mapped codes of shape (n_nodes, n_block_lines, n_vmic, n_dA), the positions of the lines in the block and
+            in `line_indices`.
+        """
+        self._treatment(treatment)
+        found = []
         for block in self.blocks:
-            if block.treatment != treatment:
-                continue
             place = np.flatnonzero(
                 (line_indices >= block.first_line) & (line_indices < block.first_line + block.n_lines)
             )
-            if place.size:
-                inside = line_indices[place] - block.first_line
-                out[:, place] = self._mapped[block.file][(*(axis[:, None] for axis in nodes), inside[None, :])]
-        return out
+            if block.treatment == treatment and place.size:
+                mapped = self._mapped[block.file]
+                codes = np.asarray(mapped).reshape(-1, *mapped.shape[-3:])
+                found.append((codes, line_indices[place] - block.first_line, place))
+        return found
 
     def locate(self, keys) -> np.ndarray:
         """Position in `lines` of each line key, -1 where the grid lacks the line."""
@@ -226,6 +244,13 @@ class ResponseGrid:
                 raise StoreError(f"{path} has a wrong checksum: it is damaged; build the grid anew", path=path)
         except (OSError, ValueError, EOFError) as error:
             raise StoreError(f"{path} cannot be read ({error}); build the grid anew", path=path) from error
+
+
+def _reopen(directory: Path, identity: str) -> ResponseGrid:
+    grid = ResponseGrid.open(directory, verify=False)
+    if grid.identity != identity:
+        raise StoreError(f"{directory} has changed while it was in use; start again", path=directory)
+    return grid
 
 
 def read_header(directory: Path) -> dict[str, Any]:

@@ -167,3 +167,12 @@ def test_nodes_must_have_atmospheres():
 def test_an_axis_must_rise(values):
     with pytest.raises(InputError):
         Axis("logg", "dex", values)
+
+
+def test_a_grid_travels_to_another_process_by_its_folder(written, copy):
+    remake, arguments = written.__reduce__()
+    assert remake(*arguments).identity == written.identity
+    remake, arguments = ResponseGrid.open(copy).__reduce__()
+    change_header(copy, description="something else")
+    with pytest.raises(StoreError, match="has changed"):
+        remake(*arguments)
