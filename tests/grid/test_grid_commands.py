@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 
 from specsolve.atmosphere.store import AtmosphereStore
+from specsolve.cli.grid import parameter_errors, parameter_summary, parameter_words
 from specsolve.cli.main import run
 from specsolve.errors import EXIT_INTERRUPTED, EXIT_NO_INPUT, EXIT_UNEXPECTED, EXIT_USAGE
 from specsolve.grid import ResponseGrid, engine
@@ -15,6 +16,7 @@ from specsolve.grid import check as check_module
 from specsolve.lines import default_line_list
 from tests.grid.double import ENGINE, Atmospheres, Model
 from tests.grid.killing import content
+from tests.grid.synthetic import synthetic_grid, synthetic_lines
 
 
 @pytest.fixture
@@ -154,6 +156,18 @@ def test_check_refuses_other_atmospheres(doubles, line_file, tmp_path, monkeypat
     monkeypatch.setattr(AtmosphereStore, "packaged", classmethod(lambda cls: Atmospheres("b" * 64)))
     assert run(["grid", "check", target]) == EXIT_NO_INPUT
     assert "other atmospheres" in capsys.readouterr().err
+
+
+def test_check_solves_points_as_stars(tmp_path):
+    grid = synthetic_grid(tmp_path, synthetic_lines(60, 12))
+    points = np.array([[4894.0, 3.71, -1.32, 0.77], [5285.0, 3.79, -0.43, 0.36], [6900.0, 1.1, -2.9, 0.4]])
+    errors = parameter_errors(grid, check_module.check_points(grid, points, Model, ENGINE), "lte")
+    # budget of interpolation alone; the last point has no line that could be measured
+    assert np.all(np.abs(errors[:2]) < (5.0, 0.02, 0.01, 0.04))
+    assert np.isnan(errors[2]).all()
+    summary = parameter_summary(errors)
+    assert (summary["points"], summary["solved"]) == (3, 2)
+    assert "2 of 3 points" in parameter_words(summary)
 
 
 @pytest.mark.slow
