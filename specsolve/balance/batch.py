@@ -21,6 +21,7 @@ from .zero_points import ZeroPoints
 
 log = logging.getLogger(__name__)
 
+COMPILED_FROM = 50  # stars; below it loading the compiled kernels costs more than they spare
 STARS_PER_BLOCK = 8  # a block should take 0.5 s or more
 
 
@@ -36,6 +37,8 @@ class Setting:
     zero_points : ZeroPoints
     options : Options
     sun : SolarLines
+    compiled : bool
+        Set by `solve_stream` for many stars.
     """
 
     treatment: str = "lte"
@@ -43,6 +46,7 @@ class Setting:
     zero_points: ZeroPoints = field(default_factory=ZeroPoints.solar)
     options: Options = field(default_factory=Options)
     sun: SolarLines = field(default_factory=SolarLines)
+    compiled: bool = False
 
 
 def solve_many(
@@ -74,6 +78,8 @@ def solve_stream(
 ) -> Iterator[tuple[int, Solution]]:
     """(place in the input, Solution) as stars are finished, so that an interrupted run keeps what it has."""
     setting = setting or Setting()
+    if len(stars) >= COMPILED_FROM:
+        setting = replace(setting, compiled=True)
     known = [outside_of(star, outside) for star in stars]
     if executor is None:
         for i, star in enumerate(stars):
@@ -121,6 +127,7 @@ def solve_star(star: Star, grid: Any, setting: Setting, known: tuple[Outside, ..
         outside=setting.fixed + known,
         zero_points=setting.zero_points,
         options=setting.options,
+        compiled=setting.compiled,
     )
     try:
         return solve_problem(problem, setting.sun)

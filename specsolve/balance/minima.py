@@ -9,12 +9,11 @@ import numpy as np
 from specsolve.errors import NotEnoughLinesError
 
 from .newton import STEP_UNIT, Minimum, refine
-from .problem import Problem
+from .problem import Problem, common_abundances
 from .scan import Scan, scan_nodes, seeds_from_scan
 
 PRELIMINARY_MARGIN_DEX = 0.15  # how much wider the first cut, on measured widths, is than the one on predicted widths
 SAME_MINIMUM = 0.02  # ends closer than this in STEP_UNIT are one minimum: 5 K, 0.01 dex, 0.01 km/s
-ROUGH_TOLERANCE = 1e-3  # in STEP_UNIT: 0.25 K; enough to fix the cut on predicted strength
 REASON_PREDICTED = "predicted_strength_cut"
 REASON_MEASURED = "measured_strength_cut"
 MIN_FE1_LINES = 4  # the plane has three coefficients
@@ -73,14 +72,16 @@ def preliminary_lines(problem: Problem) -> np.ndarray:
 def predicted_lines(problem: Problem, minimum: Minimum, preliminary: np.ndarray) -> np.ndarray:
     """Lines within the cut on predicted strength at a minimum; bool, shape (n_lines,)."""
     low, high = problem.options.reduced_width_range
-    predicted = minimum.state.predicted
+    state, is_fe2 = minimum.state, problem.inputs.is_fe2
+    common = common_abundances(is_fe2, state.relative_abundance, state.weighting.weights)
+    predicted = problem.predicted_widths(state.theta, common)
     inside = (predicted >= low) & (predicted <= high)  # false for nan
     return preliminary & inside
 
 
 def local_solve(problem: Problem, start: np.ndarray, preliminary: np.ndarray) -> tuple[Minimum, np.ndarray]:
     """Refine with the wide cut, fix the cut on predicted strength there, refine again."""
-    return finish(problem, refine(problem, start, preliminary, ROUGH_TOLERANCE), preliminary)
+    return finish(problem, refine(problem, start, preliminary, rough=True), preliminary)
 
 
 def finish(problem: Problem, rough: Minimum, preliminary: np.ndarray) -> tuple[Minimum, np.ndarray]:
@@ -131,7 +132,7 @@ def search(problem: Problem) -> Search:
     refined = 0
     reached: list[tuple[np.ndarray, int]] = []  # ends of first refinements, and the candidate that each led to
     for seed in seeds[: problem.options.max_seeds]:
-        rough = refine(problem, seed.theta, preliminary, ROUGH_TOLERANCE)
+        rough = refine(problem, seed.theta, preliminary, rough=True)
         refined += 1
         if rough.state is None:
             failures.append(rough.failure)

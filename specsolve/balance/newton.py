@@ -14,7 +14,8 @@ from .state import BalanceState
 # Units in which steps are measured, one default grid step of each axis: K, dex, dex, km/s.
 STEP_UNIT = np.array([250.0, 0.5, 0.5, 0.5])
 MAX_STEP = 1.0  # in STEP_UNIT
-STEP_TOLERANCE = 1e-9  # in STEP_UNIT: 2.5e-7 K
+STEP_TOLERANCE = 1e-7  # in STEP_UNIT: 2.5e-5 K; the step below it is still taken
+ROUGH_TOLERANCE = 1e-2  # in STEP_UNIT
 STALLED_STEP = 1e-6  # a step that no damping can take must be below this to count as an end
 MAX_HALVINGS = 12
 LEVENBERG_START = 1e-3
@@ -66,9 +67,7 @@ def whitened_system(problem: Problem, state: BalanceState) -> tuple[np.ndarray, 
     return np.concatenate([z, outside]), np.vstack([jacobian, outside_jacobian])
 
 
-def refine(
-    problem: Problem, start: np.ndarray, allowed: np.ndarray | None = None, tolerance: float = STEP_TOLERANCE
-) -> Minimum:
+def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = None, rough: bool = False) -> Minimum:
     """Damped Gauss-Newton from one starting point.
 
     Each step refreshes weights, line-to-line term and strength axis, so that the end is their common fixed point. A
@@ -82,15 +81,15 @@ def refine(
     problem : Problem
     start : ndarray, shape (4,)
     allowed : ndarray of bool, shape (n_lines,), optional
-    tolerance : float
-        Step at which it ends, in `STEP_UNIT`.
+    rough : bool
+        End at a step of 2.5 K and the like, with predicted widths to first order.
     """
     low, high = problem.bounds
     theta = np.clip(np.asarray(start, float), low, high)
     for name, value in problem.fixed.items():
         place = ("teff", "logg", "feh", "vmic").index(name)
         theta[place] = value
-    state, failure = _evaluate(problem, theta, allowed, None)
+    state, failure = _evaluate(problem, theta, allowed, None, rough)
     nowhere = np.zeros(4, dtype=bool)
     if state is None:
         return Minimum(theta, None, np.inf, False, nowhere, 0, failure)
@@ -114,7 +113,7 @@ def refine(
             step *= min(1.0, MAX_STEP / size) if size > 0.0 else 1.0
             trial = theta.copy()
             trial[moving] = np.clip(theta[moving] + step * STEP_UNIT[moving], low[moving], high[moving])
-            new_state, failure = _evaluate(problem, trial, allowed, state)
+            new_state, failure = _evaluate(problem, trial, allowed, state, rough)
             if new_state is not None and _not_worse(problem, state, new_state):
                 accepted = True
                 break
@@ -125,7 +124,7 @@ def refine(
             break
         theta, state = trial, new_state
         damping = 0.0 if damping <= LEVENBERG_START else 0.1 * damping
-        if moved < tolerance:
+        if moved < (ROUGH_TOLERANCE if rough else STEP_TOLERANCE):
             converged = True
             break
     z, _ = whitened_system(problem, state)
@@ -163,9 +162,9 @@ def _not_worse(problem: Problem, old: BalanceState, new: BalanceState) -> bool:
     return value_after <= value_before * (1.0 + 1e-6) + 1e-9
 
 
-def _evaluate(problem: Problem, theta: np.ndarray, allowed, previous) -> tuple[BalanceState | None, str]:
+def _evaluate(problem: Problem, theta: np.ndarray, allowed, previous, rough: bool) -> tuple[BalanceState | None, str]:
     try:
-        state = problem.balance(theta, allowed, previous)
+        state = problem.balance(theta, allowed, previous, rough)
     except OutOfGridError as error:
         return None, str(error)
     if not state.used.any():

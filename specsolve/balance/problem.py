@@ -11,6 +11,8 @@ from typing import Any, Protocol
 
 import numpy as np
 
+from specsolve.constants import SOLAR_IRON
+
 from .likelihood import minus_two_log_density
 from .options import Options
 from .outside import Outside, fixed_parameters, whitened_terms
@@ -57,6 +59,8 @@ class Problem:
     options : Options
     dropped : mapping of int to str
         Rows of the star that are left out beforehand, with the reason.
+    compiled : bool
+        Use the compiled kernels: faster for many stars, equal to 1e-9.
     """
 
     star: Star
@@ -67,6 +71,7 @@ class Problem:
     pair: tuple[str, str] = IONS
     options: Options = field(default_factory=Options)
     dropped: dict[int, str] = field(default_factory=dict)
+    compiled: bool = False
 
     def replace(self, **changes: Any) -> Problem:
         """The same problem with some fields changed."""
@@ -192,7 +197,7 @@ class Problem:
         """Of the grid, for these lines."""
         from specsolve.grid.interpolate import Interpolator
 
-        return Interpolator(self.grid, self.treatment, self.line_indices)
+        return Interpolator(self.grid, self.treatment, self.line_indices, compiled=self.compiled)
 
     @property
     def active(self) -> np.ndarray:
@@ -210,10 +215,20 @@ class Problem:
         """Predicted log10(W/lambda) when each ion has a common relative abundance; `common` has shape (2,)."""
         inputs = self.inputs
         abundance = common[inputs.is_fe2.astype(int)] + inputs.zero_point + self.log_gf_shift
+        if self.compiled:
+            from .kernel import widths_on_curves
+
+            grid = self.interpolator
+            offsets = abundance - SOLAR_IRON - float(theta[2])
+            return widths_on_curves(grid.curves(theta)[0], grid.dA, grid.dA_slopes, offsets)
         return self.interpolator.widths(theta, abundance)
 
     def balance(
-        self, theta: np.ndarray, allowed: np.ndarray | None = None, previous: BalanceState | None = None
+        self,
+        theta: np.ndarray,
+        allowed: np.ndarray | None = None,
+        previous: BalanceState | None = None,
+        rough: bool = False,
     ) -> BalanceState:
         """The balance at theta.
 
@@ -224,6 +239,9 @@ class Problem:
             Lines that may be used; all by default.
         previous : BalanceState, optional
             Start of the weights; changes the speed, not the result.
+        rough : bool
+            Predict widths to first order from the measured ones, which spares a look at the grid: for the way to a
+            minimum, not for its end.
 
         Raises
         ------
@@ -235,12 +253,13 @@ class Problem:
         if allowed is None:
             allowed = np.ones(abundance.shape, dtype=bool)
         usable = allowed & np.isfinite(abundance) & np.isfinite(d_width) & np.isfinite(inputs.zero_point)
-        robust = None if previous is None else previous.weighting.robust
-        weight = usable.astype(float) if robust is None else np.where(usable, robust, 0.0)
-        if previous is not None:
-            weight = weight / previous.weighting.variances.total
+        weight = usable.astype(float) if previous is None else np.where(usable, previous.weighting.weights, 0.0)
         common = common_abundances(inputs.is_fe2, abundance - inputs.zero_point, weight)
-        predicted = self.predicted_widths(theta, common)
+        if rough:
+            deviation = abundance - inputs.zero_point - common[inputs.is_fe2.astype(int)]
+            predicted = inputs.log_reduced_width - deviation / d_width
+        else:
+            predicted = self.predicted_widths(theta, common)
         return balance_state(
             inputs,
             theta,
@@ -252,7 +271,8 @@ class Problem:
             allowed,
             self.options.loss,
             metallicity_from_fe1="logg" in self.fixed,
-            robust=robust,
+            start=None if previous is None else previous.weighting,
+            compiled=self.compiled,
         )
 
     def jacobian(self, theta: np.ndarray) -> np.ndarray:

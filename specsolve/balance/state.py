@@ -109,6 +109,8 @@ class BalanceState:
     response : ndarray, shape (4, n_lines)
         dr/dA with the weights free to follow (Huber: the lines in the core); equals `operator` without a robust loss.
     residuals : ndarray, shape (4,)
+    jacobian : ndarray, shape (4, 4)
+        dr/dtheta.
     covariance_star, covariance_list : ndarray, shape (4, 4)
         Of the residuals.
     """
@@ -125,6 +127,7 @@ class BalanceState:
     operator: np.ndarray
     response: np.ndarray
     residuals: np.ndarray
+    jacobian: np.ndarray
     covariance_star: np.ndarray
     covariance_list: np.ndarray
 
@@ -132,11 +135,6 @@ class BalanceState:
     def covariance(self) -> np.ndarray:
         """C = G V G^T."""
         return self.covariance_star + self.covariance_list
-
-    @property
-    def jacobian(self) -> np.ndarray:
-        """dr/dtheta, shape (4, 4)."""
-        return residual_jacobian(self.response, self.d_theta)
 
 
 def residual_jacobian(response: np.ndarray, d_theta: np.ndarray) -> np.ndarray:
@@ -153,7 +151,7 @@ def settle(
     predicted: np.ndarray,
     used: np.ndarray,
     loss: str,
-    robust: np.ndarray | None = None,
+    start: Weighting | None = None,
 ) -> Weighting:
     """Iterate weights, line-to-line term and strength axis to their common fixed point.
 
@@ -165,15 +163,14 @@ def settle(
     used : ndarray of bool, shape (n_lines,)
     loss : str
         See `robust_weights`.
-    robust : ndarray, shape (n_lines,), optional
-        Weights to start from.
+    start : Weighting, optional
+        Where to begin; changes the speed alone.
     """
     y = np.where(used, relative_abundance, 0.0)
     slope = np.where(used, d_width, 1.0)
     x_predicted = np.where(used & np.isfinite(predicted), predicted, inputs.log_reduced_width)
     sigma_gf, extra = inputs.sigma_gf, inputs.zero_point_variance
-    weights = used.astype(float) if robust is None else np.where(used & (robust > 0.0), robust, used.astype(float))
-    scatter = np.zeros(2)
+    weights, scatter = start_values(used, start)
     settled = False
     for _ in range(MAX_PASSES):
         variances = line_variances(slope, inputs.sigma_logw, sigma_gf, scatter[inputs.is_fe2.astype(int)])
@@ -202,6 +199,13 @@ def settle(
     )
 
 
+def start_values(used: np.ndarray, start: Weighting | None) -> tuple[np.ndarray, np.ndarray]:
+    """Robust weights and line-to-line terms to begin with."""
+    if start is None:
+        return used.astype(float), np.zeros(2)
+    return np.where(used, np.where(start.robust > 0.0, start.robust, 1.0), 0.0), start.scatter
+
+
 def response_weights(weighting: Weighting, used: np.ndarray, loss: str) -> np.ndarray:
     """Weights psi'(z)/v whose plane operator is dr/dA of the robust fit; falls back on the frozen ones."""
     if loss == "none":
@@ -227,20 +231,15 @@ def balance_state(
     allowed: np.ndarray,
     loss: str,
     metallicity_from_fe1: bool,
-    robust: np.ndarray | None = None,
+    start: Weighting | None = None,
+    compiled: bool = False,
 ) -> BalanceState:
     """Residuals, operators and covariances at one theta from the line abundances there."""
     used = allowed & np.isfinite(abundance) & np.isfinite(d_width) & np.isfinite(inputs.zero_point)
     y = abundance - inputs.zero_point
-    weighting = settle(inputs, y, d_width, predicted, used, loss, robust)
-    shape = (inputs.is_fe2, inputs.excitation_potential, weighting.strength)
-    operator = balance_operator(*shape, weighting.weights, metallicity_from_fe1)
-    response = balance_operator(*shape, response_weights(weighting, used, loss), metallicity_from_fe1)
-    response = np.where(np.isfinite(response), response, operator)
-    star = residual_covariance(operator, weighting.variances.star)
-    # With a covariance of the zero points its diagonal sits in variances.gf already; the full matrix replaces it.
-    gf = weighting.variances.gf - inputs.zero_point_variance
-    shared = residual_covariance(operator, gf)
+    arguments = (inputs, y, d_width, d_theta, predicted, used, loss, metallicity_from_fe1, float(theta[2]), start)
+    parts = _compiled_parts(*arguments) if compiled else _plain_parts(*arguments)
+    weighting, operator, response, residuals, jacobian, star, shared = parts
     if inputs.zero_point_covariance is not None:
         shared = shared + residual_covariance(operator, inputs.zero_point_covariance)
     return BalanceState(
@@ -255,7 +254,64 @@ def balance_state(
         weighting=weighting,
         operator=operator,
         response=response,
-        residuals=residual_vector(operator, np.where(used, y, 0.0), float(theta[2])),
+        residuals=residuals,
+        jacobian=jacobian,
         covariance_star=star,
         covariance_list=shared,
     )
+
+
+def _plain_parts(inputs, y, d_width, d_theta, predicted, used, loss, metallicity_from_fe1, mh, start) -> tuple:
+    """Weighting, G, dr/dA, r, dr/dtheta and the covariances of independent errors."""
+    weighting = settle(inputs, y, d_width, predicted, used, loss, start)
+    shape = (inputs.is_fe2, inputs.excitation_potential, weighting.strength)
+    operator = balance_operator(*shape, weighting.weights, metallicity_from_fe1)
+    response = balance_operator(*shape, response_weights(weighting, used, loss), metallicity_from_fe1)
+    response = np.where(np.isfinite(response), response, operator)
+    # With a covariance of the zero points its diagonal sits in variances.gf already; the full matrix replaces it.
+    return (
+        weighting,
+        operator,
+        response,
+        residual_vector(operator, np.where(used, y, 0.0), mh),
+        residual_jacobian(response, d_theta),
+        residual_covariance(operator, weighting.variances.star),
+        residual_covariance(operator, weighting.variances.gf - inputs.zero_point_variance),
+    )
+
+
+def _compiled_parts(inputs, y, d_width, d_theta, predicted, used, loss, metallicity_from_fe1, mh, start) -> tuple:
+    """As `_plain_parts`, by the compiled kernel."""
+    from .kernel import LOSS_CODES, project, settle_kernel
+
+    robust, scatter = start_values(used, start)
+    extra = inputs.zero_point_variance
+    known = np.where(used, y, 0.0)
+    robust, scatter, width, gf, strength, deviation, settled, operator, response = settle_kernel(
+        inputs.is_fe2,
+        inputs.excitation_potential,
+        inputs.log_reduced_width,
+        inputs.sigma_logw,
+        np.where(np.isnan(inputs.sigma_gf), 0.0, inputs.sigma_gf),
+        np.isnan(inputs.sigma_gf) & (not inputs.differential),
+        extra,
+        known,
+        np.where(used, d_width, 1.0),
+        np.where(used & np.isfinite(predicted), predicted, inputs.log_reduced_width),
+        used,
+        robust,
+        scatter,
+        LOSS_CODES[loss],
+        metallicity_from_fe1,
+    )
+    variances = LineVariances(width=width, gf=gf, scatter=scatter[inputs.is_fe2.astype(np.int64)] ** 2)
+    weighting = Weighting(
+        robust=robust,
+        scatter=scatter,
+        variances=variances,
+        strength=strength,
+        deviation=np.where(used, deviation, np.nan),
+        settled=bool(settled),
+    )
+    rest = project(operator, response, variances.star, gf - extra, known, d_theta, mh)
+    return (weighting, operator, response, *rest)

@@ -205,12 +205,12 @@ def pulls(interpolator, rng, n_stars, gf_per_star):
         star = dataclasses.replace(
             star, equivalent_width=star.equivalent_width * factor, equivalent_width_error=0.04 * star.equivalent_width
         )
-        problem = Problem(star=star, grid=interpolator.grid, options=WIDE)
+        problem = Problem(star=star, grid=interpolator.grid, options=WIDE, compiled=True)
         if gf_per_star:  # the true log gf differ from the list's by their error
             given = problem.grid.lines.log_gf[problem.match.index] + shift
             sigma = np.full(len(star), 0.05)
             star = dataclasses.replace(star, log_gf=given, log_gf_error=sigma)
-            problem = Problem(star=star, grid=interpolator.grid, options=WIDE)
+            problem = Problem(star=star, grid=interpolator.grid, options=WIDE, compiled=True)
         minimum, _ = local_solve(problem, truth, preliminary_lines(problem))
         assert minimum.converged
         star_part, list_part = parameter_covariances(problem, minimum.state)

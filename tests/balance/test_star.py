@@ -18,8 +18,8 @@ THETA = (5772.0, 4.44, 0.0, 1.0)
 
 def test_tolerances(grid):
     lines = grid.lines
-    moved = [*lines.wavelength_air[:3], 0.04, 0.06, 0.0]
-    energy = [*lines.excitation_potential[:3], 0.0, 0.0, 0.03]
+    moved = lines.wavelength_air[:3] + np.array([0.04, 0.06, 0.0])
+    energy = lines.excitation_potential[:3] + np.array([0.0, 0.0, 0.03])
     star = Star.from_arrays("x", moved, lines.ion[:3], [50.0] * 3, excitation_potential=energy)
     assert match_lines(star, lines).index.tolist() == [0, -1, -1]
     other_ion = Star.from_arrays("x", lines.wavelength_air[:1], ["Fe II"], [50.0])

@@ -64,7 +64,7 @@ def test_influence_is_what_leaving_the_line_out_does(problem, minimum):
 def test_sensitivities_are_those_of_the_abundances(problem, interpolator):
     solution = solve(problem.star, interpolator.grid, options=WIDE)
     row = next(s for s in solution.sensitivities if s.parameter == "teff" and s.shift > 0)
-    shifted = [*solution.parameters, 100.0, 0.0, 0.0, 0.0]
+    shifted = solution.parameters + np.array([100.0, 0.0, 0.0, 0.0])
     again = solve(
         problem.star,
         interpolator.grid,
