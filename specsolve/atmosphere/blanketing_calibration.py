@@ -1,11 +1,13 @@
 """One factor per band on the line opacity, fixed once on the flux distribution of the Sun.
 
-The line lists lack molecules and part of the ultraviolet. In each band below 0.7 um the factor is the one with which a
-model of the Sun emits the observed flux; the logarithm times `FRACTION` is kept, because the full correction overshoots
-the limb darkening at 0.45-0.55 um. Observed: the extraterrestrial spectrum of ASTM G173-03 (Gueymard 2004, Solar
+The line lists lack molecules, hydrogen and part of the ultraviolet. In each band below 0.7 um the factor is the one with
+which a model of the Sun emits the observed flux, never less than 1; the logarithm times `FRACTION` is kept, because the
+full correction overshoots the limb darkening at 0.45-0.55 um. Below the observed range, 290 nm, the factor of the bluest
+observed band is taken over down to `SHORTEST_NM`; nothing is known there. Observed: the extraterrestrial spectrum of ASTM G173-03 (Gueymard 2004, Solar
 Energy 76, 423), as the package pvlib carries it, averaged over the bands in the packaged `solar_flux.csv`.
 
-    python -m specsolve.atmosphere.blanketing_calibration --output DIR        # makes solar_flux.csv (needs pvlib)
+    python -m specsolve.atmosphere.blanketing_calibration --output DIR --solar-flux   # makes solar_flux.csv (needs pvlib)
+    python -m specsolve.atmosphere.blanketing_calibration --output DIR                # makes multiplier.csv (half a minute)
 """
 
 from __future__ import annotations
@@ -27,7 +29,9 @@ IRRADIANCE_CGS = 1e3 * 1e7
 #: Bands that reach above this wavelength are not calibrated [nm]: there the lists suffice.
 LONGEST_NM = 700.0
 #: Part of the logarithm of the full correction that is kept.
-FRACTION = 0.5
+FRACTION = 0.75
+#: Bands below the observed range take over the bluest observed factor down to this wavelength [nm].
+SHORTEST_NM = 200.0
 #: Bounds of the full correction; a band that needs more is not calibrated.
 LARGEST_MULTIPLIER = 30.0
 
@@ -155,15 +159,54 @@ def average_bands(
     return (integral(high_nm) - integral(low_nm)) / (high_nm - low_nm)
 
 
+def calibrate_on_the_sun(passes: int = 6, points: int = 5) -> tuple[np.ndarray, np.ndarray]:
+    """Band edges [cm] and kept factors, the model of the Sun being converged anew between the passes.
+
+    Returns
+    -------
+    band_edges_cm : ndarray, shape (n_bands + 1,)
+    multiplier : ndarray, shape (n_bands,)
+    """
+    from dataclasses import replace
+
+    from specsolve.atmosphere.blanketing import load_blanketing
+    from specsolve.atmosphere.emergent import emergent_flux
+    from specsolve.atmosphere.structure import solve_structure
+    from specsolve.constants import SOLAR_LOGG, SOLAR_TEFF
+    from specsolve.matter.composition import composition_for
+
+    raw = load_blanketing(0.0)
+    edges, sun, model = raw.band_edges_cm, load_solar_flux(), None
+    wanted = np.isfinite(observed_in_bands(edges, sun)) & (edges[1:] * 1e7 <= LONGEST_NM + 1e-3)
+    offsets = (np.arange(points) + 0.5) / points
+    wavelengths = edges[:-1, None] + np.diff(edges)[:, None] * offsets
+    full = np.ones(len(wanted))
+    for _ in range(passes):
+        model = solve_structure(SOLAR_TEFF, SOLAR_LOGG, composition_for(0.0), replace(raw, multiplier=full), start=model)
+
+        def band_flux(factors: np.ndarray, model=model) -> np.ndarray:
+            return emergent_flux(model, wavelengths.ravel(), replace(raw, multiplier=factors)).reshape(-1, points).mean(axis=1)
+
+        found = calibrate(band_flux, edges, sun, tolerance=1e-3)
+        full = np.where(wanted & np.isfinite(found), np.maximum(found, 1.0), full)
+        bluest = int(np.argmax(wanted))
+        full = np.where((np.arange(len(full)) < bluest) & (edges[:-1] * 1e7 > SHORTEST_NM), full[bluest], full)
+    return edges, full**FRACTION
+
+
 def main(arguments: list[str] | None = None) -> None:
     """Command line of the module: band averages of the solar spectrum."""
+    parser = argparse.ArgumentParser(description=__doc__.split("\n")[0])
+    parser.add_argument("--output", type=Path, required=True)
+    parser.add_argument("--solar-flux", action="store_true", help="make the table of observed fluxes instead")
+    options = parser.parse_args(arguments)
+    if not options.solar_flux:
+        save_multiplier(*calibrate_on_the_sun(), options.output / "multiplier.csv")
+        return
     import pvlib
 
     from specsolve.atmosphere.blanketing_build import BAND_EDGES_NM
 
-    parser = argparse.ArgumentParser(description=__doc__.split("\n")[0])
-    parser.add_argument("--output", type=Path, required=True)
-    options = parser.parse_args(arguments)
     spectrum = pvlib.spectrum.get_reference_spectra(standard="ASTM G173-03")["extraterrestrial"]
     wavelength, irradiance = spectrum.index.to_numpy(dtype=float), spectrum.to_numpy(dtype=float)
     covered = BAND_EDGES_NM[np.searchsorted(BAND_EDGES_NM, wavelength[0]) :]

@@ -3,7 +3,8 @@
 Unknown is ln T at fixed column mass m. With F the sum of radiative and convective flux between depth points,
 
     above log tau = -2.5:   F(below) - F(above) = sum of eps dtau (J - B) + change of F_conv = 0, over sum of eps dtau B;
-    deeper:                 F / (sigma Teff^4) - 1 = 0   (its logarithm where F is too large).
+    deeper:                 F / (sigma Teff^4) - 1 = 0   (its logarithm where F is too large), or, where convection
+                            has to carry much, the same solved for the gradient: grad = grad(F - F_rad).
 
 The differences are those of the transfer equation itself, so that flux is conserved exactly from the pinned depth to the
 surface.
@@ -17,7 +18,7 @@ import numpy as np
 
 from specsolve.atmosphere.blanketing import Blanketing
 from specsolve.atmosphere.channels import Channels, channels
-from specsolve.atmosphere.convection import convective_flux
+from specsolve.atmosphere.convection import convective_flux, required_gradient
 from specsolve.constants import LIGHT_SPEED_CM_S, STEFAN_BOLTZMANN
 from specsolve.matter.composition import Composition
 from specsolve.matter.thermodynamics import thermodynamics
@@ -25,6 +26,7 @@ from specsolve.radiation.transfer_kernels import flux_response, solve_channels
 
 DERIVATIVE_STEP = 2e-5  # in ln T; larger steps break the convective derivative of cool dwarfs
 PINNED_LOG_TAU = -2.5  # below it the flux itself is the equation
+CONVECTIVE_SHARE = 0.05  # where radiation leaves more than this to convection, the gradient is the equation
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -59,9 +61,25 @@ def _rosseland(layers: Channels, planck_slope: np.ndarray) -> np.ndarray:
     return planck_slope.sum(axis=0) / (planck_slope / layers.opacity).sum(axis=0)
 
 
+@dataclass(frozen=True, kw_only=True)
+class Convection:
+    """Convection between the points: flux, and departure of the gradient from the one that would carry what radiation leaves.
+
+    Every array has shape (n - 1,); `above` and `below` are derivatives with respect to ln T of the two points.
+    """
+
+    flux: np.ndarray
+    flux_above: np.ndarray
+    flux_below: np.ndarray
+    departure: np.ndarray
+    departure_above: np.ndarray
+    departure_below: np.ndarray
+    departure_by_flux: np.ndarray  # with respect to the flux that convection has to carry
+
+
 def _convection(log_t: np.ndarray, pressure: np.ndarray, composition: Composition, rosseland: np.ndarray,
-                rosseland_slope: np.ndarray, gravity: float) -> tuple[np.ndarray, np.ndarray, np.ndarray]:  # fmt: skip
-    """Convective flux between points and its derivatives with the ln T of the point above and below."""
+                rosseland_slope: np.ndarray, gravity: float, wanted: np.ndarray) -> Convection:  # fmt: skip
+    """Convection between the points; `wanted` (n - 1,) is the flux that radiation leaves to it."""
     log_p = np.log(pressure)
     spacing = np.diff(log_p)
     middle = 0.5 * (log_t[1:] + log_t[:-1])
@@ -70,23 +88,38 @@ def _convection(log_t: np.ndarray, pressure: np.ndarray, composition: Compositio
     log_chi = np.log(rosseland)
     chi = np.exp(0.5 * (log_chi[1:] + log_chi[:-1]))
     h = DERIVATIVE_STEP
-
-    def flux(grad: np.ndarray, log_temperature: np.ndarray, opacity: np.ndarray, thermo) -> np.ndarray:
-        return convective_flux(
-            grad, np.exp(log_temperature), middle_p, thermo.density, thermo.heat_capacity,
-            thermo.adiabatic_gradient, thermo.expansion, opacity, gravity,
-        )  # fmt: skip
-
     here = thermodynamics(np.exp(middle), middle_p, composition)
     warm = thermodynamics(np.exp(middle + h), middle_p, composition)
-    base = flux(gradient, middle, chi, here)
-    by_gradient = (flux(gradient + h, middle, chi, here) - flux(gradient - h, middle, chi, here)) / (2.0 * h)
-    by_middle = (flux(gradient, middle + h, chi, warm) - base) / h
-    by_opacity = (flux(gradient, middle, chi * (1.0 + h), here) - base) / h
-    common = 0.5 * by_middle
-    above = -by_gradient / spacing + common + 0.5 * by_opacity * rosseland_slope[:-1]
-    below = by_gradient / spacing + common + 0.5 * by_opacity * rosseland_slope[1:]
-    return base, above, below
+
+    def state(log_temperature: np.ndarray, opacity: np.ndarray, thermo) -> tuple:
+        return (np.exp(log_temperature), middle_p, thermo.density, thermo.heat_capacity,
+                thermo.adiabatic_gradient, thermo.expansion, opacity, gravity)  # fmt: skip
+
+    now, warmer, opaquer = state(middle, chi, here), state(middle + h, chi, warm), state(middle, chi * (1.0 + h), here)
+
+    def spread(by_gradient: np.ndarray, by_middle: np.ndarray, by_opacity: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        above = -by_gradient / spacing + 0.5 * by_middle + 0.5 * by_opacity * rosseland_slope[:-1]
+        below = by_gradient / spacing + 0.5 * by_middle + 0.5 * by_opacity * rosseland_slope[1:]
+        return above, below
+
+    flux = convective_flux(gradient, *now)
+    flux_above, flux_below = spread(
+        (convective_flux(gradient + h, *now) - convective_flux(gradient - h, *now)) / (2.0 * h),
+        (convective_flux(gradient, *warmer) - flux) / h,
+        (convective_flux(gradient, *opaquer) - flux) / h,
+    )
+    required = required_gradient(wanted, *now)
+    departure_above, departure_below = spread(
+        np.ones_like(gradient),
+        -(required_gradient(wanted, *warmer) - required) / h,
+        -(required_gradient(wanted, *opaquer) - required) / h,
+    )
+    nudge = wanted * 1e-4
+    by_flux = -(required_gradient(wanted + nudge, *now) - required) / nudge
+    return Convection(
+        flux=flux, flux_above=flux_above, flux_below=flux_below, departure=gradient - required,
+        departure_above=departure_above, departure_below=departure_below, departure_by_flux=by_flux,
+    )  # fmt: skip
 
 
 def energy_balance(
@@ -130,17 +163,22 @@ def energy_balance(
     )  # fmt: skip
     rosseland = _rosseland(layers, slopes[2])
     rosseland_slope = np.log(_rosseland(warmer, slopes[2]) / rosseland) / h
-    carried, d_above, d_below = _convection(log_t, pressure, composition, rosseland, rosseland_slope, gravity)
 
     n = len(log_t)
     target = STEFAN_BOLTZMANN * teff**4
     radiative = 4.0 * np.pi * field["flux"].sum(axis=0) / target
-    convective = carried / target
     jac_flux = 4.0 * np.pi * d_flux / target
+    moving = _convection(
+        log_t, pressure, composition, rosseland, rosseland_slope, gravity, target * np.maximum(1.0 - radiative, 0.5 * CONVECTIVE_SHARE)
+    )
+    convective = moving.flux / target
     rows = np.arange(n - 1)
     jac_conv = np.zeros((n - 1, n))
-    jac_conv[rows, rows] = d_above / target
-    jac_conv[rows, rows + 1] = d_below / target
+    jac_conv[rows, rows] = moving.flux_above / target
+    jac_conv[rows, rows + 1] = moving.flux_below / target
+    jac_departure = -target * moving.departure_by_flux[:, None] * jac_flux
+    jac_departure[rows, rows] += moving.departure_above
+    jac_departure[rows, rows + 1] += moving.departure_below
 
     width = np.pad(field["steps"], ((0, 0), (1, 1)))
     width = 0.5 * (width[:, 1:] + width[:, :-1])
@@ -157,6 +195,9 @@ def energy_balance(
     excess = total > 1.0
     flux_residual = np.where(excess, np.log(np.where(excess, total, 1.0)), total - 1.0)
     flux_jacobian = (jac_flux + jac_conv) / np.where(excess, total, 1.0)[:, None]
+    mostly_moving = (1.0 - radiative > CONVECTIVE_SHARE) | (convective > 1.0)
+    flux_residual = np.where(mostly_moving, moving.departure, flux_residual)
+    flux_jacobian = np.where(mostly_moving[:, None], jac_departure, flux_jacobian)
     residual = np.concatenate([differences[:pinned] / emitted[:pinned], flux_residual[pinned - 1 :]])
     jacobian = np.concatenate(
         [jac_differences[:pinned] / emitted[:pinned, None], flux_jacobian[pinned - 1 :]]

@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 STANDARD_LOG_TAU = np.concatenate([np.linspace(-6.0, -2.0, 25, endpoint=False), np.linspace(-2.0, 2.0, 41)])
 MAX_STARTING_GRADIENT = 0.25  # d ln T / d ln P of the deep starting structure, somewhat above the adiabatic one
 MAX_PASSES = 60
+MAX_SHIFT = 0.4  # dex of optical depth by which one move may continue a structure beyond its ends
 _REFERENCE = np.array([5e-5])
 
 
@@ -98,10 +99,13 @@ def move_to_standard_depths(
     -------
     column_mass, log_t, push : ndarray, shape (n,)
         On the standard depths. Beyond the old ends ln m and ln T continue linearly in log tau by the small amount that
-        the ends have moved (at most 0.3 dex a call; the structure is converged again afterwards).
+        the ends have moved (at most `MAX_SHIFT` a call; the structure is converged again afterwards).
     """
     x = balance.log_tau
-    target = np.clip(STANDARD_LOG_TAU, x[0] - 0.3, x[-1] + 0.3)
+    low = min(max(STANDARD_LOG_TAU[0], x[0] - MAX_SHIFT), x[-1] - 1.0)
+    high = max(min(STANDARD_LOG_TAU[-1], x[-1] + MAX_SHIFT), low + 1.0)
+    share = (STANDARD_LOG_TAU - STANDARD_LOG_TAU[0]) / np.ptp(STANDARD_LOG_TAU)
+    target = low + share * (high - low)
     inner = np.clip(target, x[0], x[-1])
     moved = []
     for values in (np.log(column_mass), log_t, push):

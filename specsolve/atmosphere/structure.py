@@ -16,6 +16,7 @@ from specsolve.atmosphere.start import STANDARD_LOG_TAU, move_to_standard_depths
 from specsolve.matter.composition import Composition
 
 MAX_STEP = 0.08  # in ln T
+MIN_STEP = 0.003  # in ln T; where steps swing to and fro their limit is halved, down to here
 FLUX_TOLERANCE = 1e-5
 ROUGH_TOLERANCE = 3e-3  # flux error at which depth points may be moved
 DEPTH_TOLERANCE = 0.01  # in log tau
@@ -90,6 +91,8 @@ def solve_structure(
     reason = f"not converged after {max_iterations} iterations"
     converged = False
     moves = 0
+    limit = np.full_like(log_t, MAX_STEP)
+    last_step = np.zeros_like(log_t)
     try:
         for _ in range(max_iterations):
             field = None if balance is None else balance.field
@@ -112,10 +115,14 @@ def solve_structure(
                 column_mass, log_t, push = move_to_standard_depths(column_mass, log_t, new_push, balance)
                 pressure = gas_pressure(column_mass, gravity, push)
                 moves += 1
+                last_step = np.zeros_like(log_t)
                 continue
             step = np.linalg.solve(balance.jacobian, -balance.residual)
             largest = np.max(np.abs(step))
-            log_t = log_t + np.clip(step, -MAX_STEP, MAX_STEP)
+            swings = (step * last_step < 0.0) & (np.abs(step) > 0.5 * limit)
+            limit = np.where(swings, np.maximum(0.5 * limit, MIN_STEP), np.minimum(1.3 * limit, MAX_STEP))
+            last_step = np.clip(step, -limit, limit)
+            log_t = log_t + last_step
             pressure = new_pressure if largest < 0.3 else pressure
     except StructureError as problem:
         reason = problem.reason
