@@ -90,7 +90,7 @@ def test_missing_errors_are_assumed_and_marked(table):
     del table["equivalent_width_error"]
     star = read_stars(table)[0]
     assert star.error_assumed.all()
-    np.testing.assert_allclose(star.equivalent_width_error, np.hypot(1.0, 0.03 * star.equivalent_width))
+    np.testing.assert_allclose(star.equivalent_width_error, np.hypot(0.5, 0.01 * star.equivalent_width))
 
 
 def test_masked_and_bad_numbers_become_lines_with_a_reason(table):

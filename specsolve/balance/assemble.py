@@ -26,6 +26,7 @@ from .solution import (
     Solution,
     Trend,
 )
+from .star import ASSUMED_ERROR_FLOOR_MA, ASSUMED_ERROR_FRACTION
 from .state import BalanceState
 from .tiebreak import Ranking
 from .uncertainty import parameter_covariances, sensitivities
@@ -110,7 +111,10 @@ def _frame(problem: Problem) -> Solution:
     notes = list(star.notes)
     n_assumed = int(star.error_assumed.sum())
     if n_assumed:
-        notes.append(f"{n_assumed} of {n_input} width errors assumed: 1 mA and 3 % of the width in quadrature")
+        notes.append(
+            f"{n_assumed} of {n_input} width errors assumed: {ASSUMED_ERROR_FLOOR_MA:g} mA and "
+            f"{100 * ASSUMED_ERROR_FRACTION:g} % of the width in quadrature; the lines' own scatter adds what that lacks"
+        )
     notes.append(f"{n_matched} of {n_input} lines are in the grid")
     missing = np.flatnonzero(problem.match.index < 0)[:MAX_UNMATCHED]
     fixed = tuple(name for name in PARAMETER_NAMES if name in problem.fixed)

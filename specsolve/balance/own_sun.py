@@ -12,8 +12,7 @@ from typing import Any
 
 import numpy as np
 
-from .minima import enough_lines, preliminary_lines
-from .newton import refine
+from .minima import enough_lines, local_solve, preliminary_lines
 from .options import Options
 from .outside import Outside
 from .problem import Problem
@@ -103,8 +102,8 @@ def solar_lines(grid: Any, treatment: str, options: Options | None = None) -> So
     preliminary = preliminary_lines(problem)
     if not enough_lines(problem, preliminary):
         return SolarLines()
-    minimum = refine(problem, nominal, preliminary)
-    if minimum.state is None or not minimum.converged:
+    minimum, _ = local_solve(problem, nominal, preliminary)
+    if minimum.state is None or not minimum.converged or minimum.at_bound.any():
         return SolarLines()
     everything = problem.replace(options=Options.from_dict({**options.as_dict(), "worst_grade": 4}))
     abundance, *_ = everything.line_abundances(minimum.theta)

@@ -245,4 +245,9 @@ def _fixed_outside_grid(problem: Problem) -> str:
         place = PARAMETER_NAMES.index(name)
         if not low[place] <= value <= high[place]:
             return f"fixed {name} = {value:g} lies outside the grid ({low[place]:g} to {high[place]:g})"
+        elif low[place] == high[place] and value != low[place]:
+            return f"the grid has {name} = {low[place]:g} alone: fix it there"
+    for place in problem.free:
+        if low[place] == high[place]:
+            return f"the grid has {PARAMETER_NAMES[place]} = {low[place]:g} alone: fix it there"
     return ""

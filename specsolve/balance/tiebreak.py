@@ -65,7 +65,11 @@ def rank(problem: Problem, search: Search) -> Ranking:
     rows = [_candidate(problem, item, common) for item in found]
     order = sorted(
         range(len(found)),
-        key=lambda i: (bool(rows[i].set_aside), -_posterior(problem, rows[i]), *rows[i].parameters.tolist()),
+        key=lambda i: (
+            bool(rows[i].set_aside),
+            rows[i].chi2 if rows[i].set_aside else -_posterior(problem, rows[i]),
+            *rows[i].parameters.tolist(),
+        ),
     )
     found = tuple(found[i] for i in order)
     rows = [rows[i] for i in order]
