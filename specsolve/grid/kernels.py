@@ -39,9 +39,16 @@ def gather_cell(codes, inside, place, nodes, starts, columns, weights, vmic_map,
     for line in range(inside.size):
         for k in range(nodes.size):
             here = codes[nodes[k], inside[line]]
+            n_missing = 0
             for j in range(n_vmic):
                 for a in range(n_dA):
-                    widths[j, a] = here[j, a] * STEP + FIRST_LOG_WIDTH if here[j, a] != MISSING else np.nan
+                    widths[j, a] = here[j, a] * STEP + FIRST_LOG_WIDTH
+                    n_missing += here[j, a] == MISSING
+            if n_missing > 0:  # apart, so that the common case has no branch
+                for j in range(n_vmic):
+                    for a in range(n_dA):
+                        if here[j, a] == MISSING:
+                            widths[j, a] = np.nan
             target = at_node[k].reshape(n_vmic_numbers, n_dA)
             target[:] = 0.0
             for q in range(n_vmic_numbers):

@@ -62,12 +62,12 @@ def test_json_is_json_with_a_schema(doubles, line_file, tmp_path, capsys):
 
 
 def test_axis_subsets_reach_the_grid(doubles, line_file, tmp_path):
-    arguments = ["--teff", "5250:5750:250", "--logg", "4,4.5", "--mh", "0", "--vmic", "0.5:2:0.5"]
+    arguments = ["--teff", "5250:5750:250", "--logg", "4,4.5", "--mh", "-0.5:0:0.5", "--vmic", "0.5:2:0.5"]
     assert run(["grid", "build", str(line_file), "--output", str(tmp_path / "grid"), *arguments]) == 0
     axes = ResponseGrid.open(tmp_path / "grid").axes
     assert axes["teff"].tolist() == [5250.0, 5500.0, 5750.0]
     assert axes["logg"].tolist() == [4.0, 4.5]
-    assert axes["mh"].tolist() == [0.0]
+    assert axes["mh"].tolist() == [-0.5, 0.0]
     assert axes["vmic"].tolist() == [0.5, 1.0, 1.5, 2.0]
 
 
