@@ -100,6 +100,8 @@ def _where_outside(problem: Problem, theta: np.ndarray) -> str:
         for name, value, a, b, place in zip(PARAMETER_NAMES, theta, low, high, range(4), strict=True)
         if place in problem.free and (value <= a + 1e-4 * (b - a) or value >= b - 1e-4 * (b - a))
     ]
+    if len(faces) == 1 and faces[0].startswith("vmic"):
+        return f"these lines do not fix the microturbulence inside the grid ({faces[0]} km/s at its edge): fix vmic"
     return f"no balance inside the grid: the best point lies at its edge ({', '.join(faces)})"
 
 
@@ -113,7 +115,7 @@ def _frame(problem: Problem) -> Solution:
     if n_assumed:
         notes.append(
             f"{n_assumed} of {n_input} width errors assumed: {ASSUMED_ERROR_FLOOR_MA:g} mA and "
-            f"{100 * ASSUMED_ERROR_FRACTION:g} % of the width in quadrature; the lines' own scatter adds what that lacks"
+            f"{100 * ASSUMED_ERROR_FRACTION:g} % of the width in quadrature; the scatter of the lines adds the rest"
         )
     notes.append(f"{n_matched} of {n_input} lines are in the grid")
     missing = np.flatnonzero(problem.match.index < 0)[:MAX_UNMATCHED]

@@ -11,7 +11,8 @@ WAVELENGTH_TOLERANCE = 0.05  # Angstrom; the same as for the identification of l
 ENERGY_TOLERANCE = 0.02  # eV
 HUGE_WIDTH_MA = 1000.0  # no iron line of the grid's stars comes near (common practice, no source)
 
-# Error assumed where the input gives none: a floor and a fraction of the width, in quadrature (common practice, no source).
+# Error assumed where the input gives none: a floor and a fraction of the width in quadrature (common practice,
+# no source).
 # It is a lower limit on purpose: what it lacks is found from the star's own lines as their line-to-line term.
 ASSUMED_ERROR_FLOOR_MA = 0.5
 ASSUMED_ERROR_FRACTION = 0.01
