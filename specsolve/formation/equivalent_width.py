@@ -5,8 +5,8 @@ W / lambda = 2 * integral over the half profile of the relative depth R = 1 - F 
 - Flux: F ~ 2 * integral of S(t) E2(t) dt over layers at equal steps x of log tau_5000, t' = chi dm/dx. The integrand vanishes
   at both ends as a smooth function, so equal weights integrate it nearly exactly; t itself is accumulated by cubic pieces.
 - Source function: S = (kappa_line S_line + kappa B + sigma J) / chi with J, at every point of the profile, from the moment
-  equation d2(f J)/dt2 = J - S, where the Eddington factor is f(t) = 1/3 + d / (1 + t / t_half) with d and t_half from the exact
-  angle-dependent solution of the continuum.
+  equation d2(f J)/dt2 = J - S. The Eddington factors f of the layers come from angle-dependent solutions at four
+  strengths of each line (`STRENGTH_NODES` times as opaque as the continuum), with a cubic between them.
 - Profile: points c Doppler widths * sinh(s) with equal steps of s out to where the wing is thin; beyond, R falls with the
   square of the distance and is added analytically.
 
@@ -31,6 +31,8 @@ CORE_SCALE = 3.0
 """c of the profile points: about linear over the first 3 Doppler widths, exponential beyond."""
 REFERENCE_LOG_TAU = -1.0
 """Layer whose Doppler width scales the profile points and whose opacity says how far the wings reach."""
+REFERENCE_VMIC = 1.0  # km/s, for the shape in depth of the line opacity that sets the Eddington factors
+STRENGTH_NODES = (0.0, 0.1, 0.6, 3.0)
 WING_OPACITY = 0.01
 """Line over continuum opacity, at the reference layer, where the profile points end."""
 LEAST_REACH = 5.0
@@ -38,61 +40,71 @@ LEAST_REACH = 5.0
 
 
 @dataclass(frozen=True, kw_only=True)
-class Continuum:
-    """Continuum at each line, shapes (n_lines,).
+class EddingtonFactors:
+    """Eddington factors at each line as cubics in y = r / (1 + r), r = line over continuum opacity at one layer.
 
     Attributes
     ----------
-    eddington_surplus : ndarray
-        d of f(t) = 1/3 + d / (1 + t / t_half).
-    eddington_scale : ndarray
-        1 / t_half.
-    edge : ndarray
-        H / J at the first layer.
+    inverse : ndarray, shape (n_lines, 4, n)
+        1 / f = J / K at each layer is the sum over k of inverse[:, k] y^k.
+    edge : ndarray, shape (n_lines, 4)
+        The same for H / J at the first layer.
+    opacity : ndarray, shape (n_lines,)
+        Continuum opacity at the layer of r [cm2/g].
+    layer : int
+        Its index.
     """
 
-    eddington_surplus: np.ndarray
-    eddington_scale: np.ndarray
+    inverse: np.ndarray
     edge: np.ndarray
+    opacity: np.ndarray
+    layer: int
 
 
-def continuum_field(layers: Layers, opacities: LineOpacities) -> Continuum:
-    """Eddington factors of the continuum at each line, from the angle-dependent solution with scattering."""
+def reference_layer(layers: Layers) -> int:
+    """Index of the layer nearest `REFERENCE_LOG_TAU`."""
+    return int(np.argmin(np.abs(layers.log_tau - REFERENCE_LOG_TAU)))
+
+
+def eddington_factors(layers: Layers, opacities: LineOpacities) -> EddingtonFactors:
+    """Eddington factors at each line, from angle-dependent solutions with scattering."""
     from specsolve.radiation.transfer_kernels import radiation_field
 
-    total = opacities.absorption + opacities.scattering
-    growth = total * layers.mass_step
-    steps = optical_steps(growth)
-    tops = 0.5 * total[:, 0] * layers.column_mass[0]
-    n_lines, n = total.shape
+    continuum = opacities.absorption + opacities.scattering
+    layer = reference_layer(layers)
+    doppler = doppler_fractions(layers, REFERENCE_VMIC)[0]
+    shape = opacities.strength / doppler * voigt(opacities.damping / doppler, 0.0)
+    shape *= (continuum[:, layer] / shape[:, layer])[:, None]  # r = 1 at the reference layer
+    n_lines, n = continuum.shape
     eddington = np.full((n_lines, n), 1.0 / 3.0)
-    mean, flux, surface = np.zeros((n_lines, n)), np.zeros((n_lines, n - 1)), np.zeros(n_lines)
     edges = np.full((n_lines, 2), 0.5)
-    radiation_field(
-        steps,
-        tops,
-        opacities.absorption / total,
-        opacities.planck,
-        ANGLE_COSINES,
-        ANGLE_WEIGHTS,
-        eddington,
-        mean,
-        flux,
-        surface,
-        edges,
+    inverse, edge = [], []
+    for ratio in STRENGTH_NODES:
+        line = ratio * shape
+        total = continuum + line
+        radiation_field(
+            optical_steps(total * layers.mass_step),
+            layers.column_mass[0] * (line[:, 0] + 0.5 * continuum[:, 0]),
+            1.0 - opacities.scattering / total,
+            (line * opacities.line_source + opacities.absorption * opacities.planck) / (total - opacities.scattering),
+            ANGLE_COSINES,
+            ANGLE_WEIGHTS,
+            eddington,
+            np.empty((n_lines, n)),
+            np.empty((n_lines, n - 1)),
+            np.empty(n_lines),
+            edges,
+        )
+        inverse.append(1.0 / eddington)
+        edge.append(edges[:, 0].copy())
+    y = np.array(STRENGTH_NODES) / (1.0 + np.array(STRENGTH_NODES))
+    to_cubic = np.linalg.inv(np.vander(y, increasing=True))
+    return EddingtonFactors(
+        inverse=np.einsum("cs,sld->lcd", to_cubic, np.array(inverse)),
+        edge=np.einsum("cs,sl->lc", to_cubic, np.array(edge)),
+        opacity=continuum[:, layer].copy(),
+        layer=layer,
     )
-    depth = tops[:, None] + np.concatenate([np.zeros((n_lines, 1)), np.cumsum(steps, axis=1)], axis=1)
-    surplus = eddington[:, 0] - 1.0 / 3.0
-    half = np.array([np.interp(0.0, *_falling(e, s, d)) for e, s, d in zip(eddington, surplus, depth, strict=True)])
-    return Continuum(eddington_surplus=surplus, eddington_scale=np.exp(-half), edge=edges[:, 0])
-
-
-def _falling(eddington, surplus, depth):
-    """Abscissae and ordinates to find ln t where the surplus of f has fallen to half its surface value."""
-    fraction = 0.5 - (eddington - 1.0 / 3.0) / surplus if surplus != 0.0 else np.linspace(-0.5, 0.5, depth.size)
-    crossing = np.flatnonzero(fraction >= 0.0)
-    i = max(int(crossing[0]), 1) if crossing.size else depth.size - 1
-    return fraction[i - 1 : i + 1], np.log(depth[i - 1 : i + 1])
 
 
 def optical_steps(growth: np.ndarray) -> np.ndarray:
@@ -130,7 +142,7 @@ def profile_points(
     points, weights : ndarray, shape (n_lines, n_profile)
         Both in units of the wavelength; the analytic wing is inside the last weight.
     """
-    at = int(np.argmin(np.abs(layers.log_tau - REFERENCE_LOG_TAU)))
+    at = reference_layer(layers)
     unit = doppler[at]
     ratio = opacities.strength[:, at] * 10.0 ** (highest_abundance - 12.0) / unit
     ratio /= opacities.absorption[:, at] + opacities.scattering[:, at]
@@ -181,7 +193,7 @@ def mean_intensity(steps, extra, right, edge):
 
 
 def emergent_flux(
-    layers: Layers, line_part: np.ndarray, opacities: LineOpacities, continuum: Continuum, i: int
+    layers: Layers, line_part: np.ndarray, opacities: LineOpacities, factors: EddingtonFactors, i: int
 ) -> np.ndarray:
     """Flux of line i for given line opacities, in units of pi times that of its source functions.
 
@@ -209,12 +221,17 @@ def emergent_flux(
     depth = top + np.concatenate([np.zeros_like(steps[:1]), np.cumsum(steps, axis=0)])
     thermal = (line_part * column(opacities.line_source[i]) + absorption * column(opacities.planck[i])) / chi
     albedo = scattering / chi
-    f = 1.0 / 3.0 + continuum.eddington_surplus[i] / (1.0 + continuum.eddington_scale[i] * depth)
+    ratio = line_part[factors.layer] / factors.opacity[i]
+    y = ratio / (1.0 + ratio)
+    inverse_f, edge = (
+        c[0] + y * (c[1] + y * (c[2] + y * c[3]))
+        for c in ([column(c) for c in factors.inverse[i]], factors.edge[i])
+    )
     width = np.concatenate([0.5 * steps[:1], 0.5 * (steps[1:] + steps[:-1]), 0.5 * steps[-1:]])
     right = width * thermal
-    right[-1] = f[-1] * thermal[-1] / (1.0 - albedo[-1])
-    moment = mean_intensity(steps, width * (1.0 - albedo) / f, right, continuum.edge[i] / f[0])
-    source = thermal + albedo * moment / f
+    right[-1] = thermal[-1] / (1.0 - albedo[-1]) / inverse_f[-1]
+    moment = mean_intensity(steps, width * (1.0 - albedo) * inverse_f, right, edge * inverse_f[0])
+    source = thermal + albedo * moment * inverse_f
     contribution = 2.0 * source * expn(2, depth) * growth
     above = source[0] * (1.0 - 2.0 * expn(3, top))
     return above + contribution.sum(axis=0) - 0.5 * contribution[0] - 0.5 * contribution[-1]
@@ -233,7 +250,7 @@ def reduced_widths_reference(
     """As `reduced_widths`, in NumPy: the equations as they stand above, exact Voigt function and E2."""
     layers = make_layers(atmosphere, composition, n_layers)
     opacities = line_opacities(layers, lines)
-    continuum = continuum_field(layers, opacities)
+    factors = eddington_factors(layers, opacities)
     abundances_a = np.atleast_1d(np.asarray(abundances_a, float))
     amounts = 10.0 ** (abundances_a - 12.0)
     vmic = np.atleast_1d(np.asarray(vmic, float))
@@ -244,8 +261,8 @@ def reduced_widths_reference(
             profile = voigt((opacities.damping[i] / doppler)[:, None], points[i][None, :] / doppler[:, None])
             unit = (opacities.strength[i] / doppler)[:, None] * profile
             line_part = unit[:, :, None] * amounts
-            flux = emergent_flux(layers, line_part, opacities, continuum, i)
-            free = emergent_flux(layers, np.zeros((layers.column_mass.size, 1)), opacities, continuum, i)
+            flux = emergent_flux(layers, line_part, opacities, factors, i)
+            free = emergent_flux(layers, np.zeros((layers.column_mass.size, 1)), opacities, factors, i)
             result[i, v] = np.log10(weights[i] @ (1.0 - flux / free))
     return result
 
@@ -296,7 +313,7 @@ def reduced_widths(
 
     layers = make_layers(atmosphere, composition, n_layers)
     opacities = line_opacities(layers, lines, departures)
-    continuum = continuum_field(layers, opacities)
+    factors = eddington_factors(layers, opacities)
     abundances_a = np.atleast_1d(np.asarray(abundances_a, float))
     amounts = np.concatenate([[0.0], 10.0 ** (abundances_a - 12.0)])
     vmic = np.atleast_1d(np.asarray(vmic, float))
@@ -318,9 +335,10 @@ def reduced_widths(
             opacities.damping,
             opacities.planck,
             opacities.line_source,
-            continuum.eddington_surplus,
-            continuum.eddington_scale,
-            continuum.edge,
+            factors.inverse,
+            factors.edge,
+            factors.opacity,
+            factors.layer,
             table(),
             widths,
         )

@@ -30,9 +30,10 @@ def relative_widths(
     damping,
     planck,
     line_source,
-    surplus,
-    scale,
+    inverse_eddington,
     edges,
+    reference_opacity,
+    layer,
     e2_table,
     result,
 ):
@@ -50,8 +51,8 @@ def relative_widths(
     doppler : ndarray, shape (n,)
     points, weights : ndarray, shape (n_lines, n_profile)
     absorption, scattering, strength, damping, planck, line_source : ndarray, shape (n_lines, n)
-    surplus, scale, edges : ndarray, shape (n_lines,)
-        Eddington factor of `Continuum`.
+    inverse_eddington, edges, reference_opacity, layer
+        The attributes of `EddingtonFactors`.
     e2_table : ndarray, shape (n_pieces, 3)
     result : ndarray, shape (n_lines, n_a)
         Returned W / lambda.
@@ -69,7 +70,8 @@ def relative_widths(
     ratio = np.empty((n, n_a))
     value = np.empty((n, n_a))
     moment = np.empty((n, n_a))
-    factor = np.empty((n, n_a))
+    inverse_f = np.empty((n, n_a))
+    strengths = np.empty(n_a)
     flux = np.empty(n_a)
     total = np.empty(n_a)
     for i in range(n_lines):
@@ -105,29 +107,34 @@ def relative_widths(
             for d in range(1, n):
                 for j in range(n_a):
                     depth[d, j] = depth[d - 1, j] + steps[d - 1, j]
+            for j in range(n_a):
+                relative = line_parts[layer] * amounts[j] / reference_opacity[i]
+                strengths[j] = relative / (1.0 + relative)
+            for d in range(n):
+                for j in range(n_a):
+                    y = strengths[j]
+                    inverse_f[d, j] = inverse_eddington[i, 0, d] + y * (
+                        inverse_eddington[i, 1, d]
+                        + y * (inverse_eddington[i, 2, d] + y * inverse_eddington[i, 3, d])
+                    )
             # mean intensity: elimination from the top, without cancellation
             for j in range(n_a):
-                f = 1.0 / 3.0 + surplus[i] / (1.0 + scale[i] * depth[0, j])
-                factor[0, j] = 1.0 / f
                 width = 0.5 * steps[0, j]
-                ratio[0, j] = (width * (1.0 - albedo[0, j]) + edges[i]) * factor[0, j] * steps[0, j]
+                y = strengths[j]
+                edge = edges[i, 0] + y * (edges[i, 1] + y * (edges[i, 2] + y * edges[i, 3]))
+                ratio[0, j] = (width * (1.0 - albedo[0, j]) + edge) * inverse_f[0, j] * steps[0, j]
                 value[0, j] = width * thermal[0, j] * steps[0, j] / (1.0 + ratio[0, j])
             for d in range(1, n - 1):
                 for j in range(n_a):
-                    # 1/f = 3 (1 + s t) / (1 + 3 d + s t)
-                    st = 1.0 + scale[i] * depth[d, j]
-                    factor[d, j] = 3.0 * st / (st + 3.0 * surplus[i])
-                    width = 0.5 * (steps[d - 1, j] + steps[d, j])
+                    width = 0.5 * (steps[d - 1, j] + steps[d, j]) * steps[d, j]
                     quotient = steps[d, j] / steps[d - 1, j]
-                    r = width * (1.0 - albedo[d, j]) * factor[d, j] * steps[d, j] + quotient * ratio[d - 1, j] / (
+                    r = width * (1.0 - albedo[d, j]) * inverse_f[d, j] + quotient * ratio[d - 1, j] / (
                         1.0 + ratio[d - 1, j]
                     )
                     ratio[d, j] = r
-                    value[d, j] = (width * thermal[d, j] * steps[d, j] + quotient * value[d - 1, j]) / (1.0 + r)
+                    value[d, j] = (width * thermal[d, j] + quotient * value[d - 1, j]) / (1.0 + r)
             for j in range(n_a):
-                st = 1.0 + scale[i] * depth[n - 1, j]
-                factor[n - 1, j] = 3.0 * st / (st + 3.0 * surplus[i])
-                moment[n - 1, j] = thermal[n - 1, j] / (1.0 - albedo[n - 1, j]) / factor[n - 1, j]
+                moment[n - 1, j] = thermal[n - 1, j] / ((1.0 - albedo[n - 1, j]) * inverse_f[n - 1, j])
             for e in range(n - 1):
                 d = n - 2 - e
                 for j in range(n_a):
@@ -140,7 +147,7 @@ def relative_widths(
                     piece = min(max((bits[d, j] >> SHIFT) - OFFSET, 0), N_PIECES - 1)
                     t = depth[d, j]
                     e2 = e2_table[piece, 0] + t * (e2_table[piece, 1] + t * e2_table[piece, 2])
-                    source = thermal[d, j] + albedo[d, j] * moment[d, j] * factor[d, j]
+                    source = thermal[d, j] + albedo[d, j] * moment[d, j] * inverse_f[d, j]
                     if d == 0:  # above the first layer: 1 - 2 E3(t) with E3 = (exp(-t) - t E2) / 2
                         flux[j] = source * (1.0 - np.exp(-t) + t * e2)
                     flux[j] += end * 2.0 * source * e2 * growth[d, j]
