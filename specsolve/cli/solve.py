@@ -224,6 +224,7 @@ def carry_out(
         settings.warn(
             f"specsolve: this grid ({grid.identity[:12]}) is not that of the first run ({grid_identity[:12]})"
         )
+    settings.detail(f"grid {grid.directory}: {len(grid.lines)} lines, {grid.description}, identity {grid.identity}")
     for name, of_file in inputs.files:
         settings.say(f"{name}: {coverage_message(name, coverage(of_file, grid), grid)}")
     for note, whom in shared_notes(stars).items():
@@ -291,6 +292,7 @@ def solve_all(
         with counting("stars", quiet=settings.verbosity < 0 or len(stars) < 3) as progress:
             for place, solution in solve_stream(stars, grid, setting, outside=known, executor=executor):
                 done[place] = solution
+                settings.detail(f"{solution.star}: {solution.status}, {len(solution.candidates)} minima")
                 if progress:
                     progress(len(done), len(stars))
     except KeyboardInterrupt:
@@ -355,7 +357,7 @@ def deliver(settings: Settings, solutions: Sequence[Solution], provenance: Mappi
     elif settings.json:
         click.echo(json.dumps(tables.to_json(solutions, provenance), indent=1, allow_nan=False))
     else:
-        print_sheets(solutions, request.sheets)
+        print_sheets(solutions, True if request.sheets is None and settings.verbosity > 0 else request.sheets)
     if request.output not in (None, STDOUT) and solutions:
         paths = tables.write_solutions(solutions, request.output, provenance)
         settings.say("wrote " + ", ".join(str(path) for path in paths.values()))

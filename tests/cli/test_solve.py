@@ -13,6 +13,7 @@ import pytest
 from astropy.table import Table
 
 from specsolve.cli import main as cli
+from specsolve.cli.settings import wants_colour
 from specsolve.report.tables import read_table
 from tests.cli.made_up_stars import TRUTHS
 
@@ -152,6 +153,28 @@ def test_plots_are_drawn(stars_file, grid_option, tmp_path, capsys):
 def test_no_colour_unless_a_terminal_wants_it(stars_file, grid_option, capsys):
     assert cli.run(["solve", str(stars_file), *grid_option, "--star", "dwarf"]) == 0
     assert "\x1b[" not in capsys.readouterr().out
+
+
+@pytest.mark.parametrize(
+    ("environment", "terminal", "wanted"),
+    [({}, True, True), ({"NO_COLOR": "1"}, True, False), ({"TERM": "dumb"}, True, False), ({}, False, False)],
+)
+def test_colour_is_for_terminals_and_obeys_no_color(monkeypatch, environment, terminal, wanted):
+    monkeypatch.delenv("NO_COLOR", raising=False)
+    monkeypatch.setenv("TERM", "xterm")
+    for name, value in environment.items():
+        monkeypatch.setenv(name, value)
+    stream = io.StringIO()
+    stream.isatty = lambda: terminal
+    assert wants_colour(stream) is wanted
+
+
+def test_verbose_says_grid_and_stars_and_shows_sheets(stars_file, grid_option, capsys):
+    assert cli.run(["solve", str(stars_file), *grid_option, "--verbose", "--star", "dwarf"]) == 0
+    shown = capsys.readouterr()
+    assert "identity" in shown.err
+    assert "dwarf: solved, 1 minima" in shown.err
+    assert "excitation slope" in shown.out
 
 
 def test_one_star_from_a_cold_shell(stars_file, grid_option, figure):
