@@ -224,8 +224,7 @@ def emergent_flux(
     ratio = line_part[factors.layer] / factors.opacity[i]
     y = ratio / (1.0 + ratio)
     inverse_f, edge = (
-        c[0] + y * (c[1] + y * (c[2] + y * c[3]))
-        for c in ([column(c) for c in factors.inverse[i]], factors.edge[i])
+        c[0] + y * (c[1] + y * (c[2] + y * c[3])) for c in ([column(c) for c in factors.inverse[i]], factors.edge[i])
     )
     width = np.concatenate([0.5 * steps[:1], 0.5 * (steps[1:] + steps[:-1]), 0.5 * steps[-1:]])
     right = width * thermal

@@ -101,9 +101,9 @@ def relative_widths(
                 ) / 24.0
             for d in range(1, n - 2):
                 for j in range(n_a):
-                    steps[d, j] = (
-                        13.0 * (growth[d, j] + growth[d + 1, j]) - growth[d - 1, j] - growth[d + 2, j]
-                    ) * (1.0 / 24.0)
+                    steps[d, j] = (13.0 * (growth[d, j] + growth[d + 1, j]) - growth[d - 1, j] - growth[d + 2, j]) * (
+                        1.0 / 24.0
+                    )
             for d in range(1, n):
                 for j in range(n_a):
                     depth[d, j] = depth[d - 1, j] + steps[d - 1, j]
@@ -114,8 +114,7 @@ def relative_widths(
                 for j in range(n_a):
                     y = strengths[j]
                     inverse_f[d, j] = inverse_eddington[i, 0, d] + y * (
-                        inverse_eddington[i, 1, d]
-                        + y * (inverse_eddington[i, 2, d] + y * inverse_eddington[i, 3, d])
+                        inverse_eddington[i, 1, d] + y * (inverse_eddington[i, 2, d] + y * inverse_eddington[i, 3, d])
                     )
             # mean intensity: elimination from the top, without cancellation
             for j in range(n_a):

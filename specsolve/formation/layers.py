@@ -144,7 +144,9 @@ def _log_optical_depth(log_mass: np.ndarray, gas: Gas) -> np.ndarray:
     return np.log(above + CubicSpline(log_mass, integrand).antiderivative()(log_mass))
 
 
-def line_opacities(layers: Layers, lines: LineList, departures: tuple[np.ndarray, np.ndarray] | None = None) -> LineOpacities:
+def line_opacities(
+    layers: Layers, lines: LineList, departures: tuple[np.ndarray, np.ndarray] | None = None
+) -> LineOpacities:
     """All that line formation needs and that depends neither on the abundance nor on microturbulence.
 
     Parameters
@@ -166,9 +168,7 @@ def line_opacities(layers: Layers, lines: LineList, departures: tuple[np.ndarray
     upper = lines.upper_energy
     for ion in np.unique(lines.ion):
         of = np.flatnonzero(lines.ion == ion)
-        strength[of] = line_strength(
-            gas, str(ion), wavelength[of], lines.excitation_potential[of], lines.log_gf[of]
-        )
+        strength[of] = line_strength(gas, str(ion), wavelength[of], lines.excitation_potential[of], lines.log_gf[of])
         damping[of] = damping_width(
             gas,
             str(ion),

@@ -27,7 +27,14 @@ CONFLICT_DEX = 0.005
 """Repeats whose log gf differ by more than the rounding of two published decimals conflict [dex]."""
 
 DEFAULT_NAME = "iron_default.ecsv"
-FORMATS = {".ecsv": "ascii.ecsv", ".csv": "ascii.csv", ".fits": "fits", ".fit": "fits", ".vot": "votable", ".xml": "votable"}
+FORMATS = {
+    ".ecsv": "ascii.ecsv",
+    ".csv": "ascii.csv",
+    ".fits": "fits",
+    ".fit": "fits",
+    ".vot": "votable",
+    ".xml": "votable",
+}
 
 
 def default_line_list() -> LineList:
@@ -180,7 +187,7 @@ def _check(given: dict[str, np.ndarray], where: str, path) -> None:
     for row, ion in enumerate(given["ion"].tolist()):
         if ion not in IONS:
             raise LineError(
-                f"{where}row {row + 1}: ion '{ion}' is not one of {', '.join(IONS)}; map it, e.g. \"{ion}\" to \"Fe I\".",
+                f'{where}row {row + 1}: ion \'{ion}\' is not one of {", ".join(IONS)}; map it, e.g. "{ion}" to "Fe I".',
                 wavelength_air=float(given["wavelength_air"][row]),
                 ion=ion,
                 path=path,
