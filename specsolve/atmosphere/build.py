@@ -22,13 +22,14 @@ from specsolve.atmosphere.model import Atmosphere
 from specsolve.atmosphere.store import QUANTITIES, AtmosphereStore, write_durably, write_store
 from specsolve.atmosphere.structure import solve_structure
 from specsolve.errors import StoreError
-from specsolve.matter.composition import composition_for
+from specsolve.matter.composition import Composition, composition_for
 
 DEFAULT_TEFF = tuple(np.arange(4000.0, 7000.1, 250.0))
 DEFAULT_LOGG = tuple(np.arange(0.0, 5.01, 0.5))
 DEFAULT_MH = tuple(np.arange(-3.0, 0.51, 0.5))
 COLD_START = (5750.0, 4.5)  # where a chain begins, if among its nodes
 TEFF_STEP, LOGG_STEP = 250.0, 0.5  # one unit of distance between nodes
+FIRST_SHARE, LEAST_SHARE = 0.3, 0.07  # of the way from a neighbour, where the whole way at once fails
 COOLEST_SUPERGIANT = 5000.0  # K: log g below 0.5 is asked for only up to here
 PARTS = "parts"
 SOURCES = ("matter", "radiation", "atmosphere", "constants.py", "data/matter", "data/blanketing")
@@ -79,22 +80,31 @@ def converge_node(
         result = solve_structure(*node, composition, blanketing, start=start, power=power)
         if result.status == "converged":
             return result
-    if good:
-        near = good[0]
-        for share in (0.34, 0.67):
-            step = solve_structure(
-                near.teff + share * (node[0] - near.teff), near.logg + share * (node[1] - near.logg),
-                composition, blanketing, start=near, power=power,
-            )  # fmt: skip
-            if step.status != "converged":
-                break
-            near = step
-        else:
-            result = solve_structure(*node, composition, blanketing, start=near, power=power)
-            if result.status == "converged":
-                return result
+    for origin in good[:2]:
+        reached = _approach(origin, node, composition, blanketing, power)
+        if reached is not None:
+            return reached
     cold = solve_structure(*node, composition, blanketing, power=power)
     return cold if cold.status == "converged" or result is None else result
+
+
+def _approach(
+    origin: Atmosphere, node: tuple[float, float], composition: Composition, blanketing: Blanketing, power: float
+) -> Atmosphere | None:
+    """Go from a converged neighbour to a node by steps that are halved where one fails; `None` if they get too small."""
+    done, step, here = 0.0, FIRST_SHARE, origin
+    while step >= LEAST_SHARE:
+        share = min(done + step, 1.0)
+        teff = origin.teff + share * (node[0] - origin.teff)
+        logg = origin.logg + share * (node[1] - origin.logg)
+        trial = solve_structure(teff, logg, composition, blanketing, start=here, power=power)
+        if trial.status != "converged":
+            step *= 0.5
+            continue
+        if share == 1.0:
+            return trial
+        done, here = share, trial
+    return None
 
 
 def build_chain(mh: float, nodes: Sequence[tuple[float, float]], parts: str, power: float) -> None:

@@ -26,6 +26,7 @@ from specsolve.radiation.transfer_kernels import flux_response, solve_channels
 
 DERIVATIVE_STEP = 2e-5  # in ln T; larger steps break the convective derivative of cool dwarfs
 PINNED_LOG_TAU = -2.5  # below it the flux itself is the equation
+EFFICIENT_EXCESS = 0.5  # and only if that takes less than this excess over the adiabatic gradient
 CONVECTIVE_SHARE = 0.05  # where radiation leaves more than this to convection, the gradient is the equation
 
 
@@ -75,6 +76,7 @@ class Convection:
     departure_above: np.ndarray
     departure_below: np.ndarray
     departure_by_flux: np.ndarray  # with respect to the flux that convection has to carry
+    efficient: np.ndarray  # bool: that flux takes a moderate excess of the gradient over the adiabatic one
 
 
 def _convection(log_t: np.ndarray, pressure: np.ndarray, composition: Composition, rosseland: np.ndarray,
@@ -119,6 +121,7 @@ def _convection(log_t: np.ndarray, pressure: np.ndarray, composition: Compositio
     return Convection(
         flux=flux, flux_above=flux_above, flux_below=flux_below, departure=gradient - required,
         departure_above=departure_above, departure_below=departure_below, departure_by_flux=by_flux,
+        efficient=required - here.adiabatic_gradient < EFFICIENT_EXCESS,
     )  # fmt: skip
 
 
@@ -195,7 +198,7 @@ def energy_balance(
     excess = total > 1.0
     flux_residual = np.where(excess, np.log(np.where(excess, total, 1.0)), total - 1.0)
     flux_jacobian = (jac_flux + jac_conv) / np.where(excess, total, 1.0)[:, None]
-    mostly_moving = (1.0 - radiative > CONVECTIVE_SHARE) | (convective > 1.0)
+    mostly_moving = ((1.0 - radiative > CONVECTIVE_SHARE) | (convective > 1.0)) & moving.efficient
     flux_residual = np.where(mostly_moving, moving.departure, flux_residual)
     flux_jacobian = np.where(mostly_moving[:, None], jac_departure, flux_jacobian)
     residual = np.concatenate([differences[:pinned] / emitted[:pinned], flux_residual[pinned - 1 :]])

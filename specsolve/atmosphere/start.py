@@ -15,8 +15,8 @@ if TYPE_CHECKING:
     from specsolve.atmosphere.energy import Balance
     from specsolve.atmosphere.model import Atmosphere
 
-#: log10 of optical depth at 5000 A: 0.16 apart near the surface, 0.1 where the continuum forms.
-STANDARD_LOG_TAU = np.concatenate([np.linspace(-6.0, -2.0, 25, endpoint=False), np.linspace(-2.0, 2.0, 41)])
+#: log10 of optical depth at 5000 A: 0.16 apart near the surface, 0.09 where the continuum forms.
+STANDARD_LOG_TAU = np.concatenate([np.linspace(-6.0, -2.0, 25, endpoint=False), np.linspace(-2.0, 1.6, 41)])
 MAX_STARTING_GRADIENT = 0.25  # d ln T / d ln P of the deep starting structure, somewhat above the adiabatic one
 MAX_PASSES = 60
 MAX_SHIFT = 0.4  # dex of optical depth by which one move may continue a structure beyond its ends

@@ -17,10 +17,17 @@ from specsolve.matter.composition import Composition
 
 MAX_STEP = 0.08  # in ln T
 MIN_STEP = 0.003  # in ln T; where steps swing to and fro their limit is halved, down to here
+# The gas pressure follows the radiative acceleration; where that is a large part of gravity all of the change swings.
+GENTLE_PUSH = 0.05  # of gravity
+GENTLE_SHARE, STRONG_SHARE = 0.65, 0.3  # of the change of ln P that one iteration takes
+SETTLED_FLUX = 0.2  # flux error below which a strong push is followed
+SETTLED_PRESSURE = 0.02  # change of ln P below which a limit that is passed counts
 FLUX_TOLERANCE = 1e-5
-ROUGH_TOLERANCE = 3e-3  # flux error at which depth points may be moved
+ROUGH_TOLERANCE = 3e-3  # flux error at which depth points may be moved; more if they are far off
+MAX_MOVES = 15
 DEPTH_TOLERANCE = 0.01  # in log tau
-MAX_ITERATIONS = 120
+MAX_ITERATIONS = 160
+HOPELESS_ITERATIONS = 60  # by then the flux of a structure that will converge is right within a factor 2
 MAX_RADIATIVE_SHARE = 0.9  # radiative acceleration over gravity; beyond it a static layer does not exist
 RADIATION_LIMIT = "radiation pressure exceeds 0.9 of gravity"
 
@@ -91,27 +98,35 @@ def solve_structure(
     reason = f"not converged after {max_iterations} iterations"
     converged = False
     moves = 0
+    beyond = 0.0  # share of the last ten or so trial structures beyond the radiation-pressure limit
     limit = np.full_like(log_t, MAX_STEP)
     last_step = np.zeros_like(log_t)
     try:
-        for _ in range(max_iterations):
+        for count in range(max_iterations):
             field = None if balance is None else balance.field
             balance = energy_balance(
                 log_t, pressure, column_mass, teff, gravity, composition, blanketing, vmic, power, field
             )
             if not np.all(np.isfinite(balance.residual)):
                 raise StructureError("the energy balance is not finite")
-            if np.max(balance.radiative_acceleration) > MAX_RADIATIVE_SHARE * gravity:
-                if balance.flux_error < 0.1:
-                    raise StructureError(RADIATION_LIMIT)
+            if count >= HOPELESS_ITERATIONS and balance.flux_error > 1.0:
+                raise StructureError(f"flux wrong by a factor {1.0 + balance.flux_error:.1f} after {count} iterations")
+            beyond = 0.9 * beyond + 0.1 * float(np.max(balance.radiative_acceleration) > MAX_RADIATIVE_SHARE * gravity)
             new_push = np.minimum(balance.radiative_acceleration, MAX_RADIATIVE_SHARE * gravity)
             new_pressure = gas_pressure(column_mass, gravity, new_push)
             pressure_change = np.max(np.abs(np.log(new_pressure / pressure)))
+            if (
+                np.max(balance.radiative_acceleration) > MAX_RADIATIVE_SHARE * gravity
+                and balance.flux_error < SETTLED_FLUX
+                and pressure_change < SETTLED_PRESSURE
+            ):
+                raise StructureError(RADIATION_LIMIT)
             misplaced = np.max(np.abs(balance.log_tau - STANDARD_LOG_TAU))
             if balance.flux_error < FLUX_TOLERANCE and pressure_change < 1e-5 and misplaced < DEPTH_TOLERANCE:
                 converged = True
                 break
-            if balance.flux_error < ROUGH_TOLERANCE and misplaced > 0.5 * DEPTH_TOLERANCE and moves < 12:
+            rough = max(ROUGH_TOLERANCE, 0.3 * misplaced)
+            if balance.flux_error < rough and misplaced > 0.5 * DEPTH_TOLERANCE and moves < MAX_MOVES:
                 column_mass, log_t, push = move_to_standard_depths(column_mass, log_t, new_push, balance)
                 pressure = gas_pressure(column_mass, gravity, push)
                 moves += 1
@@ -123,11 +138,16 @@ def solve_structure(
             limit = np.where(swings, np.maximum(0.5 * limit, MIN_STEP), np.minimum(1.3 * limit, MAX_STEP))
             last_step = np.clip(step, -limit, limit)
             log_t = log_t + last_step
-            pressure = new_pressure if largest < 0.3 else pressure
+            gentle = np.max(new_push) < GENTLE_PUSH * gravity
+            if largest < 0.3 if gentle else balance.flux_error < SETTLED_FLUX:
+                share = GENTLE_SHARE if gentle else STRONG_SHARE
+                pressure = pressure ** (1.0 - share) * new_pressure**share
     except StructureError as problem:
         reason = problem.reason
     except (ValueError, np.linalg.LinAlgError) as problem:  # a trial temperature outside the physics tables
         reason = f"the iteration left the tabulated range: {problem}"
+    if not converged and beyond > 0.5 and reason != RADIATION_LIMIT:
+        reason = f"{RADIATION_LIMIT} in most trial structures; {reason}"
     if converged and balance.log_tau[-1] < 1.5:
         converged, reason = False, "the lowest depth point is too shallow"
     flux_error = np.nan if balance is None else balance.flux_error
