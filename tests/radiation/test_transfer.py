@@ -45,9 +45,7 @@ def test_isothermal_scattering_slab_thermalises():
     """sqrt(eps) law: J(0) / B = sqrt(eps) / (1 + sqrt(eps)) within the angle quadrature (Mihalas 1978, ch. 6)."""
     column_mass = np.logspace(-7, 6, 400)
     eps = 1e-4
-    field = solve_channels(
-        np.ones((1, 400)), np.full((1, 400), eps), np.ones((1, 400)), column_mass
-    )
+    field = solve_channels(np.ones((1, 400)), np.full((1, 400), eps), np.ones((1, 400)), column_mass)
     assert field["mean"][0, 0] == pytest.approx(np.sqrt(eps), rel=0.05)
 
 
