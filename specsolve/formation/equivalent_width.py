@@ -2,13 +2,14 @@
 
 W / lambda = 2 * integral over the half profile of the relative depth R = 1 - F / F_continuum.
 
-- Flux: F ~ 2 * integral of S(t) E2(t) dt over layers at equal steps x of log tau_5000, t' = chi dm/dx. The integrand vanishes
-  at both ends as a smooth function, so equal weights integrate it nearly exactly; t itself is accumulated by cubic pieces.
-- Source function: S = (kappa_line S_line + kappa B + sigma J) / chi with J, at every point of the profile, from the moment
-  equation d2(f J)/dt2 = J - S. The Eddington factors f of the layers come from angle-dependent solutions at four
-  strengths of each line (`STRENGTH_NODES` times as opaque as the continuum), with a cubic between them.
-- Profile: points c Doppler widths * sinh(s) with equal steps of s out to where the wing is thin; beyond, R falls with the
-  square of the distance and is added analytically.
+- Flux: F ~ 2 * integral of S(t) E2(t) dt over layers at equal steps x of log tau_5000, with t' = chi dm/dx. The
+  integrand vanishes at both ends as a smooth function, so equal weights integrate it nearly exactly; t itself is
+  accumulated by cubic pieces.
+- Source function: S = (kappa_line S_line + kappa B + sigma J) / chi with J, at every point of the profile, from the
+  moment equation d2(f J)/dt2 = J - S. The Eddington factors f of the layers come from angle-dependent solutions at
+  four strengths of each line (`STRENGTH_NODES` times as opaque as the continuum), with a cubic between them.
+- Profile: points c Doppler widths * sinh(s) with equal steps of s out to where the wing is thin; beyond, R falls with
+  the square of the distance and is added analytically.
 
 `reduced_widths` runs the compiled version, `reduced_widths_reference` is the same in NumPy.
 """
@@ -296,7 +297,8 @@ def reduced_widths(
     Returns
     -------
     ndarray, shape (n_lines, n_v, n_a)
-        Nan where a line is in emission. Accurate to 0.3 % of W below log(W / lambda) = -4.9 and 1 % to -4.5 (numerically, for the given structure).
+        Nan where a line is in emission. Numerically accurate, for the given structure, to 0.3 % of W below
+        log(W / lambda) = -4.9 and to 1 % up to -4.5.
 
     Raises
     ------

@@ -1,7 +1,7 @@
 """The second exponential integral E2, which weighs the source function in the emergent flux, from a table.
 
-Flux of a plane-parallel atmosphere: F = 2 pi * integral of S(t) E2(t) dt. The table holds parabolas on 32 pieces of every
-octave of t; the piece is read off the bits of the number, so that no logarithm is needed.
+Flux of a plane-parallel atmosphere: F = 2 pi * integral of S(t) E2(t) dt. The table holds parabolas on 32 pieces of
+every octave of t; the piece is read off the bits of the number, so that no logarithm is needed.
 """
 
 from __future__ import annotations

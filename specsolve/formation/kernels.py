@@ -60,7 +60,6 @@ def relative_widths(
     n_lines, n = strength.shape
     n_profile = points.shape[1]
     n_a = amounts.shape[0]
-    chi = np.empty((n, n_a))
     growth = np.empty((n, n_a))
     depth = np.empty((n, n_a))
     bits = depth.view(np.int64)

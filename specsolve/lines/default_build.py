@@ -8,9 +8,9 @@ damping and what spoils each line.
 Choice: all lines of the near-solar differential set (Bedell et al. 2017, ApJ 839, 94), then the quality-1 lines,
 Fe II first, then by grade and by the number of published tables of widths that use the line, up to 210 lines.
 
-log gf. Fe I: NIST; where NIST has nothing of class C or better, the value of the differential set. Fe II: Melendez & Barbuy
-2009, A&A 497, 611, whose values agree line by line better than those of NIST (standard deviation of solar abundances
-0.05 against 0.12 dex; both means are in the tests); the NIST value is the alternative.
+log gf. Fe I: NIST; where NIST has nothing of class C or better, the value of the differential set. Fe II: Melendez &
+Barbuy 2009, A&A 497, 611, whose values agree line by line better than those of NIST (standard deviation of solar
+abundances 0.05 against 0.12 dex, see the tests); the NIST value is the alternative.
 
 Grades: 1 laboratory value of the best sources; 2 laboratory value of lower accuracy; 3 value of class D or worse, or a
 neighbour with more than 5 % of the strength in the Sun; 4 no laboratory value: for differential work.
@@ -140,7 +140,7 @@ def collect(reference: Path) -> dict[str, dict]:
 
 
 def from_star_table(row, nist) -> dict:
-    """A candidate that `iron_lines.ecsv` lacks: a NIST value of a good class if there is one, else the published one."""
+    """A candidate that `iron_lines.ecsv` lacks: a NIST value of a good class, else the published one."""
     ion, wave, energy = row["ion"], float(row["wavelength_air"]), float(row["excitation_potential"])
     close = [n for n in nist if n[0] == ion and abs(n[1] - wave) < 0.05 and abs(n[2] - energy) < 0.02]
     best = max(close, key=lambda n: n[3], default=None)
@@ -181,7 +181,7 @@ def choose(candidates: dict[str, dict]) -> list[dict]:
 def build(reference: Path, output: Path) -> str:
     """Write the default list; returns one line about it."""
     from astropy import units
-    from astropy.table import Column, QTable
+    from astropy.table import Column, Table
 
     chosen = choose(collect(reference))
 
@@ -191,10 +191,10 @@ def build(reference: Path, output: Path) -> str:
     lines = identify(
         LineList.from_arrays(*(column(name) for name in ("wavelength_air", "ion", "excitation_potential", "log_gf")))
     )
-    table = QTable()
-    table["wavelength_air"] = np.round(lines.wavelength_air, 3) * units.Angstrom
+    table = Table()
+    table["wavelength_air"] = Column(np.round(lines.wavelength_air, 3), unit=units.Angstrom)
     table["ion"] = lines.ion
-    table["excitation_potential"] = np.round(lines.excitation_potential, 4) * units.eV
+    table["excitation_potential"] = Column(np.round(lines.excitation_potential, 4), unit=units.eV)
     for name in ("log_gf", "log_gf_error", "log_gf_alternative"):
         table[name] = Column(np.round(column(name), 3), description=DESCRIPTIONS[name])
     for name in ("grade", "nist_class"):
@@ -225,9 +225,11 @@ DESCRIPTIONS = {
 }
 SOURCE_WORDS = [
     "wavelengths, energies: NIST ASD",
-    "hydrogen broadening: Barklem, Piskunov & O'Mara 2000, A&AS 142, 467; Barklem & Aspelund-Johansson 2005, A&A 435, 373; "
-    "else the tables of Anstee & O'Mara 1995, Barklem & O'Mara 1997, Barklem, O'Mara & Ross 1998, or the mean of the multiplet",
-    "radiative damping: summed transition probabilities of both levels, Atomic Line List v3 (van Hoof 2018, Galaxies 6, 63)",
+    "hydrogen broadening: Barklem, Piskunov & O'Mara 2000, A&AS 142, 467; Barklem & Aspelund-Johansson 2005, "
+    "A&A 435, 373; else the tables of Anstee & O'Mara 1995, Barklem & O'Mara 1997, Barklem, O'Mara & Ross 1998, "
+    "or the mean of the multiplet",
+    "radiative damping: summed transition probabilities of both levels, Atomic Line List v3 (van Hoof 2018, "
+    "Galaxies 6, 63)",
 ]
 
 if __name__ == "__main__":

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import warnings
 from importlib import resources
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -25,6 +26,9 @@ ENERGY_LIMITS = (0.0, 14.0)  # eV; beyond the highest lower levels of the table
 LOG_GF_LIMITS = (-12.0, 2.5)  # dex; wider than any published iron line
 CONFLICT_DEX = 0.005
 """Repeats whose log gf differ by more than the rounding of two published decimals conflict [dex]."""
+
+SPOILED = {"spoiled_sun": "Sun", "spoiled_k_dwarf": "K dwarf", "spoiled_cool_giant": "cool giant"}
+"""Columns of the default list about what spoils a line; together they make its note."""
 
 DEFAULT_NAME = "iron_default.ecsv"
 FORMATS = {
@@ -90,7 +94,9 @@ def read_table(path: Path) -> Table:
     if file_format is None:
         raise InputError(f"{path}: unknown suffix '{path.suffix}'; use one of {', '.join(FORMATS)}.", path=path)
     try:
-        return Table.read(path, format=file_format)
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # readers comment on units of old standards
+            return Table.read(path, format=file_format)
     except FileNotFoundError as error:
         raise InputError(f"{path}: no such file.", path=path) from error
     except OSError as error:
@@ -127,6 +133,15 @@ def line_list_from_table(
         if name in ("remarks", "transition", "flags") or theirs not in table.colnames:
             continue
         given[name] = _column(table[theirs], name, where, path)
+    if "note" not in given and all(name in table.colnames for name in SPOILED):
+        told = [_column(table[name], "note", where, path).tolist() for name in SPOILED]
+        given["note"] = np.array(
+            [
+                "; ".join(f"{SPOILED[name]}: {words}" for name, words in zip(SPOILED, line, strict=True) if words)
+                for line in zip(*told, strict=True)
+            ],
+            str,
+        )
     given["ion"] = np.array([(ions or {}).get(value, value) for value in given["ion"].tolist()], str)
     _check(given, where, path)
     required = [given.pop(name) for name in REQUIRED]

@@ -28,8 +28,8 @@ HELIUM_TO_HYDROGEN = 0.41
 """Width per helium atom over width per hydrogen atom: ratio of polarizabilities to the 2/5 and of speeds to the 3/5
 power (van der Waals broadening; polarizabilities 1.38 and 4.5 a0^3, textbook values)."""
 UNSOLD_FACTOR = 1.4
-"""Times the van der Waals width of Unsoeld 1955, where no cross-section is known: the median over the Fe I lines of Barklem,
-Piskunov & O'Mara 2000 between 3500 and 10 000 Angstrom, measured here (a test repeats it)."""
+"""Times the van der Waals width of Unsoeld 1955, where no cross-section is known: the median over the Fe I lines of
+Barklem, Piskunov & O'Mara 2000 between 3500 and 10 000 Angstrom, measured here (a test repeats it)."""
 HYDROGEN_POLARIZABILITY_A03 = 4.5  # a0^3, ground state of hydrogen, exact textbook value
 STARK_TEMPERATURE_K = 1.0e4
 
@@ -149,8 +149,9 @@ def stark_width(upper_ev, ionization_ev, charge):
     Returns
     -------
     ndarray
-        [rad cm3/s]: 11.37 C4^(2/3) v^(1/3) (impact theory, Mihalas 1978, Stellar Atmospheres, ch. 9) with C4 = e^2 alpha / (2
-        hbar) and the polarizability scaled from hydrogen, alpha = 4.5 n*^6 / Z^4 a0^3 (own approximation).
+        [rad cm3/s]: 11.37 C4^(2/3) v^(1/3) (impact theory, Mihalas 1978, Stellar Atmospheres, ch. 9) with
+        C4 = e^2 alpha / (2 hbar) and the polarizability scaled from hydrogen, alpha = 4.5 n*^6 / Z^4 a0^3 (own
+        approximation).
     """
     n2 = effective_quantum_number_squared(upper_ev, ionization_ev, charge)
     polarizability = HYDROGEN_POLARIZABILITY_A03 * n2**3 / charge**4 * BOHR_RADIUS_CM**3

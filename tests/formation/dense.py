@@ -1,8 +1,7 @@
-"""Equivalent width the slow way: dense layers and profile, angle by angle, scattering solved with the profile's radiation.
+"""Equivalent width the slow way: dense layers and profile, angle by angle, scattering solved at every frequency.
 
-Nothing numerical is shared with `specsolve.formation`: layers at equal steps of ln m from the structure's own points, optical
-depth by the trapezoidal rule on many layers, Feautrier's equation on five angles at every profile point, plain
-trapezoidal profile out to the far wing.
+Nothing numerical is shared with `specsolve.formation`: other layers, optical depth by the trapezoidal rule, Feautrier's
+equation on five angles at every profile point, plain trapezoidal profile out to the far wing.
 """
 
 from __future__ import annotations
@@ -37,10 +36,11 @@ def flux(chi, scattering, thermal, mass):
 
 
 def operators(steps, top):
-    """Matrix that makes mean intensities of source functions, and the vector that makes the emergent flux 4 H.
+    """Matrix from source function to mean intensity, and vector from source function to emergent flux 4 H.
 
-    Feautrier's equation for each angle, mu^2 (u[d+1] - u[d]) / p[d] - mu^2 (u[d] - u[d-1]) / p[d-1] = width[d] (u[d] - S[d]),
-    eliminated so that layers as thin as 1e-9 do no harm; the last layer's mean intensity equals its source function.
+    Feautrier's equation for each angle,
+    mu^2 (u[d+1] - u[d]) / p[d] - mu^2 (u[d] - u[d-1]) / p[d-1] = width[d] (u[d] - S[d]),
+    eliminated so that layers as thin as 1e-9 do no harm; in the last layer J = S.
     """
     n = steps.size + 1
     mu = COSINES[:, None]

@@ -18,7 +18,8 @@ from specsolve.matter.broadening import (
 )
 from specsolve.matter.line_profile import voigt, voigt_fast
 
-# Barklem, Piskunov & O'Mara 2000, A&AS 142, 467, table 1: sigma [a0^2], alpha, log10 full width per H at 10 000 K [rad cm3/s]
+# Barklem, Piskunov & O'Mara 2000, A&AS 142, 467, table 1:
+# sigma [a0^2], alpha, log10 full width per H at 10 000 K [rad cm3/s]
 HYDROGEN_ROWS = [(211.0, 0.251, -7.812), (204.0, 0.254, -7.827), (212.0, 0.251, -7.810)]
 
 

@@ -47,7 +47,7 @@ def test_compiled_equals_numpy(star, lines):
 
 
 def test_blue_line_of_metal_poor_giant_against_dense():
-    """Continuum scattering dominates here (albedo 0.8 at tau = 0.3): 0.3 % of W, of which 0.15 % is the dense grid's own."""
+    """Scattering dominates here (albedo 0.8 at tau = 0.3): 0.3 % of W, of which 0.15 % is the dense grid's own."""
     teff, logg, mh = METAL_POOR_GIANT
     composition = composition_for(mh)
     structure = scaled_solar(teff, logg, composition)
