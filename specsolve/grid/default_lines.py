@@ -1,8 +1,9 @@
 """Make the default line list, with what spoils each line in the Sun, a K dwarf and a cool giant.
 
-``python -m specsolve.grid.default_lines REFERENCE OUTPUT.ecsv`` (about 30 s): the choice is that of
-`lines.default_build`; neighbours come from the Atomic Line List (elements to uranium, two stages, 4300-8100 Angstrom), strengths from our own
-atmospheres at solar composition. Copy the result to ``linelists_demo/`` and ``specsolve/data/lines/``.
+``python -m specsolve.grid.default_lines REFERENCE OUTPUT.ecsv`` (about 15 s): the choice is that of
+`lines.default_build`; neighbours come from the Atomic Line List (elements to uranium, two stages, 4300-8100
+Angstrom), strengths from our own atmospheres at solar composition. Copy the result to ``linelists_demo/`` and
+``specsolve/data/lines/``.
 """
 
 from __future__ import annotations

@@ -177,27 +177,6 @@ class Interpolator:
         """Flags of the cell that holds theta (bits 1, 2 and 8)."""
         return self._cell_flags if self._enter(theta) else self._cell_flags | MISSING_WIDTHS
 
-    def node_abundances(self, log_reduced_widths, nodes) -> np.ndarray:
-        """Abundances at nodes of the grid, for a scan of all of it.
-
-        Parameters
-        ----------
-        log_reduced_widths : ndarray, shape (n_lines,)
-        nodes : tuple of ndarray, each of shape (n_nodes,)
-            Indices along teff, logg, mh.
-
-        Returns
-        -------
-        abundance : ndarray, shape (n_nodes, n_lines, n_vmic)
-            nan where missing or outside the dA axis.
-        """
-        codes = self.grid.gather(self.treatment, nodes, self.line_indices)
-        curves = decode(codes).reshape(-1, self.dA.size)
-        widths = np.broadcast_to(np.asarray(log_reduced_widths, float)[None, :, None], codes.shape[:-1]).ravel()
-        dA = invert_curves(curves, np.empty((0, *curves.shape)), self.dA, self.dA_slopes, widths)[0]
-        mh = self.node_positions[self.mh_axis][nodes[self.mh_axis]]
-        return dA.reshape(codes.shape[:-1]) + SOLAR_IRON + mh[:, None, None]
-
     def _flat_axes(self) -> list[int]:
         return [i for i, x in enumerate((*self.node_positions, self.vmic)) if x.size == 1]
 

@@ -9,7 +9,7 @@ from specsolve.constants import SOLAR_IRON
 from specsolve.errors import InputError, OutOfGridError
 from specsolve.grid import AT_EDGE, BESIDE_MISSING, MISSING_WIDTHS, OUTSIDE_TABLE, Interpolator
 from specsolve.grid.codes import MISSING, decode, encode
-from tests.grid.synthetic import LOGG, MH, TEFF, synthetic_grid, synthetic_lines, synthetic_log_widths
+from tests.grid.synthetic import synthetic_grid, synthetic_lines, synthetic_log_widths
 
 SUN = (5772.0, 4.44, 0.0, 1.0)
 
@@ -236,19 +236,6 @@ def test_line_selection_and_reuse_of_a_cell_do_not_change_numbers(grid, lines, r
         assert np.array_equal(ours[1], fresh[1], equal_nan=True)
     with pytest.raises(InputError):
         Interpolator(grid, "lte", [len(lines)])
-
-
-def test_node_abundances_equal_abundances_at_nodes(grid, lines):
-    interpolator = Interpolator(grid)
-    widths = synthetic_log_widths(lines, *SUN, 0.0)
-    nodes = (np.array([3, 7]), np.array([8, 9]), np.array([5, 6]))
-    scanned = interpolator.node_abundances(widths, nodes)
-    for k in range(2):
-        for j, vmic in enumerate(grid.axes["vmic"]):
-            theta = (TEFF[nodes[0][k]], LOGG[nodes[1][k]], MH[nodes[2][k]], vmic)
-            assert np.allclose(
-                scanned[k, :, j], interpolator.abundances(theta, widths).abundance, atol=1e-9, equal_nan=True
-            )
 
 
 def test_a_missing_width_shortens_the_curve_and_is_not_bridged(lines, tmp_path):
