@@ -294,7 +294,8 @@ def _styled(text: str, style: str) -> Any:
 def _table(*headings: str, right: Any = ()) -> Any:
     from rich.table import Table
 
-    table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 2), header_style="dim")
+    table = Table(box=None, pad_edge=False, padding=(0, 1), header_style="dim")
     for i, heading in enumerate(headings):
-        table.add_column(heading, justify="right" if i in right else "left", overflow="fold")
+        last = i == len(headings) - 1 and i not in right
+        table.add_column(heading, justify="right" if i in right else "left", overflow="fold", no_wrap=not last)
     return table
