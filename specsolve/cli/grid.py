@@ -285,6 +285,7 @@ def check_words(summary: dict[str, dict[str, float]]) -> str:
     rows = ["error of line abundances, grid against full engine [dex]"]
     for name, row in summary.items():
         sizes = f"median {row['median']:.4f}  99 % {row['percentile_99']:.4f}  worst {row['worst']:.4f}"
+        sizes += f"  (log W: 99 % {row['width_percentile_99']:.4f})"
         rows.append(
             f"  {name.replace('_', ' '):<20} {row['points']:4d} points {row['pairs']:6d} widths"
             + (f"  {sizes}" if row["pairs"] else "")

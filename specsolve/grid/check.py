@@ -54,13 +54,16 @@ class GridCheck:
     def summary(self) -> dict[str, dict[str, float]]:
         """Per kind of cell: number of points and (line, point) pairs, median, 99th percentile and worst error [dex].
 
-        Only widths in `USABLE` count; nan where there are none.
+        Errors of abundances, and the 99th percentile of those of log10 W, which are smaller by the growth of the
+        curve: a fifth for saturated lines. Only widths in `USABLE` count; nan where there are none. The engine's own
+        error is in them: its profile points follow the strongest of the abundances asked for at once.
         """
         kind = np.where(self.flags & BESIDE_MISSING, BESIDE_MISSING, self.flags & AT_EDGE)
         usable = (self.log_widths > USABLE[0]) & (self.log_widths < USABLE[1]) & np.isfinite(self.abundance_error)
         out = {}
         for name, bit in STENCILS.items():
-            errors = np.abs(self.abundance_error[(kind == bit)[:, None] & usable])
+            pairs = (kind == bit)[:, None] & usable
+            errors = np.abs(self.abundance_error[pairs])
             middle, high, worst = np.percentile(errors, [50, 99, 100]) if errors.size else (np.nan,) * 3
             out[name] = {
                 "points": int((kind == bit).sum()),
@@ -68,6 +71,9 @@ class GridCheck:
                 "median": float(middle),
                 "percentile_99": float(high),
                 "worst": float(worst),
+                "width_percentile_99": float(np.percentile(np.abs(self.width_error[pairs]), 99))
+                if errors.size
+                else np.nan,
                 "within_0.005": float(np.mean(errors <= 0.005)) if errors.size else np.nan,
             }
         return out

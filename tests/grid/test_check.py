@@ -45,6 +45,7 @@ def test_the_error_of_a_good_grid_is_small_and_sorted_by_stencil(grid, rng):
     assert summary["inside"]["percentile_99"] < 0.005
     assert summary["at_grid_edge"]["percentile_99"] < 0.02
     assert summary["inside"]["within_0.005"] >= 0.99
+    assert summary["inside"]["width_percentile_99"] <= summary["inside"]["percentile_99"]
 
 
 def test_a_wrong_grid_is_found_out(grid, rng):

@@ -28,6 +28,7 @@ def killing(mode: str, seed: int) -> dict:
     return json.loads(done.stdout)
 
 
+@pytest.mark.slow
 def test_killed_at_twenty_random_moments(seed):
     result = killing("random", seed)
     assert result["interrupted"] == 20
