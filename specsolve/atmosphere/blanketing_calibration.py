@@ -3,8 +3,9 @@
 The line lists lack molecules, hydrogen and part of the ultraviolet. In each band below 0.7 um the factor is the one with
 which a model of the Sun emits the observed flux, never less than 1; the logarithm times `FRACTION` is kept, because the
 full correction overshoots the limb darkening at 0.45-0.55 um. Below the observed range, 290 nm, the factor of the bluest
-observed band is taken over down to `SHORTEST_NM`; nothing is known there. Observed: the extraterrestrial spectrum of ASTM G173-03 (Gueymard 2004, Solar
-Energy 76, 423), as the package pvlib carries it, averaged over the bands in the packaged `solar_flux.csv`.
+observed band is taken over down to `SHORTEST_NM`; nothing is known there. Observed: the extraterrestrial spectrum of
+ASTM G173-03 (Gueymard 2004, Solar Energy 76, 423), as the package pvlib carries it, averaged over the bands in the
+packaged `solar_flux.csv`.
 
     python -m specsolve.atmosphere.blanketing_calibration --output DIR --solar-flux   # makes solar_flux.csv (needs pvlib)
     python -m specsolve.atmosphere.blanketing_calibration --output DIR                # makes multiplier.csv (half a minute)
@@ -182,10 +183,16 @@ def calibrate_on_the_sun(passes: int = 6, points: int = 5) -> tuple[np.ndarray, 
     wavelengths = edges[:-1, None] + np.diff(edges)[:, None] * offsets
     full = np.ones(len(wanted))
     for _ in range(passes):
-        model = solve_structure(SOLAR_TEFF, SOLAR_LOGG, composition_for(0.0), replace(raw, multiplier=full), start=model)
+        model = solve_structure(
+            SOLAR_TEFF, SOLAR_LOGG, composition_for(0.0), replace(raw, multiplier=full), start=model
+        )
 
         def band_flux(factors: np.ndarray, model=model) -> np.ndarray:
-            return emergent_flux(model, wavelengths.ravel(), replace(raw, multiplier=factors)).reshape(-1, points).mean(axis=1)
+            return (
+                emergent_flux(model, wavelengths.ravel(), replace(raw, multiplier=factors))
+                .reshape(-1, points)
+                .mean(axis=1)
+            )
 
         found = calibrate(band_flux, edges, sun, tolerance=1e-3)
         full = np.where(wanted & np.isfinite(found), np.maximum(found, 1.0), full)

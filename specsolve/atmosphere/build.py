@@ -32,6 +32,7 @@ TEFF_STEP, LOGG_STEP = 250.0, 0.5  # one unit of distance between nodes
 FIRST_SHARE, LEAST_SHARE = 0.3, 0.07  # of the way from a neighbour, where the whole way at once fails
 COOLEST_SUPERGIANT = 5000.0  # K: log g below 0.5 is asked for only up to here
 PARTS = "parts"
+SOURCE_SUFFIXES = (".py", ".npy", ".npz", ".csv", ".ecsv", ".json")
 SOURCES = ("matter", "radiation", "atmosphere", "constants.py", "data/matter", "data/blanketing")
 
 
@@ -41,7 +42,8 @@ def sources_hash(names: Sequence[str] = SOURCES) -> str:
     digest = hashlib.sha256()
     for name in names:
         path = root / name
-        files = [path] if path.is_file() else sorted(p for p in path.rglob("*") if p.suffix in (".py", ".npy", ".npz", ".ecsv", ".json"))  # fmt: skip
+        found = [path] if path.is_file() else sorted(path.rglob("*"))
+        files = [file for file in found if file.suffix in SOURCE_SUFFIXES]
         for file in files:
             digest.update(file.relative_to(root).as_posix().encode())
             digest.update(hashlib.sha256(file.read_bytes()).digest())
@@ -69,7 +71,11 @@ def _distance(a: tuple[float, float], b: tuple[float, float]) -> float:
 
 
 def converge_node(
-    node: tuple[float, float], done: dict[tuple[float, float], Atmosphere], mh: float, blanketing: Blanketing, power: float
+    node: tuple[float, float],
+    done: dict[tuple[float, float], Atmosphere],
+    mh: float,
+    blanketing: Blanketing,
+    power: float,
 ) -> Atmosphere:
     """Converge one node of a chain: from its nearest neighbours, then by smaller steps, then cold."""
     composition = composition_for(mh)

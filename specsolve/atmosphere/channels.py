@@ -43,8 +43,8 @@ class Channels:
 def band_edges(blanketing: Blanketing) -> np.ndarray:
     """Edges of all bands, shape (n_bands + 1,) [cm]: short continuum, blanketed, long continuum."""
     inner = blanketing.band_edges_cm
-    short = SHORT_EDGES_CM[SHORT_EDGES_CM < inner[0] * 0.97]
-    long = LONG_EDGES_CM[LONG_EDGES_CM > inner[-1] * 1.03]
+    short = SHORT_EDGES_CM[inner[0] * 0.97 > SHORT_EDGES_CM]
+    long = LONG_EDGES_CM[inner[-1] * 1.03 < LONG_EDGES_CM]
     return np.concatenate([short, inner, long])
 
 

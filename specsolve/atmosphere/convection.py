@@ -12,7 +12,9 @@ import numpy as np
 
 from specsolve.constants import STEFAN_BOLTZMANN
 
-MIXING_LENGTH = 1.8  # in pressure scale heights: with 1.5 the Sun's limb darkening at mu 0.5 is 0.023 too steep, with 1.8 0.018
+MIXING_LENGTH = (
+    1.8  # in pressure scale heights: with 1.5 the Sun's limb darkening at mu 0.5 is 0.023 too steep, with 1.8 0.018
+)
 
 
 def _element(

@@ -172,7 +172,13 @@ def energy_balance(
     radiative = 4.0 * np.pi * field["flux"].sum(axis=0) / target
     jac_flux = 4.0 * np.pi * d_flux / target
     moving = _convection(
-        log_t, pressure, composition, rosseland, rosseland_slope, gravity, target * np.maximum(1.0 - radiative, 0.5 * CONVECTIVE_SHARE)
+        log_t,
+        pressure,
+        composition,
+        rosseland,
+        rosseland_slope,
+        gravity,
+        target * np.maximum(1.0 - radiative, 0.5 * CONVECTIVE_SHARE),
     )
     convective = moving.flux / target
     rows = np.arange(n - 1)
@@ -202,9 +208,7 @@ def energy_balance(
     flux_residual = np.where(mostly_moving, moving.departure, flux_residual)
     flux_jacobian = np.where(mostly_moving[:, None], jac_departure, flux_jacobian)
     residual = np.concatenate([differences[:pinned] / emitted[:pinned], flux_residual[pinned - 1 :]])
-    jacobian = np.concatenate(
-        [jac_differences[:pinned] / emitted[:pinned, None], flux_jacobian[pinned - 1 :]]
-    )
+    jacobian = np.concatenate([jac_differences[:pinned] / emitted[:pinned, None], flux_jacobian[pinned - 1 :]])
     surface = 4.0 * np.pi * field["surface"].sum() / target
     inner = np.concatenate([field["surface"][:, None], field["flux"]], axis=1)
     flux_at_points = np.concatenate([inner[:, :1], 0.5 * (inner[:, 1:-1] + inner[:, 2:]), inner[:, -1:]], axis=1)

@@ -62,7 +62,8 @@ def read_atmosphere(path: str | Path) -> Atmosphere:
         teff, logg, mh = (float(meta[name]) for name in ("teff", "logg", "mh"))
     except (KeyError, TypeError, ValueError) as problem:
         raise InputError(
-            f"{path}: the metadata must give teff [K], logg [dex cgs] and mh [dex] as numbers; it has {sorted(meta)}.", path=path
+            f"{path}: the metadata must give teff [K], logg [dex cgs] and mh [dex] as numbers; it has {sorted(meta)}.",
+            path=path,
         ) from problem
     columns = {}
     for name, unit in COLUMN_UNITS.items():
@@ -85,7 +86,9 @@ def read_atmosphere(path: str | Path) -> Atmosphere:
     absorption, scattering = continuum_opacity(np.array([REFERENCE_WAVELENGTH_CM]), gas)
     tau = optical_depth(absorption[0] + scattering[0], columns["column_mass"])
     if tau[-1] < 10.0:
-        raise InputError(f"{path}: the lowest point has optical depth {tau[-1]:.2g} at 5000 A; at least 10 is needed.", path=path)
+        raise InputError(
+            f"{path}: the lowest point has optical depth {tau[-1]:.2g} at 5000 A; at least 10 is needed.", path=path
+        )
     return Atmosphere(
         teff=teff, logg=logg, mh=mh, alpha=alpha, vmic=float(meta.get("vmic", np.nan)),
         column_mass=columns["column_mass"], temperature=columns["temperature"], gas_pressure=columns["gas_pressure"],
@@ -98,16 +101,23 @@ def _check(path: Path, columns: dict[str, np.ndarray], gravity: float) -> None:
     for name, values in columns.items():
         bad = np.flatnonzero(~np.isfinite(values) | (values <= 0.0))
         if bad.size:
-            raise InputError(f"{path}: {name} is not a positive number in row {bad[0] + 1}.", path=path, row=int(bad[0]))
+            raise InputError(
+                f"{path}: {name} is not a positive number in row {bad[0] + 1}.", path=path, row=int(bad[0])
+            )
     mass, temperature, pressure = columns["column_mass"], columns["temperature"], columns["gas_pressure"]
     if len(mass) < MIN_DEPTHS:
         raise InputError(f"{path}: {len(mass)} depth points; at least {MIN_DEPTHS} are needed.", path=path)
     if np.any(np.diff(mass) <= 0.0):
         row = int(np.flatnonzero(np.diff(mass) <= 0.0)[0]) + 1
-        raise InputError(f"{path}: column_mass must increase inwards; it does not in row {row + 1}.", path=path, row=row)
+        raise InputError(
+            f"{path}: column_mass must increase inwards; it does not in row {row + 1}.", path=path, row=row
+        )
     low, high = TEMPERATURE_RANGE_K
     if temperature.min() < low or temperature.max() > high:
-        raise InputError(f"{path}: temperatures {temperature.min():.0f} to {temperature.max():.0f} K; allowed {low:.0f} to {high:.0f} K.", path=path)
+        raise InputError(
+            f"{path}: temperatures {temperature.min():.0f} to {temperature.max():.0f} K; allowed {low:.0f} to {high:.0f} K.",
+            path=path,
+        )
     ratio = pressure[-1] / (gravity * mass[-1])
     if abs(ratio - 1.0) > HYDROSTATIC_TOLERANCE:
         raise InputError(
@@ -130,7 +140,9 @@ def _same_depths(model: Atmosphere, n: int) -> Atmosphere:
     return replace(model, log_tau=x, **moved)
 
 
-def import_store(directory: str | Path, tables: Sequence[str | Path], provenance: dict | None = None) -> AtmosphereStore:
+def import_store(
+    directory: str | Path, tables: Sequence[str | Path], provenance: dict | None = None
+) -> AtmosphereStore:
     """Make a store out of a user's tables.
 
     Parameters
@@ -156,7 +168,10 @@ def import_store(directory: str | Path, tables: Sequence[str | Path], provenance
         model = read_atmosphere(path)
         node = (model.teff, model.logg, model.mh)
         if node in models:
-            raise InputError(f"{path} and {origin[node]} are both Teff {node[0]:g}, log g {node[1]:g}, [M/H] {node[2]:+g}.", path=path)
+            raise InputError(
+                f"{path} and {origin[node]} are both Teff {node[0]:g}, log g {node[1]:g}, [M/H] {node[2]:+g}.",
+                path=path,
+            )
         models[node], origin[node] = model, Path(path)
     if not models:
         raise InputError("no tables were given; write `specsolve atmosphere import TABLE... --output DIR`.")

@@ -71,7 +71,9 @@ def starting_structure(
 
 
 def _mass_of(neighbour: Atmosphere) -> np.ndarray:
-    return np.exp(PchipInterpolator(neighbour.log_tau, np.log(neighbour.column_mass), extrapolate=True)(STANDARD_LOG_TAU))
+    return np.exp(
+        PchipInterpolator(neighbour.log_tau, np.log(neighbour.column_mass), extrapolate=True)(STANDARD_LOG_TAU)
+    )
 
 
 def _limit_gradient(temperature: np.ndarray, tau: np.ndarray, mass: np.ndarray) -> np.ndarray:

@@ -101,7 +101,12 @@ class AtmosphereStore:
 
     def nodes(self) -> list[tuple[float, float, float]]:
         """All (teff, logg, mh) of the axes, in the order of the array."""
-        return [(float(t), float(g), float(m)) for t in self.axes["teff"] for g in self.axes["logg"] for m in self.axes["mh"]]
+        return [
+            (float(t), float(g), float(m))
+            for t in self.axes["teff"]
+            for g in self.axes["logg"]
+            for m in self.axes["mh"]
+        ]
 
     def describe(self, teff: float, logg: float, mh: float) -> dict:
         """Status record of a node: `status`, `reason`, `flux_error`, `alpha`, `vmic`.
@@ -193,8 +198,8 @@ def write_store(
             continue
         if model.status in ("converged", "imported"):
             structures[index] = [getattr(model, name) for name in QUANTITIES]
-        error = float(model.flux_error)
-        records.append({"status": model.status, "reason": model.reason, "flux_error": error if np.isfinite(error) else None,
+        error = float(f"{model.flux_error:.2g}") if np.isfinite(model.flux_error) else None
+        records.append({"status": model.status, "reason": model.reason, "flux_error": error,
                         "alpha": float(model.alpha), "vmic": float(model.vmic)})  # fmt: skip
     buffer = io.BytesIO()
     np.save(buffer, structures, allow_pickle=False)

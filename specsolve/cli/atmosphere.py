@@ -19,16 +19,30 @@ def atmosphere() -> None:
     epilog="Examples: specsolve atmosphere build --output my_atmospheres --teff 5000:6000:250 --logg 4:5:0.5 --mh 0. "
     "An interrupted build goes on when the same command is given again."
 )
-@click.option("--output", "directory", type=click.Path(path_type=Path, file_okay=False), required=True, help="Folder of the new store.")
+@click.option(
+    "--output",
+    "directory",
+    type=click.Path(path_type=Path, file_okay=False),
+    required=True,
+    help="Folder of the new store.",
+)
 @click.option("--teff", help="Nodes in K: START:STOP:STEP, A,B,C or one number. Default 4000:7000:250.")
 @click.option("--logg", help="Nodes in dex. Default 0:5:0.5 (below 0.5 only up to 5000 K).")
 @click.option("--mh", help="Nodes in dex. Default -3:0.5:0.5.")
 @click.option("--multiplier-power", type=click.FloatRange(0.0, 2.0), default=1.0, show_default=True,
               help="Exponent of the missing-opacity multiplier: 0 raw line lists, 2 twice its logarithm.")  # fmt: skip
-@click.option("--workers", type=click.IntRange(1), default=1, show_default=True, help="Processes; one metallicity each at a time.")
+@click.option(
+    "--workers", type=click.IntRange(1), default=1, show_default=True, help="Processes; one metallicity each at a time."
+)
 @common_options(json=False)
 def build(
-    settings: Settings, directory: Path, teff: str | None, logg: str | None, mh: str | None, multiplier_power: float, workers: int
+    settings: Settings,
+    directory: Path,
+    teff: str | None,
+    logg: str | None,
+    mh: str | None,
+    multiplier_power: float,
+    workers: int,
 ) -> None:
     """Converge atmospheres on a set of nodes and store them."""
     from specsolve.atmosphere.build import DEFAULT_LOGG, DEFAULT_MH, DEFAULT_TEFF, build_store
@@ -48,7 +62,13 @@ def build(
 
 @atmosphere.command(name="import", epilog="Example: specsolve atmosphere import mine/*.ecsv --output my_atmospheres")
 @click.argument("tables", nargs=-1, required=True, type=click.Path(path_type=Path, dir_okay=False))
-@click.option("--output", "directory", type=click.Path(path_type=Path, file_okay=False), required=True, help="Folder of the new store.")
+@click.option(
+    "--output",
+    "directory",
+    type=click.Path(path_type=Path, file_okay=False),
+    required=True,
+    help="Folder of the new store.",
+)
 @common_options(json=False)
 def import_(settings: Settings, tables: tuple[Path, ...], directory: Path) -> None:
     """Make a store out of your own structures.
@@ -63,16 +83,32 @@ def import_(settings: Settings, tables: tuple[Path, ...], directory: Path) -> No
     _summary(settings, store)
 
 
-@atmosphere.command(epilog="Examples: specsolve atmosphere show 5750 4.5 0 ; ... --plot sun.png ; ... --output sun.ecsv")
+@atmosphere.command(
+    epilog="Examples: specsolve atmosphere show 5750 4.5 0 ; ... --plot sun.png ; ... --output sun.ecsv"
+)
 @click.argument("teff", type=float)
 @click.argument("logg", type=float)
 @click.argument("mh", type=float)
-@click.option("--atmospheres", type=click.Path(path_type=Path, file_okay=False), help="A store of your own; default the packaged one.")
+@click.option(
+    "--atmospheres",
+    type=click.Path(path_type=Path, file_okay=False),
+    help="A store of your own; default the packaged one.",
+)
 @click.option("--output", type=click.Path(path_type=Path, dir_okay=False), help="Write the table as ECSV.")
-@click.option("--plot", type=click.Path(path_type=Path, dir_okay=False), help="Draw temperature and pressures against optical depth.")
+@click.option(
+    "--plot",
+    type=click.Path(path_type=Path, dir_okay=False),
+    help="Draw temperature and pressures against optical depth.",
+)
 @common_options()
 def show(
-    settings: Settings, teff: float, logg: float, mh: float, atmospheres: Path | None, output: Path | None, plot: Path | None
+    settings: Settings,
+    teff: float,
+    logg: float,
+    mh: float,
+    atmospheres: Path | None,
+    output: Path | None,
+    plot: Path | None,
 ) -> None:
     """Print one atmosphere of a store as a table."""
     from specsolve.atmosphere.store import AtmosphereStore
@@ -102,6 +138,8 @@ def _summary(settings: Settings, store: object) -> None:
     nodes = store.header["nodes"]
     good = sum(n["status"] in ("converged", "imported") for n in nodes)
     failed = [n for n in nodes if n["status"] == "failed"]
-    settings.say(f"{store.directory}: {good} atmospheres, {len(failed)} failed, {len(nodes) - good - len(failed)} left out")
+    settings.say(
+        f"{store.directory}: {good} atmospheres, {len(failed)} failed, {len(nodes) - good - len(failed)} left out"
+    )
     for reason in sorted({n["reason"] for n in failed}):
         settings.say(f"  failed {sum(n['reason'] == reason for n in failed)}: {reason}")

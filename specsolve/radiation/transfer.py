@@ -129,8 +129,6 @@ def emergent_intensity(
         slope = np.diff(source, axis=1) / slab
         inner = trans[:, :-1] * (source[:, :-1] + slope) - trans[:, 1:] * (source[:, 1:] + slope)
         result[:, i] = (
-            inner.sum(axis=1)
-            + source[:, 0] * (1.0 - trans[:, 0])
-            + trans[:, -1] * (source[:, -1] + slope[:, -1])
+            inner.sum(axis=1) + source[:, 0] * (1.0 - trans[:, 0]) + trans[:, -1] * (source[:, -1] + slope[:, -1])
         )
     return result

@@ -143,7 +143,17 @@ def radiation_field(steps, tops, destruction, thermal, cosines, weights, eddingt
 
 @njit(cache=True, nogil=True)
 def flux_response(
-    column_mass, steps, destruction, thermal, opacity_slope, destruction_slope, thermal_slope, eddington, mean, flux, edges
+    column_mass,
+    steps,
+    destruction,
+    thermal,
+    opacity_slope,
+    destruction_slope,
+    thermal_slope,
+    eddington,
+    mean,
+    flux,
+    edges,
 ):
     """Derivatives of the flux and of the net absorption with respect to temperature, all channels summed.
 

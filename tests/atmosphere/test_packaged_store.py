@@ -62,9 +62,11 @@ def test_depths_and_hydrostatics(store):
     for node in chosen_nodes(store, 40, "depths"):
         model = store.get(*node)
         assert len(model.log_tau) >= 65
-        assert model.log_tau[0] == pytest.approx(-6.0, abs=0.02) and model.log_tau[-1] == pytest.approx(1.6, abs=0.02)
-        ratio = model.gas_pressure / (10.0 ** model.logg * model.column_mass)
-        assert np.all(ratio <= 1.0 + 1e-9) and np.all(ratio > 0.05)
+        assert model.log_tau[0] == pytest.approx(-6.0, abs=0.02)
+        assert model.log_tau[-1] == pytest.approx(1.6, abs=0.02)
+        ratio = model.gas_pressure / (10.0**model.logg * model.column_mass)
+        assert np.all(ratio <= 1.0 + 1e-9)
+        assert np.all(ratio > 0.05)
 
 
 @pytest.mark.slow

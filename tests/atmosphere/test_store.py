@@ -93,7 +93,8 @@ def test_interrupted_build_goes_on(tmp_path, monkeypatch):
         building.build_store(tmp_path, teff=[5500.0, 5750.0], logg=[4.5], mh=[0.0], executor=pool, power=2.0)
     with ThreadPoolExecutor(1) as pool:
         store = building.build_store(tmp_path, teff=[5500.0, 5750.0], logg=[4.5], mh=[0.0], executor=pool)
-    assert len(computed) == 3 and all(store.has(t, 4.5, 0.0) for t in (5500.0, 5750.0))
+    assert len(computed) == 3
+    assert all(store.has(t, 4.5, 0.0) for t in (5500.0, 5750.0))
 
 
 def test_own_structures_are_imported(tmp_path):

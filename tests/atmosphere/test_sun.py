@@ -77,9 +77,13 @@ def test_flux_above_700_nm(sun, figure):
     worst = {}
     for low in np.arange(700.0, 2400.0, 50.0):
         inside = (spectrum.index > low) & (spectrum.index < low + 50.0)
-        observed = np.trapezoid(spectrum[inside], spectrum.index[inside]) / np.ptp(spectrum.index[inside])  # W / (m2 nm)
+        observed = np.trapezoid(spectrum[inside], spectrum.index[inside]) / np.ptp(
+            spectrum.index[inside]
+        )  # W / (m2 nm)
         points = (low + 50.0 * (np.arange(5) + 0.5) / 5) * 1e-7
-        ours = emergent_flux(sun, points, load_blanketing(0.0)).mean() * dilution * 1e-3 * 1e-7  # erg / (s cm2 cm) in W / (m2 nm)
+        ours = (
+            emergent_flux(sun, points, load_blanketing(0.0)).mean() * dilution * 1e-3 * 1e-7
+        )  # erg / (s cm2 cm) in W / (m2 nm)
         worst[low] = ours / observed - 1.0
     figure("flux above 0.7 um", max(map(abs, worst.values())), limit="< 0.05", source="ASTM G173")
     assert max(map(abs, worst.values())) < 0.05, worst

@@ -50,7 +50,7 @@ def test_isothermal_scattering_slab_thermalises():
 
 
 def test_flux_response_against_differences(slab):
-    column_mass, temperature, opacity, destruction, thermal = slab
+    column_mass, temperature, opacity, destruction, _thermal = slab
 
     def state(t):
         scale = (1.0 + (t / 6000.0) ** 2) / (1.0 + (temperature / 6000.0) ** 2)
@@ -69,7 +69,7 @@ def test_flux_response_against_differences(slab):
     d_flux, d_net = flux_response(
         column_mass, base["steps"], eps, b, *slopes, base["eddington"], base["mean"], base["flux"], base["edges"]
     )
-    flux, net = _moment_flux(chi, eps, b, column_mass, base)
+    flux, _net = _moment_flux(chi, eps, b, column_mass, base)
     np.testing.assert_allclose(flux, base["flux"].sum(axis=0), rtol=1e-6)
     for j in (0, 1, 20, 40, 58, 59):
         shifted = []
