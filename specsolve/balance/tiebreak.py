@@ -1,6 +1,7 @@
 """Which candidate is reported, by a rule in four steps, each recorded.
 
-1. Candidates outside the grid, not converged, or beside missing nodes are set aside (kept, flagged). Outside
+1. Candidates outside the grid or not converged are set aside, and so are those beside missing nodes if there are
+others (kept, flagged). Outside
 knowledge is in already.
 2. Near-equal means 2 (ln L_best - ln L) < 6, odds of 20 : 1. If none is near the best, the best is it.
 3. Else a published vmic(teff, logg) relation enters as a Gaussian; it decides only beyond the same 6, and is
@@ -24,8 +25,8 @@ from .uncertainty import parameter_covariances
 SETTING_ASIDE = (
     ("outside_grid", "the minimum lies at the edge of the grid"),
     ("not_converged", "the refinement did not converge"),
-    ("beside_missing_node", "beside a missing node of the grid"),
 )
+BESIDE_MISSING = ("beside_missing_node", "beside a missing node of the grid")
 
 
 @dataclass(frozen=True, eq=False)
@@ -50,19 +51,30 @@ class Ranking:
     decided_by_relation: bool
 
 
-def set_aside_reason(flags: tuple[str, ...]) -> str:
-    """Why step 1 sets a candidate aside; empty if it does not."""
-    return next((text for flag, text in SETTING_ASIDE if flag in flags), "")
+def set_aside_reason(flags: tuple[str, ...], others: bool = True) -> str:
+    """Why step 1 sets a candidate aside; empty if it does not.
+
+    Parameters
+    ----------
+    flags : tuple of str
+    others : bool
+        There are candidates that lie neither outside nor beside a missing node; without them one beside a missing
+        node, where
+        interpolation is one-sided but does not reach across, is reported and flagged.
+    """
+    rules = (*SETTING_ASIDE, BESIDE_MISSING) if others else SETTING_ASIDE
+    return next((text for flag, text in rules if flag in flags), "")
 
 
 def rank(problem: Problem, search: Search) -> Ranking:
     """Apply the rule. `search.found` must not be empty."""
     found = search.found
     common = search.preliminary.copy()
-    considered = [item for item in found if not set_aside_reason(item.flags)] or list(found)
+    others = any(not set_aside_reason(item.flags) for item in found)
+    considered = [item for item in found if not set_aside_reason(item.flags, others)] or list(found)
     for item in considered:
         common &= np.isfinite(item.minimum.state.abundance)
-    rows = [_candidate(problem, item, common) for item in found]
+    rows = [_candidate(problem, item, common, set_aside_reason(item.flags, others)) for item in found]
     order = sorted(
         range(len(found)),
         key=lambda i: (
@@ -169,7 +181,7 @@ def _posterior(problem: Problem, row: Candidate) -> float:
     return row.log_likelihood - 0.5 * float(terms @ terms)
 
 
-def _candidate(problem: Problem, item: FoundMinimum, common: np.ndarray) -> Candidate:
+def _candidate(problem: Problem, item: FoundMinimum, common: np.ndarray, set_aside: str) -> Candidate:
     minimum = item.minimum
     star, shared = parameter_covariances(problem, minimum.state)
     likelihood = problem.log_likelihood(minimum.theta, common)
@@ -185,7 +197,7 @@ def _candidate(problem: Problem, item: FoundMinimum, common: np.ndarray) -> Cand
         n_lines=int(minimum.state.used.sum()),
         n_seeds=item.seeds,
         flags=item.flags,
-        set_aside=set_aside_reason(item.flags),
+        set_aside=set_aside,
         iterations=minimum.iterations,
     )
 
