@@ -48,9 +48,10 @@ def solved(problem: Problem, search: Search, ranking: Ranking, sun: SolarLines |
         flags.append("covariance_undefined")
     status, reason = ranking.status, ""
     if ranking.candidates[0].set_aside:
-        status = OUTSIDE_GRID if "outside_grid" in item.flags else UNSOLVED
+        outside = {"outside_grid", "stopped_by_missing_node"} & set(item.flags)
+        status = OUTSIDE_GRID if outside else UNSOLVED
         reason = ranking.candidates[0].set_aside
-        if status == OUTSIDE_GRID:
+        if "outside_grid" in outside:
             reason = _where_outside(problem, minimum.theta)
     elif status == "tied":
         reason = "the rule cannot separate the near-equal candidates"

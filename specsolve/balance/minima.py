@@ -168,7 +168,9 @@ def minimum_flags(problem: Problem, minimum: Minimum, preliminary: np.ndarray) -
     """Flags of a refined minimum."""
     flags = []
     state = minimum.state
-    if not minimum.converged:
+    if minimum.blocked:
+        flags.append("stopped_by_missing_node")
+    elif not minimum.converged:
         flags.append("not_converged")
     if minimum.at_bound[problem.free].any():
         flags.append("outside_grid")

@@ -16,7 +16,7 @@ STEP_UNIT = np.array([250.0, 0.5, 0.5, 0.5])
 MAX_STEP = 1.0  # in STEP_UNIT
 STEP_TOLERANCE = 1e-7  # in STEP_UNIT: 2.5e-5 K; the step below it is still taken
 ROUGH_TOLERANCE = 1e-2  # in STEP_UNIT
-STALLED_STEP = 1e-6  # a step that no damping can take must be below this to count as an end
+STALLED_STEP = 1e-4  # where no damping gives a better point, the full step must be below this to count as an end
 MAX_HALVINGS = 12
 LEVENBERG_START = 1e-3
 RANK_TOLERANCE = 1e-10
@@ -41,6 +41,8 @@ class Minimum:
     iterations : int
     failure : str
         Why there is no state; empty otherwise.
+    blocked : bool
+        The way on leads into a cell with missing nodes: the minimum lies beyond, not here.
     """
 
     theta: np.ndarray
@@ -50,6 +52,7 @@ class Minimum:
     at_bound: np.ndarray
     iterations: int
     failure: str = ""
+    blocked: bool = False
 
 
 def whitened_system(problem: Problem, state: BalanceState) -> tuple[np.ndarray, np.ndarray]:
@@ -90,11 +93,13 @@ def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = Non
         place = ("teff", "logg", "feh", "vmic").index(name)
         theta[place] = value
     state, failure = _evaluate(problem, theta, allowed, None, rough)
+    if state is not None and not rough:  # predicted widths follow the weights: the first step is judged with these too
+        state, failure = _evaluate(problem, theta, allowed, state, rough)
     nowhere = np.zeros(4, dtype=bool)
     if state is None:
         return Minimum(theta, None, np.inf, False, nowhere, 0, failure)
     free, damping, converged = problem.free, 0.0, False
-    iteration, at_bound = 0, nowhere
+    iteration, at_bound, blocked = 0, nowhere, False
     for step_number in range(1, problem.options.max_iterations + 1):
         iteration = step_number
         z, jacobian = whitened_system(problem, state)
@@ -106,7 +111,7 @@ def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = Non
         if moving.size == 0:
             converged = True
             break
-        accepted = False
+        accepted, hit_missing = False, False
         for _ in range(MAX_HALVINGS):
             step = _step(scaled[:, moving], z, damping)
             size = float(np.max(np.abs(step)))
@@ -117,14 +122,19 @@ def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = Non
             if new_state is not None and _not_worse(problem, state, new_state):
                 accepted = True
                 break
+            hit_missing |= new_state is None
             damping = max(10.0 * damping, LEVENBERG_START)
         moved = float(np.max(np.abs(trial - theta) / STEP_UNIT))
-        if not accepted:
-            converged = moved < STALLED_STEP
+        small = moved < (ROUGH_TOLERANCE if rough else STEP_TOLERANCE)
+        if not accepted or (small and damping > 0.0):
+            # A damped step may be small because it had to be: the end is where the full step is small too.
+            met = float(z @ z) <= ROOT_OBJECTIVE
+            converged = met or float(np.max(np.abs(_step(scaled[:, moving], z, 0.0)))) < STALLED_STEP
+            blocked = hit_missing and not converged
             break
         theta, state = trial, new_state
         damping = 0.0 if damping <= LEVENBERG_START else 0.1 * damping
-        if moved < (ROUGH_TOLERANCE if rough else STEP_TOLERANCE):
+        if small:
             converged = True
             break
     z, _ = whitened_system(problem, state)
@@ -134,7 +144,7 @@ def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = Non
     # A root that happens to lie on a face is not stopped by it. At vmic = 0 the widths are even in vmic: every
     # slope vanishes.
     stopped[free] = on_face[free] & (objective > ROOT_OBJECTIVE)
-    return Minimum(theta, state, objective, converged, stopped, iteration)
+    return Minimum(theta, state, objective, converged, stopped, iteration, blocked=blocked)
 
 
 def _step(jacobian: np.ndarray, z: np.ndarray, damping: float) -> np.ndarray:

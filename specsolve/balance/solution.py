@@ -141,7 +141,8 @@ class Candidate:
     n_seeds : int
         Starting cells or nodes that led here.
     flags : tuple of str
-        at_grid_edge, beside_missing_node, outside_grid, lines_outside_table, not_converged, saddle.
+        at_grid_edge, beside_missing_node, outside_grid, stopped_by_missing_node, lines_outside_table,
+        not_converged, weights_not_settled.
     set_aside : str
         Why the rule does not consider it; empty if it does.
     iterations : int

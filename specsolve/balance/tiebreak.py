@@ -24,6 +24,7 @@ from .uncertainty import parameter_covariances
 
 SETTING_ASIDE = (
     ("outside_grid", "the minimum lies at the edge of the grid"),
+    ("stopped_by_missing_node", "the way to the minimum leads into missing nodes of the grid; fix a parameter"),
     ("not_converged", "the refinement did not converge"),
 )
 BESIDE_MISSING = ("beside_missing_node", "beside a missing node of the grid")
@@ -101,7 +102,7 @@ def rank(problem: Problem, search: Search) -> Ranking:
             log.append(("set_aside", _name(i), row.chi2, float("nan"), "set aside", row.set_aside))
     eligible = [i for i, row in enumerate(rows) if not row.set_aside]
     status, by_relation, chosen = SOLVED, False, 0
-    odds = {0: 1.0}
+    odds: dict[int, float] = {}
     if not eligible:
         log.append(
             (

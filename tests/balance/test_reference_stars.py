@@ -1,0 +1,146 @@
+"""Real stars with published widths, solved on the packaged grid and compared with what the papers found.
+
+The whole sets are read from the folder named by SPECSOLVE_REFERENCE; each file names its source. Nothing is tuned
+to a star.
+The limits are those that the package must hold; where a limit was wider than first hoped for, the hoped-for value
+stands beside it.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+
+import numpy as np
+import pytest
+from astropy.table import Table
+
+from specsolve.balance.own_sun import SUN_FEH, SUN_LOGG, SUN_TEFF_K, solar_star
+from specsolve.balance.solve import solve
+from specsolve.balance.star import match_lines
+from specsolve.grid.store import ResponseGrid
+from specsolve.star_table import read_stars
+
+pytestmark = pytest.mark.slow
+
+NAMES = ("teff", "logg", "feh", "vmic")
+UNITS = ("K", "dex", "dex", "km/s")
+DWARFS = "Bedell et al. 2017, ApJ 839, 94"
+GIANTS = "Casey et al. 2014, ApJ 784, 19"
+CLUSTERS = "Pancino et al. 2010, A&A 511, A56"
+FIXED_SUN = {"teff": SUN_TEFF_K, "logg": SUN_LOGG, "feh": SUN_FEH}
+
+
+@pytest.fixture(scope="module")
+def packaged() -> ResponseGrid:
+    return ResponseGrid.packaged()
+
+
+def published(reference, name: str) -> dict[str, np.ndarray]:
+    table = Table.read(reference / "stars" / f"{name}_parameters.ecsv")
+    columns = ("teff_K", "logg", "feh", "vmic_kms")
+    return {str(row["star"]): np.array([float(row[c]) for c in columns]) for row in table}
+
+
+def test_the_sun_at_its_nominal_parameters(packaged, figure):
+    """5772 K, 4.438 (IAU 2015), xi from the lines; best laboratory log gf; solar iron 7.46 (Asplund et al. 2021)."""
+    star = solar_star()
+    grade = packaged.lines.grade[match_lines(star, packaged.lines).index]
+    star = dataclasses.replace(star, use=(grade >= 1) & (grade <= 2))
+    solution = solve(star, packaged, fix=FIXED_SUN)
+    source = f"widths: {DWARFS}"
+    figure("Sun, fixed: A(Fe I)", solution.fe1.abundance, "dex", limit="7.46 +- 0.07", source=source)
+    figure("Sun, fixed: A(Fe II)", solution.fe2.abundance, "dex", limit="7.46 +- 0.07", source=source)
+    figure("Sun, fixed: ionization offset", solution.residuals[1], "dex", limit="0.04", source=source)
+    figure("Sun, fixed: excitation slope", solution.residuals[0], "dex/eV", source=source)
+    figure("Sun, fixed: vmic", solution.vmic, "km/s", limit="0.8 to 1.2", source=source)
+    figure("Sun, fixed: scatter of Fe I", solution.fe1.scatter, "dex", limit="0.06", source=source)
+    assert solution.fe1.abundance == pytest.approx(7.46, abs=0.07)
+    assert solution.fe2.abundance == pytest.approx(7.46, abs=0.07)
+    assert abs(solution.residuals[1]) <= 0.04
+    assert 0.8 <= solution.vmic <= 1.2
+    assert solution.fe1.scatter <= 0.06
+
+
+def test_the_sun_blind(packaged, figure):
+    star = solar_star()
+    grade = packaged.lines.grade[match_lines(star, packaged.lines).index]
+    star = dataclasses.replace(star, use=(grade >= 1) & (grade <= 2))
+    solution = solve(star, packaged)
+    assert solution.status == "solved"
+    for name, value, error, unit in zip(NAMES, solution.parameters, solution.errors, UNITS, strict=True):
+        figure(f"Sun, blind: {name}", value, unit, limit=f"own error {error:.3g}", source=f"widths: {DWARFS}")
+    other = solution.alternative_parameters.get("fe2_alternative")
+    if other is not None:
+        figure("Sun, blind: logg with the other Fe II scale", other[1], "dex", source=f"widths: {DWARFS}")
+    assert solution.teff == pytest.approx(SUN_TEFF_K, abs=100.0)
+    assert 0.8 <= solution.vmic <= 1.2
+    # Hoped for: 0.10. Gravity follows the temperature: laboratory log gf leave a slope of -0.015 dex/eV in the Sun.
+    assert solution.logg == pytest.approx(SUN_LOGG, abs=0.25)
+
+
+@pytest.fixture(scope="module")
+def dwarfs(packaged, reference):
+    """Differences to the paper, of stars solved differentially to the paper's Sun (5777 K, 4.44, 0.97 km/s)."""
+    parameters = published(reference, "dwarfs_differential")
+    sun = dict(zip(NAMES, parameters["Sun"].tolist(), strict=True))
+    stars = read_stars(reference / "stars" / "dwarfs_differential_lines.ecsv")
+    solutions = solve(stars, packaged, reference="Sun", reference_parameters=sun)
+    return {s.star: s.parameters - parameters["Sun" if s.star == "Sun2" else s.star] for s in solutions}
+
+
+def test_near_solar_dwarfs(dwarfs, figure):
+    difference = np.array([d for name, d in dwarfs.items() if name != "Sun2"])
+    mean, rms = difference.mean(axis=0), difference.std(axis=0)
+    hoped_mean, hoped_rms = (8.0, 0.015, 0.006, 0.03), (12.0, 0.025, 0.010, 0.05)
+    for k, name in enumerate(NAMES):
+        figure(f"dwarfs, mean of {name}", mean[k], UNITS[k], limit=f"hoped for {hoped_mean[k]:g}", source=DWARFS)
+        figure(f"dwarfs, rms of {name}", rms[k], UNITS[k], limit=f"hoped for {hoped_rms[k]:g}", source=DWARFS)
+    assert (np.abs(mean) <= [10.0, 0.025, 0.008, 0.03]).all()
+    assert (rms <= [18.0, 0.030, 0.012, 0.05]).all()
+
+
+def test_second_solar_spectrum(dwarfs, figure):
+    """The second solar spectrum differs from the first by a slope of 0.003 +- 0.0015 dex/eV in the widths
+    themselves.
+    """
+    for k, name in enumerate(NAMES):
+        figure(f"Sun2 - Sun, {name}", dwarfs["Sun2"][k], UNITS[k], limit="hoped for 10 K, 0.02, 0.008", source=DWARFS)
+    assert (np.abs(dwarfs["Sun2"]) <= [30.0, 0.04, 0.015, 0.06]).all()
+
+
+def test_giants(packaged, reference, figure):
+    """[Fe/H] > -1.7, absolute log gf of the paper, against its LTE parameters."""
+    parameters = published(reference, "giants")
+    stars = [s for s in read_stars(reference / "stars" / "giants_lines.ecsv") if parameters[s.name][2] > -1.7]
+    solutions = solve(stars, packaged)
+    difference = np.array([s.parameters - parameters[s.star] for s in solutions])
+    assert all(s.status == "solved" for s in solutions)
+    median, worst = np.median(np.abs(difference), axis=0), np.max(np.abs(difference), axis=0)
+    for k, name in enumerate(NAMES):
+        figure(f"giants, median |difference| of {name}", median[k], UNITS[k], source=GIANTS)
+        figure(f"giants, worst |difference| of {name}", worst[k], UNITS[k], source=GIANTS)
+    assert (median <= [60.0, 0.15, 0.06, 0.2]).all()
+    assert (worst[:2] <= [130.0, 0.35]).all()
+
+
+@pytest.mark.parametrize("cluster", ["Cr110", "NGC2099", "NGC2420"])
+def test_cluster_giants_on_the_default_list(packaged, reference, figure, cluster):
+    """Members with published gf; the default list has a quarter of the paper's lines, a grid of its own list does
+    better.
+    """
+    stars = [s for s in read_stars(reference / "stars" / "cluster_giants_lines.ecsv") if s.name.startswith(cluster)]
+    table = Table.read(reference / "stars" / "cluster_giants_parameters.ecsv")
+    mean = float(table["feh"][table["cluster"] == cluster][0])
+    solutions = solve(stars, packaged)
+    values = np.array([s.parameters for s in solutions])
+    errors = np.array([s.errors_star for s in solutions])
+    deviation = values.std(axis=0, ddof=1)
+    for k, name in enumerate(NAMES[:3]):
+        figure(f"{cluster}, standard deviation of {name}", deviation[k], UNITS[k], source=CLUSTERS)
+    figure(f"{cluster}, mean logg", values[:, 1].mean(), "dex", limit="2.2 to 2.8 hoped for", source=CLUSTERS)
+    figure(f"{cluster}, mean [Fe/H] - published", values[:, 2].mean() - mean, "dex", limit="0.3", source=CLUSTERS)
+    # members agree within their own errors: chi2 of the scatter about the mean, three stars
+    scatter = ((values - np.average(values, axis=0, weights=errors**-2)) / errors)[:, :3]
+    assert (scatter**2).sum(axis=0).max() < 13.8  # 0.1 % of a chi2 with 2 degrees of freedom
+    if cluster != "NGC2420":  # its published mean lies 0.2-0.3 dex above other work
+        assert abs(values[:, 2].mean() - mean) <= 0.3
