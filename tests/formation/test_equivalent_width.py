@@ -61,7 +61,7 @@ def test_blue_line_of_metal_poor_giant_against_dense():
 @pytest.mark.slow
 def test_accuracy_against_dense(star, lines):
     """Below log(W/l) = -4.9 0.3 %, to -4.5 1 %; the dense grid's own error is about 0.1 %."""
-    chosen = lines.select(slice(0, 7, 2))
+    chosen = lines.select([1, 4, 6])
     for vmic, abundance in zip((0.5, 2.0, 1.0), abundances(star.mh)[[7, 4, 2]], strict=True):
         fast = reduced_widths(star.structure, star.composition, chosen, [vmic], [abundance])[:, 0, 0]
         for i, value in enumerate(fast):
