@@ -4,13 +4,14 @@ Nothing here is real: the open cluster Marsk 7, its members and the spectrograph
 atmosphere is converged at its own parameters with opacity tables of the cluster's own metallicity; no response grid is
 involved, so that solving the demo tests the grid too.
 
-``python -m specsolve.demo --output demo_data`` writes ``cluster_widths.ecsv`` and ``cluster_truth.ecsv`` (about three
+``python -m specsolve.demo --output demo_data`` writes ``cluster_widths.ecsv`` and ``cluster_truth.ecsv`` (about five
 minutes, of which most is the opacity table).
 """
 
 from __future__ import annotations
 
 import argparse
+import logging
 import sys
 from dataclasses import dataclass
 from pathlib import Path
@@ -25,6 +26,8 @@ from specsolve.formation.equivalent_width import reduced_widths
 from specsolve.lines import LineList, default_line_list
 from specsolve.matter.composition import composition_for
 from specsolve.report.tables import make_table, write_table
+
+log = logging.getLogger(__name__)
 
 CLUSTER = "Marsk 7"
 CLUSTER_FEH = -0.12
@@ -122,6 +125,7 @@ def atmospheres(members: tuple[Member, ...], feh: float) -> list[Atmosphere]:
     ConvergenceError
         If one of them does not converge.
     """
+    log.info("opacity table for [M/H] %+.2f", feh)
     blanketing = blanketing_for(feh)
     done: dict[tuple[float, float], Atmosphere] = {}
     for member in members:
@@ -130,6 +134,7 @@ def atmospheres(members: tuple[Member, ...], feh: float) -> list[Atmosphere]:
         if model.status != "converged":
             raise ConvergenceError(f"{member.name}: {model.reason}", error=model.flux_error, tolerance=1e-5)
         done[node] = model
+        log.info("%s: atmosphere converged", member.name)
     return [done[member.teff, member.logg] for member in members]
 
 
@@ -232,6 +237,7 @@ def main(arguments: list[str] | None = None) -> None:
     parser.add_argument("--output", default="demo_data", help="existing folder for the two tables")
     parser.add_argument("--seed", type=int, default=SEED)
     options = parser.parse_args(arguments)
+    logging.basicConfig(stream=sys.stderr, level=logging.INFO, format="%(asctime)s %(message)s")
     for path in make(options.output, seed=options.seed):
         print(path, file=sys.stderr)
 
