@@ -174,6 +174,9 @@ def minimum_flags(problem: Problem, minimum: Minimum, preliminary: np.ndarray) -
         flags.append("not_converged")
     if minimum.at_bound[problem.free].any():
         flags.append("outside_grid")
+    formed = np.count_nonzero(problem.active & np.isfinite(state.residuals))
+    if formed + problem.outside_terms(state.theta)[0].size < problem.free.size:
+        flags.append("undetermined")
     bits = int(np.bitwise_or.reduce(state.flags[state.used])) if state.used.any() else 0
     if bits & EDGE_FLAG:
         flags.append("at_grid_edge")

@@ -142,7 +142,7 @@ class Candidate:
         Starting cells or nodes that led here.
     flags : tuple of str
         at_grid_edge, beside_missing_node, outside_grid, stopped_by_missing_node, lines_outside_table,
-        not_converged, weights_not_settled.
+        not_converged, undetermined, weights_not_settled.
     set_aside : str
         Why the rule does not consider it; empty if it does.
     iterations : int

@@ -26,6 +26,7 @@ SETTING_ASIDE = (
     ("outside_grid", "the minimum lies at the edge of the grid"),
     ("stopped_by_missing_node", "the way to the minimum leads into missing nodes of the grid; fix a parameter"),
     ("not_converged", "the refinement did not converge"),
+    ("undetermined", "the lines that have an abundance there do not determine all parameters"),
 )
 BESIDE_MISSING = ("beside_missing_node", "beside a missing node of the grid")
 
@@ -206,7 +207,8 @@ def _candidate(problem: Problem, item: FoundMinimum, common: np.ndarray, set_asi
 def _log_mass(problem: Problem, row: Candidate, with_relation: bool) -> float:
     value = _posterior(problem, row)
     block = row.covariance[np.ix_(problem.free, problem.free)]
-    sign, log_determinant = np.linalg.slogdet(block) if problem.free.size else (1.0, 0.0)
+    known = np.isfinite(block).all()
+    sign, log_determinant = np.linalg.slogdet(block) if problem.free.size and known else (1.0, 0.0)
     if sign > 0.0 and np.isfinite(log_determinant):
         value += 0.5 * log_determinant
     if with_relation:
