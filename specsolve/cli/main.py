@@ -26,6 +26,10 @@ COMMANDS = {
 }
 
 
+# Before numpy is loaded: the matrices are small, threads only wait for each other. A value that is set already stays.
+THREAD_VARIABLES = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
+
+
 class LazyGroup(click.Group):
     """A group whose commands are imported when they are called."""
 
@@ -137,5 +141,7 @@ def _interrupt(number: int, frame: Any) -> None:
 
 def main() -> None:
     """Entry point of the ``specsolve`` script."""
+    for name in THREAD_VARIABLES:
+        os.environ.setdefault(name, "1")
     signal.signal(signal.SIGTERM, _interrupt)
     sys.exit(run())
