@@ -91,7 +91,7 @@ def finish(problem: Problem, rough: Minimum, preliminary: np.ndarray) -> tuple[M
     allowed = predicted_lines(problem, rough, preliminary)
     if not enough_lines(problem, allowed):
         allowed = preliminary
-    minimum = refine(problem, rough.theta, allowed)
+    minimum = refine(problem, rough.theta, allowed, previous=rough.state)
     return (rough, preliminary) if minimum.state is None else (minimum, allowed)
 
 

@@ -14,8 +14,9 @@ from .state import BalanceState
 # Units in which steps are measured, one default grid step of each axis: K, dex, dex, km/s.
 STEP_UNIT = np.array([250.0, 0.5, 0.5, 0.5])
 MAX_STEP = 1.0  # in STEP_UNIT
-STEP_TOLERANCE = 1e-7  # in STEP_UNIT: 2.5e-5 K; the step below it is still taken
-ROUGH_TOLERANCE = 1e-2  # in STEP_UNIT
+# The step below the tolerance is still taken, and steps shrink nearly quadratically: 1e-5 is 2.5e-3 K, and far less is left.
+STEP_TOLERANCE = 1e-5  # in STEP_UNIT
+ROUGH_TOLERANCE = 5e-2  # in STEP_UNIT
 STALLED_STEP = 1e-4  # where no damping gives a better point, the full step must be below this to count as an end
 MAX_HALVINGS = 12
 LEVENBERG_START = 1e-3
@@ -70,7 +71,13 @@ def whitened_system(problem: Problem, state: BalanceState) -> tuple[np.ndarray, 
     return np.concatenate([z, outside]), np.vstack([jacobian, outside_jacobian])
 
 
-def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = None, rough: bool = False) -> Minimum:
+def refine(
+    problem: Problem,
+    start: np.ndarray,
+    allowed: np.ndarray | None = None,
+    rough: bool = False,
+    previous: BalanceState | None = None,
+) -> Minimum:
     """Damped Gauss-Newton from one starting point.
 
     Each step refreshes weights, line-to-line term and strength axis, so that the end is their common fixed point. A
@@ -85,14 +92,16 @@ def refine(problem: Problem, start: np.ndarray, allowed: np.ndarray | None = Non
     start : ndarray, shape (4,)
     allowed : ndarray of bool, shape (n_lines,), optional
     rough : bool
-        End at a step of 2.5 K and the like, with predicted widths to first order.
+        End at a step of 12 K and the like, with predicted widths to first order.
+    previous : BalanceState, optional
+        Near the start: where the weights begin; changes the speed alone.
     """
     low, high = problem.bounds
     theta = np.clip(np.asarray(start, float), low, high)
     for name, value in problem.fixed.items():
         place = ("teff", "logg", "feh", "vmic").index(name)
         theta[place] = value
-    state, failure = _evaluate(problem, theta, allowed, None, rough)
+    state, failure = _evaluate(problem, theta, allowed, previous, rough)
     if state is not None and not rough:  # predicted widths follow the weights: the first step is judged with these too
         state, failure = _evaluate(problem, theta, allowed, state, rough)
     nowhere = np.zeros(4, dtype=bool)

@@ -188,11 +188,11 @@ def match_lines(star: Star, lines) -> Match:
     reason[width > HUGE_WIDTH_MA] = REASON_HUGE_WIDTH
     reason[~(np.isfinite(width) & (width > 0.0))] = REASON_BAD_WIDTH
     reason[~star.use] = REASON_NOT_USED
-    relative = np.where(reason == "", star.equivalent_width_error / np.where(width > 0.0, width, 1.0), np.inf)
-    for line in np.unique(index[(index >= 0) & (reason == "")]):
-        same = np.flatnonzero((index == line) & (reason == ""))
-        keep = same[np.argmin(relative[same])]
-        reason[same[same != keep]] = REASON_REPEATED
+    rows = np.flatnonzero((index >= 0) & (reason == ""))
+    relative = star.equivalent_width_error[rows] / width[rows]
+    best_first = rows[np.lexsort((rows, relative, index[rows]))]
+    repeated = np.r_[False, np.diff(index[best_first]) == 0][: rows.size]
+    reason[best_first[repeated]] = REASON_REPEATED
     return Match(index=index, reason=reason, looks_like_vacuum=looks_like_vacuum)
 
 
