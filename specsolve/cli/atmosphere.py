@@ -84,7 +84,8 @@ def import_(settings: Settings, tables: tuple[Path, ...], directory: Path) -> No
 
 
 @atmosphere.command(
-    epilog="Examples: specsolve atmosphere show 5750 4.5 0 ; ... --plot sun.png ; ... --output sun.ecsv"
+    context_settings={"ignore_unknown_options": True},  # so that -1 is a metallicity
+    epilog="Examples: specsolve atmosphere show 5750 4.5 0 ; ... --plot sun.png ; ... --output sun.ecsv",
 )
 @click.argument("teff", type=float)
 @click.argument("logg", type=float)

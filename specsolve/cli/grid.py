@@ -275,7 +275,7 @@ def info_words(opened: ResponseGrid) -> str:
     for name in opened.treatments:
         missing = opened.missing(name)
         rows.append(f"{name}: {int(opened.node_valid(name).sum())} nodes, {len(missing)} missing, {size:.1f} MB")
-        reasons = list(missing.values())
+        reasons = [reason.split(";")[0].rstrip(")") + ")" * (reason.count("(") > 0) for reason in missing.values()]
         rows += [f"  {reasons.count(reason)} missing: {reason}" for reason in sorted(set(reasons))]
     return "\n".join(rows)
 

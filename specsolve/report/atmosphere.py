@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from specsolve.atmosphere.model import Atmosphere
+from specsolve.errors import UsageError
 
 if TYPE_CHECKING:
     from astropy.table import QTable
@@ -60,9 +61,12 @@ def draw_atmosphere(model: Atmosphere, path: Path) -> None:
         matplotlib is not installed.
     """
     from specsolve.constants import BOLTZMANN_ERG_K
-    from specsolve.report.figures import new_figure
 
-    figure = new_figure(figsize=(7.0, 6.0))
+    try:
+        from matplotlib.figure import Figure
+    except ImportError as error:
+        raise UsageError("figures need matplotlib: pip install 'specsolve[plots]'") from error
+    figure = Figure(figsize=(7.0, 6.0), layout="constrained")
     warm, press = figure.subplots(2, 1, sharex=True)
     warm.plot(model.log_tau, model.temperature, color="black")
     warm.axhline(model.teff, color="0.6", linewidth=0.8)
