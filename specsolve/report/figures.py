@@ -8,10 +8,9 @@ from collections.abc import Iterable
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-import numpy as np
-
 from specsolve.errors import OutputError, UsageError
 from specsolve.report import panels
+from specsolve.report.line_fates import cut_counts, fate, worth_a_look
 from specsolve.report.sheet import headline
 
 if TYPE_CHECKING:
@@ -83,15 +82,8 @@ def page(one: Solution) -> Figure:
 
 
 def numbered(one: Solution) -> dict[int, int]:
-    """Number of each dropped line in the list of the page: index of the line to number, from 1.
-
-    Lines without weight come first, the down-weighted ones after them, each by wavelength.
-    """
-    lines = one.lines
-    gone = np.flatnonzero(~lines.used)
-    weak = np.flatnonzero(lines.used & (lines.reason != ""))
-    order = [*gone[np.argsort(lines.wavelength_air[gone])], *weak[np.argsort(lines.robust_weight[weak])]]
-    return {int(i): number for number, i in enumerate(order, start=1)}
+    """Number on the page, from 1, of each line that is worth a look (`line_fates.worth_a_look`)."""
+    return {int(i): number for number, i in enumerate(worth_a_look(one), start=1)}
 
 
 def save_pages(solutions: Iterable[Solution], folder: str | Path, kind: str = "pdf") -> list[Path]:
@@ -162,9 +154,10 @@ def _draw(figure: Figure, one: Solution, numbers: dict[int, int]) -> None:
 def _write_list(figure: Figure, one: Solution, numbers: dict[int, int]) -> None:
     lines = one.lines
     rows = []
+    if cut := cut_counts(one):
+        rows += [*textwrap.wrap(f"crosses, left out by the cuts: {cut}", LIST_WIDTH + 20), ""]
     for i, number in list(numbers.items())[:LISTED]:
-        fate = "dropped" if not lines.used[i] else f"weight {lines.robust_weight[i]:.2f}"
-        text = f"{number:>3} {lines.ion[i]:<5} {lines.wavelength_air[i]:8.2f}  {fate}: {lines.reason[i]}"
+        text = f"{number:>3} {lines.ion[i]:<5} {lines.wavelength_air[i]:8.2f}  {fate(one, i)}"
         rows.append(textwrap.shorten(text.replace("  ", "\u00a0 "), LIST_WIDTH + 20, placeholder=" ..."))
     if len(numbers) > LISTED:
         rows.append(f"    and {len(numbers) - LISTED} more in the lines table")

@@ -13,6 +13,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from specsolve.balance.residuals import plane_operator
+from specsolve.report.line_fates import cut_by_rule
 from specsolve.report.sheet import DECIMALS, NAMES, most_influential, signed
 
 if TYPE_CHECKING:
@@ -83,7 +84,7 @@ def counterfactual_slope(one: Solution, axis: str, parameter: int, step: float) 
 
 
 def draw_map(axes: Axes, one: Solution, numbers: dict[int, int]) -> object:
-    """Lines in the plane of excitation and strength: area = leverage, colour = deviation; dropped lines numbered."""
+    """Lines by excitation and strength: area = leverage, colour = deviation; cut lines are crosses, odd ones numbered."""
     lines, share = one.lines, leverage(one)
     shown = fe1_used(one)
     points = axes.scatter(
@@ -98,21 +99,22 @@ def draw_map(axes: Axes, one: Solution, numbers: dict[int, int]) -> object:
         linewidths=0.5,
         zorder=3,
     )
+    cut = cut_by_rule(one) & (lines.ion == "Fe I")
+    height = np.where(np.isfinite(lines.strength), lines.strength, lines.reduced_width)
+    axes.plot(lines.excitation_potential[cut], height[cut], "x", color=FAINT, markersize=3, markeredgewidth=0.6)
     for i, number in numbers.items():
-        if lines.ion[i] == "Fe I":
-            height = lines.strength[i] if np.isfinite(lines.strength[i]) else lines.reduced_width[i]
-            if np.isfinite(height) and np.isfinite(lines.excitation_potential[i]):
-                axes.annotate(
-                    str(number),
-                    (lines.excitation_potential[i], height),
-                    fontsize=7,
-                    color=DROPPED_COLOUR,
-                    ha="center",
-                    va="center",
-                    annotation_clip=True,
-                )
+        if lines.ion[i] == "Fe I" and np.isfinite(height[i]) and np.isfinite(lines.excitation_potential[i]):
+            axes.annotate(
+                str(number),
+                (lines.excitation_potential[i], height[i]),
+                fontsize=7,
+                color=DROPPED_COLOUR,
+                xytext=(5, 4),
+                textcoords="offset points",
+                annotation_clip=True,
+            )
     axes.set_ylabel("strength, log$_{10}$(W/$\\lambda$)")
-    axes.set_title("Where the weight of Fe I sits (area: leverage; numbers: dropped)", loc="left")
+    axes.set_title("Where the weight of Fe I sits (area: leverage; cross: cut)", loc="left")
     axes.tick_params(labelbottom=False)
     return points
 

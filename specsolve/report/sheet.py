@@ -7,6 +7,8 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from specsolve.report.line_fates import cut_counts, fate, worth_a_look
+
 if TYPE_CHECKING:
     from rich.console import Console
 
@@ -208,10 +210,11 @@ def _print_lines(one: Solution, console: Console) -> None:
         f"scatter {_number(one.line_scatter, 3)} dex; Fe II log gf: {one.fe2_scale or 'as given'}",
         markup=False,
     )
-    concerned = np.flatnonzero(lines.reason != "")
+    if cut := cut_counts(one):
+        console.print(f"    left out by the cuts: {cut}", style="dim", markup=False)
+    concerned = worth_a_look(one)
     for i in concerned[:LISTED_LINES]:
-        what = "weight " + f"{lines.robust_weight[i]:.2f}" if lines.used[i] else "dropped"
-        console.print(f"    {_line_name(one, i)}  {what}: {lines.reason[i]}", style="dim", markup=False)
+        console.print(f"    {_line_name(one, i)}  {fate(one, i)}", style="dim", markup=False)
     if concerned.size > LISTED_LINES:
         console.print(f"    and {concerned.size - LISTED_LINES} more, all in the lines table (--output)", style="dim")
     for i in most_influential(one)[:LISTED_INFLUENCES]:

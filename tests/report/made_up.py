@@ -29,8 +29,9 @@ def made_up_solution(rng: np.random.Generator, star: str = "made-up", status: st
     deviation = rng.normal(0, error)
     used = np.ones(n, bool)
     used[[3, 11, 30, N_FE1 + 2]] = False
-    reason = np.where(used, "", "predicted reduced width -4.62 above -4.8")
-    reason[30] = "not in the grid"
+    reason = np.where(used, "", "predicted_strength_cut")
+    reason[30] = "not_in_grid"
+    reason[7] = "down_weighted"
     weight = np.where(used, error**-2, 0.0)
     lines = LineResults(
         key=np.array([f"{i} {w:.3f} {e:.3f}" for i, w, e in zip(ion, wavelength, potential, strict=True)]),
@@ -53,7 +54,7 @@ def made_up_solution(rng: np.random.Generator, star: str = "made-up", status: st
         relative_abundance=-0.16 + deviation,
         deviation=deviation,
         standardized=deviation / error,
-        robust_weight=used.astype(float),
+        robust_weight=np.where(reason == "down_weighted", 0.4, used),
         weight=weight,
         d_abundance=np.column_stack(
             [

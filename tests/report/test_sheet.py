@@ -44,6 +44,9 @@ def test_sheet_holds_every_number_a_reader_needs(one):
         "made-up limits apply.",
         "52 lines in the input, 48 in the grid, 45 used",
         "made-up scale",
+        "left out by the cuts: 3 predicted strength cut",
+        "dropped: not in grid",
+        "weight 0.40",
         "[red]star",
     ):
         assert piece in text, piece
