@@ -43,7 +43,11 @@ def solved(problem: Problem, search: Search, ranking: Ranking, sun: SolarLines |
     lines = line_results(problem, search, item)
     covered = problem.active
     statements = validity_statements(minimum.theta, problem.treatment)
-    flags = [*item.flags, *statements[0], *line_flags(lines, np.sqrt(np.diag(star_cov)), covered)]
+    flags = [
+        *item.flags,
+        *statements[0],
+        *line_flags(lines, np.sqrt(np.diag(star_cov)), covered, problem.zero_points.differential),
+    ]
     if not np.isfinite(star_cov).all():
         flags.append("covariance_undefined")
     status, reason = ranking.status, ""

@@ -57,7 +57,9 @@ def validity_statements(parameters: np.ndarray, treatment: str) -> tuple[tuple[s
     return tuple(flag for flag, _ in table), tuple(text for _, text in table)
 
 
-def line_flags(lines: LineResults, errors_star: np.ndarray, covered: np.ndarray) -> tuple[str, ...]:
+def line_flags(
+    lines: LineResults, errors_star: np.ndarray, covered: np.ndarray, differential: bool = False
+) -> tuple[str, ...]:
     """Informative flags from the lines themselves.
 
     Parameters
@@ -66,6 +68,8 @@ def line_flags(lines: LineResults, errors_star: np.ndarray, covered: np.ndarray)
     errors_star : ndarray, shape (4,)
     covered : ndarray of bool, shape (4,)
         Free parameters.
+    differential : bool
+        log gf cancels, so that its errors do not matter.
     """
     used = lines.used
     flags = []
@@ -75,7 +79,7 @@ def line_flags(lines: LineResults, errors_star: np.ndarray, covered: np.ndarray)
         flags.append("few_fe1_lines")
     if (lines.error_assumed & used).any():
         flags.append("errors_assumed")
-    if np.isnan(lines.log_gf_error[used]).any():
+    if not differential and np.isnan(lines.log_gf_error[used]).any():
         flags.append("log_gf_errors_unknown")
     with np.errstate(invalid="ignore"):
         strong = np.abs(lines.influence[used][:, covered]) > STRONG_INFLUENCE * errors_star[covered]
