@@ -95,6 +95,7 @@ class Interpolator:
         self._numbers: np.ndarray | None = None
         self._cell_flags = 0
         self._cell_low = self._cell_width = np.empty(0)
+        self._latest: tuple[tuple[float, ...], tuple[np.ndarray, np.ndarray]] | None = None
         self._kernels = None
         if compiled:
             from specsolve.grid import kernels
@@ -124,13 +125,8 @@ class Interpolator:
             return LineAbundances(
                 abundance=blank, d_theta=np.full((n_lines, len(self.names)), np.nan), d_width=blank.copy(), flags=flags
             )
-        if self._kernels is not None:
-            dA, d_theta, d_width, flags = self._kernels.abundances(
-                self._numbers, *self._place(theta), self.dA, self.dA_slopes, widths
-            )
-        else:
-            curves, d_curves = self._contract(theta)
-            dA, d_theta, d_width, flags = invert_curves(curves, d_curves, self.dA, self.dA_slopes, widths)
+        invert = invert_curves if self._kernels is None else self._kernels.invert
+        dA, d_theta, d_width, flags = invert(*self._contract(theta), self.dA, self.dA_slopes, widths)
         d_theta[:, self.mh_axis] += 1.0
         for axis in self._flat_axes():
             d_theta[:, axis] = np.nan
@@ -154,7 +150,7 @@ class Interpolator:
         if not self._enter(theta):
             shape = (self.line_indices.size, self.dA.size)
             return np.full(shape, np.nan), np.full((len(self.names), *shape), np.nan)
-        curves, derivatives = self._contract(theta)
+        curves, derivatives = (array.copy() for array in self._contract(theta))
         for axis in self._flat_axes():
             derivatives[axis] = np.nan
         return curves, derivatives
@@ -171,7 +167,9 @@ class Interpolator:
         dA = np.broadcast_to(
             np.asarray(abundance, float) - SOLAR_IRON - float(theta[self.mh_axis]), self.line_indices.shape
         )
-        return values_on_curves(self.curves(theta)[0], self.dA, self.dA_slopes, dA)
+        if not self._enter(theta):
+            return np.full(self.line_indices.size, np.nan)
+        return values_on_curves(self._contract(theta)[0], self.dA, self.dA_slopes, dA)
 
     def flags(self, theta) -> int:
         """Flags of the cell that holds theta (bits 1, 2 and 8)."""
@@ -205,7 +203,7 @@ class Interpolator:
         if cell == self._cell:
             return self._numbers is not None
         node_cell, vmic_cell = cell[:-1], cell[-1]
-        self._cell, self._numbers, self._cell_flags = cell, None, 0
+        self._cell, self._numbers, self._cell_flags, self._latest = cell, None, 0, None
         positions = (*self.node_positions, self.vmic)
         self._cell_low = np.array([x[c] for x, c in zip(positions, cell, strict=True)])
         self._cell_width = np.array([x[min(c + 1, x.size - 1)] - x[c] for x, c in zip(positions, cell, strict=True)])
@@ -262,6 +260,13 @@ class Interpolator:
         ), self._cell_width
 
     def _contract(self, theta) -> tuple[np.ndarray, np.ndarray]:
+        """Curves and derivatives in the current cell; those of the latest theta are kept, for widths after abundances."""
+        here = tuple(map(float, theta))
+        if self._latest is None or self._latest[0] != here:
+            self._latest = here, self._contracted(theta)
+        return self._latest[1]
+
+    def _contracted(self, theta) -> tuple[np.ndarray, np.ndarray]:
         if self._kernels is not None:
             return self._kernels.curves(self._numbers, *self._place(theta))
         value, slopes = self._basis(theta)

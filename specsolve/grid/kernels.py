@@ -182,19 +182,16 @@ def node_slope(matrix, curve, first, end, node):
 
 
 @njit(cache=True, nogil=True)
-def abundances(numbers, t, h, dA, matrices, widths):
-    """Contraction and inversion of all lines; arguments as in `cell_basis` and `inversion.invert_curves`."""
-    value, slopes, vmic_value, vmic_slope = cell_basis(t, h, numbers.shape[1])
-    n_lines, n_dA = numbers.shape[0], numbers.shape[3]
-    n_theta = slopes.shape[0] + 1
+def invert(all_curves, derivatives, dA, matrices, widths):
+    """Twin of `inversion.invert_curves`, on what `curves` returns."""
+    n_lines, n_dA = all_curves.shape
+    n_theta = derivatives.shape[0]
     offset = np.full(n_lines, np.nan)
     d_theta = np.full((n_lines, n_theta), np.nan)
     d_width = np.full(n_lines, np.nan)
     flags = np.zeros(n_lines, dtype=np.uint8)
-    curve = np.empty(n_dA)
-    derivatives = np.empty((n_theta, n_dA))
     for line in range(n_lines):
-        contract_line(numbers[line], value, slopes, vmic_value, vmic_slope, curve, derivatives)
+        curve = all_curves[line]
         first = 0
         end = 0
         start = 0
@@ -240,7 +237,7 @@ def abundances(numbers, t, h, dA, matrices, widths):
         offset[line] = dA[lower] + u * gap
         d_width[line] = gap / rise
         for k in range(n_theta):
-            y = derivatives[k]
+            y = derivatives[k, line]
             s0 = node_slope(matrix, y, first, end, lower)
             s1 = node_slope(matrix, y, first, end, lower + 1)
             change, _ = cubic_value(u, gap, y[lower], y[lower + 1], s0, s1)
