@@ -98,7 +98,7 @@ def test_zero_weight_lines_do_not_count(lines, rng):
     keep = weights > 0
     full = balance_operator(is_fe2, chi, x, weights) @ y
     part = balance_operator(is_fe2[keep], chi[keep], x[keep], weights[keep]) @ y[keep]
-    np.testing.assert_allclose(full, part, rtol=1e-12)
+    np.testing.assert_allclose(full, part, atol=1e-11)  # rounding of sums of abundances near 7.5
 
 
 def test_no_second_ion_leaves_no_ionization_offset(lines):
