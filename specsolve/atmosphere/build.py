@@ -29,6 +29,7 @@ DEFAULT_LOGG = tuple(np.arange(0.0, 5.01, 0.5))
 DEFAULT_MH = tuple(np.arange(-3.0, 0.51, 0.5))
 COLD_START = (5750.0, 4.5)  # where a chain begins, if among its nodes
 TEFF_STEP, LOGG_STEP = 250.0, 0.5  # one unit of distance between nodes
+EASIER_LOGG = 1.0  # dex: where a grey start fails and there is no neighbour, a star of so much higher gravity is one
 FIRST_SHARE, LEAST_SHARE = 0.3, 0.07  # of the way from a neighbour, where the whole way at once fails
 COOLEST_SUPERGIANT = 5000.0  # K: log g below 0.5 is asked for only up to here
 PARTS = "parts"
@@ -77,7 +78,7 @@ def converge_node(
     blanketing: Blanketing,
     power: float,
 ) -> Atmosphere:
-    """Converge one node of a chain: from its nearest neighbours, then by smaller steps, then cold."""
+    """Converge one node of a chain: from its nearest neighbours, then by smaller steps, then cold (by way of a denser star)."""
     composition = composition_for(mh)
     good = sorted((a for a in done.values() if a.status == "converged"),
                   key=lambda a: (_distance(node, (a.teff, a.logg)), a.teff, a.logg))  # fmt: skip
@@ -91,6 +92,10 @@ def converge_node(
         if reached is not None:
             return reached
     cold = solve_structure(*node, composition, blanketing, power=power)
+    if cold.status != "converged" and not good:
+        dense = solve_structure(node[0], node[1] + EASIER_LOGG, composition, blanketing, power=power)
+        reached = _approach(dense, node, composition, blanketing, power) if dense.status == "converged" else None
+        cold = cold if reached is None else reached
     return cold if cold.status == "converged" or result is None else result
 
 
