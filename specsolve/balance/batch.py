@@ -10,6 +10,8 @@ from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
+from specsolve.errors import SpecsolveError
+
 from .assemble import unsolved
 from .options import Options
 from .outside import Outside
@@ -131,6 +133,8 @@ def solve_star(star: Star, grid: Any, setting: Setting, known: tuple[Outside, ..
     )
     try:
         return solve_problem(problem, setting.sun)
+    except SpecsolveError as error:
+        return unsolved(replace(problem, outside=()), str(error), flags=("error",))
     except (ArithmeticError, LookupError, RuntimeError, TypeError, ValueError) as error:
         log.warning("%s: unexpected %s: %s", star.name, type(error).__name__, error)
         bare = replace(problem, outside=())

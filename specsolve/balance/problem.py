@@ -199,7 +199,7 @@ class Problem:
 
         return Interpolator(self.grid, self.treatment, self.line_indices, compiled=self.compiled)
 
-    @property
+    @cached_property
     def active(self) -> np.ndarray:
         """Residuals that a free parameter answers for; bool, shape (4,)."""
         mask = np.zeros(4, dtype=bool)

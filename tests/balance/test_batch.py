@@ -12,7 +12,7 @@ from specsolve.balance.batch import outside_of, solve_many
 from specsolve.balance.outside import Outside
 from specsolve.balance.solve import bare_parameters, solve
 from specsolve.balance.star import Star
-from specsolve.errors import InputError, UsageError
+from specsolve.errors import InputError, OutOfGridError, UsageError
 from tests.balance.conftest import make_star
 
 TRUTHS = [(5772.0, 4.44, 0.0, 1.0), (4710.0, 2.35, -0.4, 1.55), (6000.0, 4.1, -0.2, 1.3)]
@@ -59,6 +59,16 @@ def test_a_failure_inside_one_star_is_told(stars, grid):
     assert "the invented relation broke" in solutions[2].reason
     assert "Traceback" in solutions[2].notes[-1]
     assert solutions[0].status == "solved"
+
+
+def test_an_expected_error_inside_one_star_is_one_sentence(stars, grid):
+    def broken(theta):
+        raise OutOfGridError("teff", 9000.0, 4000.0, 7000.0)
+
+    known = Outside(names=("logg",), mean=(broken,), covariance=np.array([[0.01]]), source="invented")
+    solution = solve_many(stars[:1], grid, outside=known)[0]
+    assert solution.status == "unsolved"
+    assert "teff = 9000 lies outside the grid" in solution.reason
 
 
 def test_outside_by_star_and_by_function(stars):
