@@ -65,10 +65,11 @@ def whitened_system(problem: Problem, state: BalanceState) -> tuple[np.ndarray, 
     rows = np.flatnonzero(active)
     covariance = state.covariance[np.ix_(rows, rows)]
     lower = np.linalg.cholesky(covariance) if rows.size else np.zeros((0, 0))
-    z = np.linalg.solve(lower, state.residuals[rows])
-    jacobian = np.linalg.solve(lower, state.jacobian[rows])
+    both = np.linalg.solve(lower, np.column_stack([state.residuals[rows], state.jacobian[rows]]))
+    if not problem.outside:
+        return both[:, 0], both[:, 1:]
     outside, outside_jacobian = problem.outside_terms(state.theta)
-    return np.concatenate([z, outside]), np.vstack([jacobian, outside_jacobian])
+    return np.concatenate([both[:, 0], outside]), np.vstack([both[:, 1:], outside_jacobian])
 
 
 def refine(
@@ -171,12 +172,12 @@ def _not_worse(problem: Problem, old: BalanceState, new: BalanceState) -> bool:
     rows = np.flatnonzero(problem.active & np.isfinite(old.residuals))
     if not np.isfinite(new.residuals[rows]).all():
         return False
-    metric = np.linalg.inv(old.covariance[np.ix_(rows, rows)])
-    before, after = old.residuals[rows], new.residuals[rows]
-    outside_before, _ = problem.outside_terms(old.theta)
-    outside_after, _ = problem.outside_terms(new.theta)
-    value_before = float(before @ metric @ before + outside_before @ outside_before)
-    value_after = float(after @ metric @ after + outside_after @ outside_after)
+    both = np.column_stack([old.residuals[rows], new.residuals[rows]])
+    values = np.einsum("ij,ij->j", both, np.linalg.solve(old.covariance[np.ix_(rows, rows)], both))
+    if problem.outside:
+        terms = [problem.outside_terms(state.theta)[0] for state in (old, new)]
+        values = values + [t @ t for t in terms]
+    value_before, value_after = (float(v) for v in values)
     # Lines may leave the table on the way; the small allowance keeps rounding from stopping a converged point.
     return value_after <= value_before * (1.0 + 1e-6) + 1e-9
 

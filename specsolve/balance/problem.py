@@ -214,7 +214,7 @@ class Problem:
     def predicted_widths(self, theta: np.ndarray, common: np.ndarray) -> np.ndarray:
         """Predicted log10(W/lambda) when each ion has a common relative abundance; `common` has shape (2,)."""
         inputs = self.inputs
-        abundance = common[inputs.is_fe2.astype(int)] + inputs.zero_point + self.log_gf_shift
+        abundance = common[inputs.place] + inputs.zero_point + self.log_gf_shift
         if self.compiled:
             from .kernel import widths_on_curves
 
@@ -256,7 +256,7 @@ class Problem:
         weight = usable.astype(float) if previous is None else np.where(usable, previous.weighting.weights, 0.0)
         common = common_abundances(inputs.is_fe2, abundance - inputs.zero_point, weight)
         if rough:
-            deviation = abundance - inputs.zero_point - common[inputs.is_fe2.astype(int)]
+            deviation = abundance - inputs.zero_point - common[inputs.place]
             predicted = inputs.log_reduced_width - deviation / d_width
         else:
             predicted = self.predicted_widths(theta, common)

@@ -8,6 +8,7 @@ fixed point here, which needs no further look at the grid. NumPy reference; `ker
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -49,7 +50,22 @@ class LineInputs:
     zero_point_covariance: np.ndarray | None
     differential: bool
 
-    @property
+    @cached_property
+    def place(self) -> np.ndarray:
+        """0 for a line of the first ion, 1 for one of the second."""
+        return self.is_fe2.astype(np.int64)
+
+    @cached_property
+    def known_sigma_gf(self) -> np.ndarray:
+        """`sigma_gf` with zero where it is unknown."""
+        return np.where(np.isnan(self.sigma_gf), 0.0, self.sigma_gf)
+
+    @cached_property
+    def gf_unknown(self) -> np.ndarray:
+        """Lines whose line-to-line term stands for their log gf error; none in differential work."""
+        return np.isnan(self.sigma_gf) & (not self.differential)
+
+    @cached_property
     def zero_point_variance(self) -> np.ndarray:
         """Diagonal of the zero points' covariance."""
         if self.zero_point_covariance is None:
@@ -173,14 +189,14 @@ def settle(
     weights, scatter = start_values(used, start)
     settled = False
     for _ in range(MAX_PASSES):
-        variances = line_variances(slope, inputs.sigma_logw, sigma_gf, scatter[inputs.is_fe2.astype(int)])
+        variances = line_variances(slope, inputs.sigma_logw, sigma_gf, scatter[inputs.place])
         if extra.any():
             variances = LineVariances(width=variances.width, gf=variances.gf + extra, scatter=variances.scatter)
         strength = strength_axis(inputs.log_reduced_width, x_predicted, variances, sigma_gf, inputs.differential)
         total = variances.total
         deviation = deviations(inputs.is_fe2, inputs.excitation_potential, strength, weights / total, y)
         new_scatter = line_to_line_terms(inputs.is_fe2, deviation, variances.width + variances.gf, used, scatter)
-        total = variances.width + variances.gf + new_scatter[inputs.is_fe2.astype(int)] ** 2
+        total = variances.width + variances.gf + new_scatter[inputs.place] ** 2
         new_weights = np.where(used, robust_weights(deviation / np.sqrt(total), loss), 0.0)
         change = float(np.max(np.abs(new_weights - weights), initial=0.0))
         change_scatter = float(np.max(np.abs(new_scatter - scatter)))
@@ -188,7 +204,7 @@ def settle(
         if change < WEIGHT_TOLERANCE and change_scatter < SCATTER_TOLERANCE:
             settled = True
             break
-    variances = LineVariances(width=variances.width, gf=variances.gf, scatter=scatter[inputs.is_fe2.astype(int)] ** 2)
+    variances = LineVariances(width=variances.width, gf=variances.gf, scatter=scatter[inputs.place] ** 2)
     return Weighting(
         robust=weights,
         scatter=scatter,
@@ -292,8 +308,8 @@ def _compiled_parts(inputs, y, d_width, d_theta, predicted, used, loss, metallic
         inputs.excitation_potential,
         inputs.log_reduced_width,
         inputs.sigma_logw,
-        np.where(np.isnan(inputs.sigma_gf), 0.0, inputs.sigma_gf),
-        np.isnan(inputs.sigma_gf) & (not inputs.differential),
+        inputs.known_sigma_gf,
+        inputs.gf_unknown,
         extra,
         known,
         np.where(used, d_width, 1.0),
@@ -304,7 +320,7 @@ def _compiled_parts(inputs, y, d_width, d_theta, predicted, used, loss, metallic
         LOSS_CODES[loss],
         metallicity_from_fe1,
     )
-    variances = LineVariances(width=width, gf=gf, scatter=scatter[inputs.is_fe2.astype(np.int64)] ** 2)
+    variances = LineVariances(width=width, gf=gf, scatter=scatter[inputs.place] ** 2)
     weighting = Weighting(
         robust=robust,
         scatter=scatter,
