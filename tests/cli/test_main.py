@@ -142,6 +142,11 @@ def test_names_of_the_package_load_when_used():
         specsolve.nonsense  # noqa: B018 - the access is the test
 
 
+def listen_to_ctrl_c():
+    """In a child: SIGINT as a shell in the foreground leaves it; jobs in the background start with it ignored."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
+
+
 @pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
 def test_signals_end_with_130(number):
     script = (
@@ -154,16 +159,20 @@ def test_signals_end_with_130(number):
         "cli.LazyGroup.get_command = lambda self, context, name: waiting\n"
         "cli.main()\n"
     )
-    process = subprocess.Popen(
+    with subprocess.Popen(
         [sys.executable, "-c", script, "columns"],
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,
         env={**os.environ, "PYTHONUNBUFFERED": "1"},
-    )
-    assert process.stdout.readline() == "ready\n"
-    time.sleep(0.1)
-    process.send_signal(number)
-    _, words = process.communicate(timeout=30)
+        preexec_fn=listen_to_ctrl_c,
+    ) as process:
+        try:
+            assert process.stdout.readline() == "ready\n"
+            time.sleep(0.1)
+            process.send_signal(number)
+            _, words = process.communicate(timeout=30)
+        finally:
+            process.kill()
     assert process.returncode == 130
     assert words.strip() == "specsolve: interrupted"

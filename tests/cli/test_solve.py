@@ -16,6 +16,7 @@ from specsolve.cli import main as cli
 from specsolve.cli.settings import wants_colour
 from specsolve.report.tables import read_table
 from tests.cli.made_up_stars import TRUTHS
+from tests.cli.test_main import listen_to_ctrl_c
 
 # Two per cent noise on 40 to 60 lines: about 10 K, 0.02, 0.01, 0.08 (printed errors); the limits are four times that.
 LIMITS = {"teff": 40.0, "logg": 0.08, "feh": 0.04, "vmic": 0.32}
@@ -227,6 +228,7 @@ def test_ctrl_c_keeps_the_finished_stars(stars_file, grid_option, tmp_path):
         capture_output=True,
         text=True,
         timeout=120,
+        preexec_fn=listen_to_ctrl_c,
     )
     assert done.returncode == 130, done.stderr
     assert "interrupted; 2 stars are finished and kept, 1 are not" in done.stderr
