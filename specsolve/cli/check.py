@@ -126,6 +126,11 @@ def print_star(report: dict[str, Any]) -> None:
         more = len(report["unmatched"]) - LISTED
         click.echo(f"    not in the grid: {shown}" + (f" and {more} more" if more > 0 else ""))
     if report["n_errors_assumed"]:
-        click.echo(f"    {report['n_errors_assumed']} widths without an error: one is assumed")
+        from specsolve.balance.star import ASSUMED_ERROR_FLOOR_MA, ASSUMED_ERROR_FRACTION
+
+        click.echo(
+            f"    {report['n_errors_assumed']} widths without an error: {ASSUMED_ERROR_FLOOR_MA:g} mA and "
+            f"{100 * ASSUMED_ERROR_FRACTION:g} % of the width are assumed"
+        )
     for text in (*report["notes"], *report["trouble"]):
         click.echo(f"    {text}")

@@ -198,7 +198,8 @@ def test_assumed_errors_are_said(run, dwarf, tmp_path, grid_option, capsys):
     dwarf.remove_column("equivalent_width_error")
     code, out, _ = run(dwarf)
     assert code == 0
-    assert "assumed" in out
+    assert "width errors assumed" in out
+    assert "mA and" in run(dwarf, command="check")[1]
 
 
 # Too little to go on
