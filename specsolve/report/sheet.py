@@ -131,9 +131,13 @@ def print_sheet(one: Solution, console: Console) -> None:
     if one.alternative_parameters:
         _print_alternatives(one, console)
     for entry in one.outside:
+        if entry.get("name") in one.fixed:
+            continue  # its row says "fixed"
         words = ", ".join(f"{key} {_short(value)}" for key, value in entry.items())
         console.print(f"  from elsewhere: {words}", markup=False)
     for name, shift in one.systematics.items():
+        if not np.any(shift):
+            continue  # everything is fixed
         words = ", ".join(
             f"{NAMES[key]} {signed(value, DECIMALS[key])}" for key, value in zip(NAMES, shift, strict=True)
         )
