@@ -33,6 +33,7 @@ from .uncertainty import parameter_covariances, sensitivities
 from .validity import line_flags, validity_statements
 
 MAX_UNMATCHED = 1000
+FACE_SHARE = 0.015  # of an axis: how near to its end a stopped parameter lies (0.05 km/s in vmic)
 
 
 def solved(problem: Problem, search: Search, ranking: Ranking, sun: SolarLines | None) -> Solution:
@@ -101,9 +102,9 @@ def unsolved(problem: Problem, reason: str, status: str = UNSOLVED, flags: tuple
 def _where_outside(problem: Problem, theta: np.ndarray) -> str:
     low, high = problem.bounds
     faces = [
-        f"{name} = {value:g}"
+        f"{name} = {value:.4g}"
         for name, value, a, b, place in zip(PARAMETER_NAMES, theta, low, high, range(4), strict=True)
-        if place in problem.free and (value <= a + 1e-4 * (b - a) or value >= b - 1e-4 * (b - a))
+        if place in problem.free and (value <= a + FACE_SHARE * (b - a) or value >= b - FACE_SHARE * (b - a))
     ]
     if len(faces) == 1 and faces[0].startswith("vmic"):
         return f"these lines do not fix the microturbulence inside the grid ({faces[0]} km/s at its edge): fix vmic"

@@ -21,6 +21,8 @@ STALLED_STEP = 1e-4  # where no damping gives a better point, the full step must
 MAX_HALVINGS = 12
 LEVENBERG_START = 1e-3
 RANK_TOLERANCE = 1e-10
+VMIC = 3  # place of the microturbulence in theta
+NEAR_ZERO_VMIC = 0.05  # km/s; below it widths hardly feel vmic any more, and steps towards zero never end
 ON_FACE = 1e-6  # in STEP_UNIT
 ROOT_OBJECTIVE = 1e-6  # chi2 below which residuals and Outside terms are met
 
@@ -154,6 +156,8 @@ def refine(
     # A root that happens to lie on a face is not stopped by it. At vmic = 0 the widths are even in vmic: every
     # slope vanishes.
     stopped[free] = on_face[free] & (objective > ROOT_OBJECTIVE)
+    if VMIC in free and low[VMIC] == 0.0 and theta[VMIC] < NEAR_ZERO_VMIC and not converged:
+        stopped[VMIC] = True
     return Minimum(theta, state, objective, converged, stopped, iteration, blocked=blocked)
 
 
