@@ -26,10 +26,15 @@ def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item
     fraction = config.getoption("--slow-sample")
     if fraction >= 1.0:
         return
-    dropped = [item for item in items if item.get_closest_marker("slow") and _hash_fraction(item.nodeid) >= fraction]
+    dropped = [item for item in items if item.get_closest_marker("slow") and not _kept(item, fraction)]
     if dropped:
         config.hook.pytest_deselected(items=dropped)
         items[:] = [item for item in items if item not in dropped]
+
+
+def _kept(item: pytest.Item, fraction: float) -> bool:
+    """A long check that takes `slow_fraction` samples its own cases; of the others the hash of the name chooses."""
+    return "slow_fraction" in getattr(item, "fixturenames", ()) or _hash_fraction(item.nodeid) < fraction
 
 
 def _hash_fraction(name: str) -> float:
