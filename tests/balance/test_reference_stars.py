@@ -2,8 +2,9 @@
 
 The whole sets are read from the folder named by SPECSOLVE_REFERENCE; each file names its source. Nothing is tuned
 to a star.
-The limits are those that the package must hold; where a limit was wider than first hoped for, the hoped-for value
-stands beside it.
+Every recorded figure names what is asked of it. Where that is not met yet (log g of the blind Sun; scatter of the
+differential dwarfs, second solar spectrum and one clump giant in temperature), the assertion only guards against
+getting worse, and a comment says so.
 """
 
 from __future__ import annotations
@@ -76,7 +77,7 @@ def test_the_sun_blind(packaged, figure):
         figure("Sun, blind: logg with the other Fe II scale", other[1], "dex", source=f"widths: {DWARFS}")
     assert solution.teff == pytest.approx(SUN_TEFF_K, abs=100.0)
     assert 0.8 <= solution.vmic <= 1.2
-    # Hoped for: 0.10. Gravity follows the temperature: laboratory log gf leave a slope of -0.015 dex/eV in the Sun.
+    # Asked: 0.10, NOT MET; this guards against worse. Gravity follows the temperature: laboratory log gf leave a slope of -0.015 dex/eV in the Sun.
     assert solution.logg == pytest.approx(SUN_LOGG, abs=0.25)
 
 
@@ -93,10 +94,11 @@ def dwarfs(packaged, reference):
 def test_near_solar_dwarfs(dwarfs, figure):
     difference = np.array([d for name, d in dwarfs.items() if name != "Sun2"])
     mean, rms = difference.mean(axis=0), difference.std(axis=0)
-    hoped_mean, hoped_rms = (8.0, 0.015, 0.006, 0.03), (12.0, 0.025, 0.010, 0.05)
+    asked_mean, asked_rms = (8.0, 0.015, 0.006, 0.03), (12.0, 0.025, 0.010, 0.05)
     for k, name in enumerate(NAMES):
-        figure(f"dwarfs, mean of {name}", mean[k], UNITS[k], limit=f"hoped for {hoped_mean[k]:g}", source=DWARFS)
-        figure(f"dwarfs, rms of {name}", rms[k], UNITS[k], limit=f"hoped for {hoped_rms[k]:g}", source=DWARFS)
+        figure(f"dwarfs, mean of {name}", mean[k], UNITS[k], limit=f"{asked_mean[k]:g}", source=DWARFS)
+        figure(f"dwarfs, rms of {name}", rms[k], UNITS[k], limit=f"{asked_rms[k]:g}", source=DWARFS)
+    # Asked: 12 K and 0.025 in rms, NOT MET; these guard against worse.
     assert (np.abs(mean) <= [10.0, 0.025, 0.008, 0.03]).all()
     assert (rms <= [18.0, 0.030, 0.012, 0.05]).all()
 
@@ -106,7 +108,7 @@ def test_second_solar_spectrum(dwarfs, figure):
     themselves.
     """
     for k, name in enumerate(NAMES):
-        figure(f"Sun2 - Sun, {name}", dwarfs["Sun2"][k], UNITS[k], limit="hoped for 10 K, 0.02, 0.008", source=DWARFS)
+        figure(f"Sun2 - Sun, {name}", dwarfs["Sun2"][k], UNITS[k], limit="10 K, 0.02, 0.008: not met", source=DWARFS)
     assert (np.abs(dwarfs["Sun2"]) <= [30.0, 0.04, 0.015, 0.06]).all()
 
 
@@ -164,7 +166,7 @@ def test_cluster_giants(cluster_grid, reference, figure):
             limit=f"{limit:g}",
             source=CLUSTERS,
         )
-    # Hoped for in temperature: 100 K. One member of Cr 110 stands 200 K off; the widths' own errors allow 60 K.
+    # Asked in temperature: 100 K, NOT MET. One member of Cr 110 stands 200 K off; the widths' own errors allow 60 K.
     assert (pooled <= [130.0, 0.25, 0.08]).all()
     # Nine stars, three means: chi2 of the scatter in the stars' own errors, with 6 degrees of freedom.
     assert np.sum(scatters, axis=0).max() < 30.0
