@@ -77,7 +77,8 @@ def test_the_sun_blind(packaged, figure):
         figure("Sun, blind: logg with the other Fe II scale", other[1], "dex", source=f"widths: {DWARFS}")
     assert solution.teff == pytest.approx(SUN_TEFF_K, abs=100.0)
     assert 0.8 <= solution.vmic <= 1.2
-    # Asked: 0.10, NOT MET; this guards against worse. Gravity follows the temperature: laboratory log gf leave a slope of -0.015 dex/eV in the Sun.
+    # Asked: 0.10, NOT MET; this guards against worse.
+    # Gravity follows the temperature: laboratory log gf leave a slope of -0.015 dex/eV in the Sun.
     assert solution.logg == pytest.approx(SUN_LOGG, abs=0.25)
 
 
