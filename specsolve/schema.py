@@ -87,9 +87,7 @@ def _ion_columns() -> tuple[Column, ...]:
             Column(f"{prefix}_n_lines", COUNT, "", f"lines of {ion} that carry weight"),
             Column(f"{prefix}_feh", REAL, "dex", f"[Fe/H] of {ion} on the zero points of this solve"),
             Column(f"{prefix}_feh_solar_iron", REAL, "dex", f"A({ion}) minus solar iron"),
-            Column(
-                f"{prefix}_own_sun", REAL, "dex", f"A({ion}) of the Sun from the same lines and treatment"
-            ),
+            Column(f"{prefix}_own_sun", REAL, "dex", f"A({ion}) of the Sun from the same lines and treatment"),
             Column(f"{prefix}_own_sun_n_lines", COUNT, "", f"lines of {ion} in that solar value"),
             Column(f"{prefix}_feh_own_sun", REAL, "dex", f"A({ion}) minus that solar value"),
         ]
@@ -190,9 +188,7 @@ LINES = (
     ),
     Column("used", FLAG, "", "the line carries weight"),
     Column("reason", TEXT, "", "why it was dropped or down-weighted"),
-    Column(
-        "interpolation_flags", COUNT, "", "bits: 1 edge, 2 beside a missing node, 4 outside the table, 8 missing"
-    ),
+    Column("interpolation_flags", COUNT, "", "bits: 1 edge, 2 beside a missing node, 4 outside the table, 8 missing"),
 )
 
 CANDIDATES = (
