@@ -24,14 +24,18 @@ def errors(slow_fraction) -> dict[str, list[np.ndarray]]:
     grid = ResponseGrid.packaged()
     interpolator = Interpolator(grid, "lte")
     items = [item for item in load() if item.kind == CENTRE and item.model.status == "converged"]
-    step = max(1, round(1.0 / max(slow_fraction, 0.1)))
-    found: dict[str, list[np.ndarray]] = {kind: [] for kind in KINDS}
-    for item in items[::step]:
-        model = item.model
-        theta = np.array([model.teff, model.logg, model.mh, 1.25])
+    by_kind: dict[str, list] = {kind: [] for kind in KINDS}
+    for item in items:
+        theta = np.array([item.model.teff, item.model.logg, item.model.mh, 1.25])
         flags = interpolator.flags(theta)
         if flags & MISSING_WIDTHS:  # a corner of the cell has no atmosphere: the grid gives no answer there
             continue
+        by_kind[KINDS[2] if flags & BESIDE_MISSING else KINDS[1] if flags & AT_EDGE else KINDS[0]].append(
+            (item.model, theta)
+        )
+    found: dict[str, list[np.ndarray]] = {kind: [] for kind in KINDS}
+    sample = ((kind, *cell) for kind, cells in by_kind.items() for cell in spread(cells, slow_fraction))
+    for kind, model, theta in sample:
         truth = lte_widths(model, grid.lines, VMIC_CENTRES, DA_CENTRES)
         ours = np.empty_like(truth)
         for v, vmic in enumerate(VMIC_CENTRES):
@@ -40,9 +44,14 @@ def errors(slow_fraction) -> dict[str, list[np.ndarray]]:
                 ours[:, v, a] = interpolator.widths(theta, SOLAR_IRON + model.mh + dA)
         error = np.abs(ours - truth)
         error[~((truth > USABLE[0]) & (truth < USABLE[1]))] = np.nan
-        kind = KINDS[2] if flags & BESIDE_MISSING else KINDS[1] if flags & AT_EDGE else KINDS[0]
         found[kind].append(error)
     return found
+
+
+def spread(cells: list, fraction: float) -> list:
+    """A fraction of some cells, at least four, evenly spread over the list."""
+    count = min(len(cells), max(4, round(fraction * len(cells))))
+    return [cells[i] for i in np.unique(np.linspace(0, len(cells) - 1, count).astype(int))] if cells else []
 
 
 def shares(figure, cells: list[np.ndarray], kind: str, limit: str = "") -> float:
