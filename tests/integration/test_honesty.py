@@ -6,6 +6,7 @@ import hashlib
 
 import numpy as np
 import pytest
+from scipy.interpolate import CubicSpline
 
 from specsolve.atmosphere.build import build_store
 from specsolve.atmosphere.store import AtmosphereStore
@@ -33,7 +34,7 @@ def test_a_node_remade_from_nothing_is_the_packaged_one(which, tmp_path, figure)
     own = build_store(tmp_path / "atmospheres", teff=[teff], logg=[logg], mh=[mh])
     ours, theirs = own.get(teff, logg, mh), atmospheres.get(teff, logg, mh)
     upper = theirs.log_tau < DEEPEST_LOG_TAU
-    temperature = np.interp(theirs.log_tau[upper], ours.log_tau, ours.temperature)
+    temperature = CubicSpline(ours.log_tau, ours.temperature)(theirs.log_tau[upper])
     difference = float(np.max(np.abs(temperature - theirs.temperature[upper])))
     name = f"teff {teff:g} logg {logg:g} mh {mh:g}"
     figure(f"{name}: worst temperature", difference, "K", limit=f"<= {TEMPERATURE_K:g}")
