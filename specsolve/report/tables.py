@@ -233,7 +233,7 @@ def output_paths(output: str | Path) -> dict[str, Path]:
     'run/cluster_lines.ecsv'
     """
     path = Path(output)
-    stem = path.name[: -len(".ecsv")] if path.name.endswith(".ecsv") else path.name
+    stem = path.name.removesuffix(".ecsv")
     return {kind: path.parent / f"{stem}{ending}.ecsv" for kind, ending in FILE_ENDINGS.items()}
 
 
@@ -241,8 +241,7 @@ def write_solutions(
     solutions: Sequence[Solution], output: str | Path, provenance: Mapping[str, Any] | None = None
 ) -> dict[str, Path]:
     """Write the four tables of a solve; returns their paths by kind."""
-    paths = output_paths(output)
-    tables = tables_of(solutions, provenance)
+    paths, tables = output_paths(output), tables_of(solutions, provenance)
     for kind in ("lines", "candidates", "decisions", "stars"):
         write_table(tables[kind], paths[kind])
     return paths
