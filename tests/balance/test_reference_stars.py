@@ -70,8 +70,9 @@ def test_the_sun_blind(packaged, figure):
     star = dataclasses.replace(star, use=(grade >= 1) & (grade <= 2))
     solution = solve(star, packaged)
     assert solution.status == "solved"
-    for name, value, error, unit in zip(NAMES, solution.parameters, solution.errors, UNITS, strict=True):
-        figure(f"Sun, blind: {name}", value, unit, limit=f"own error {error:.3g}", source=f"widths: {DWARFS}")
+    asked = ("5772 +- 100", "4.44 +- 0.10: not met", "", "0.8 to 1.2")
+    for name, value, error, unit, limit in zip(NAMES, solution.parameters, solution.errors, UNITS, asked, strict=True):
+        figure(f"Sun, blind: {name} (own error {error:.3g})", value, unit, limit=limit, source=f"widths: {DWARFS}")
     other = solution.alternative_parameters.get("fe2_alternative")
     if other is not None:
         figure("Sun, blind: logg with the other Fe II scale", other[1], "dex", source=f"widths: {DWARFS}")
