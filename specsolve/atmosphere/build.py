@@ -19,8 +19,9 @@ import numpy as np
 
 from specsolve.atmosphere.blanketing import Blanketing
 from specsolve.atmosphere.model import Atmosphere
-from specsolve.atmosphere.store import QUANTITIES, AtmosphereStore, write_durably, write_store
+from specsolve.atmosphere.store import QUANTITIES, AtmosphereStore, write_store
 from specsolve.atmosphere.structure import solve_structure
+from specsolve.durable import output_errors, write_atomically
 from specsolve.errors import StoreError
 from specsolve.matter.composition import Composition, composition_for
 
@@ -133,7 +134,7 @@ def build_chain(mh: float, nodes: Sequence[tuple[float, float]], parts: str, pow
         if model is None:
             blanketing = blanketing_for(mh) if blanketing is None else blanketing
             model = converge_node(node, done, mh, blanketing, power)
-            write_durably(path, part_bytes(model))
+            write_atomically(path, part_bytes(model))
         done[node] = model
 
 
@@ -232,7 +233,8 @@ def build_store(
 
 
 def _claim(parts: Path, key: str) -> None:
-    parts.mkdir(parents=True, exist_ok=True)
+    with output_errors(parts.parent):
+        parts.mkdir(parents=True, exist_ok=True)
     stamp = parts / "key"
     if stamp.exists():
         if stamp.read_text() != key:
@@ -241,4 +243,4 @@ def _claim(parts: Path, key: str) -> None:
                 "another --output.", path=str(parts),
             )  # fmt: skip
     else:
-        write_durably(stamp, key.encode())
+        write_atomically(stamp, key.encode())

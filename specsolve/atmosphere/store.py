@@ -9,7 +9,6 @@ from __future__ import annotations
 import hashlib
 import io
 import json
-import os
 from collections.abc import Mapping
 from functools import cached_property
 from importlib import resources
@@ -18,6 +17,7 @@ from pathlib import Path
 import numpy as np
 
 from specsolve.atmosphere.model import Atmosphere
+from specsolve.durable import output_errors, write_atomically
 from specsolve.errors import InputError, MissingNodeError, StoreError
 
 SCHEMA = 1
@@ -184,7 +184,8 @@ def write_store(
     AtmosphereStore
     """
     directory = Path(directory)
-    directory.mkdir(parents=True, exist_ok=True)
+    with output_errors(directory):
+        directory.mkdir(parents=True, exist_ok=True)
     n_depths = max(len(a.column_mass) for a in atmospheres.values())
     shape = tuple(len(axes[name]) for name in AXES)
     structures = np.full((*shape, len(QUANTITIES), n_depths), np.nan, dtype="<f8")
@@ -213,16 +214,6 @@ def write_store(
         **provenance,
         "nodes": records,
     }  # fmt: skip
-    write_durably(directory / ARRAY_NAME, buffer.getvalue())
-    write_durably(directory / HEADER_NAME, json.dumps(header, indent=1).encode())
+    write_atomically(directory / ARRAY_NAME, buffer.getvalue())
+    write_atomically(directory / HEADER_NAME, json.dumps(header, indent=1).encode())
     return AtmosphereStore.open(directory)
-
-
-def write_durably(path: Path, data: bytes) -> None:
-    """Write a file so that a crash leaves either the old one or the new one, complete."""
-    aside = path.with_name(f".{path.name}.{os.getpid()}.part")
-    with open(aside, "wb") as stream:
-        stream.write(data)
-        stream.flush()
-        os.fsync(stream.fileno())
-    os.replace(aside, path)

@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from specsolve.durable import output_errors
 from specsolve.errors import OutputError
 from specsolve.grid import reuse
 from specsolve.grid.codes import CODE_TYPE, MISSING
@@ -26,7 +27,7 @@ from specsolve.grid.lock import exclusive
 from specsolve.grid.parts import Parts, remove_finished
 from specsolve.grid.plan import Plan, plan_build
 from specsolve.grid.store import LINES_PER_BLOCK, ResponseGrid
-from specsolve.grid.write import make_header, output_errors, write_block, write_header
+from specsolve.grid.write import make_header, write_block, write_header
 from specsolve.lines import LineList
 
 if TYPE_CHECKING:

@@ -8,8 +8,8 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
+from specsolve.durable import output_errors
 from specsolve.errors import LockError
-from specsolve.grid.write import output_errors
 
 LOCK_NAME = "build.lock"
 

@@ -13,9 +13,10 @@ from pathlib import Path
 
 import numpy as np
 
+from specsolve.durable import output_errors, write_atomically
 from specsolve.errors import StoreError
 from specsolve.grid.codes import CODE_TYPE
-from specsolve.grid.write import npy_bytes, output_errors, write_atomically
+from specsolve.grid.write import npy_bytes
 
 FOLDER = re.compile(r"parts-([0-9a-f]{64})")
 NAME = re.compile(r"(\d{5,})-([0-9a-f]{32})\.npy")

@@ -2,72 +2,21 @@
 
 from __future__ import annotations
 
-import errno
 import hashlib
 import io
 import json
-import os
 from collections.abc import Mapping, Sequence
-from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
 from specsolve.constants import SOLAR_IRON
-from specsolve.errors import OutputError
+from specsolve.durable import output_errors, write_atomically
 from specsolve.grid.axes import Axis
 from specsolve.grid.codes import CODE_TYPE, FIRST_LOG_WIDTH, MISSING, STEP
 from specsolve.grid.store import FORMAT_NAME, HEADER_NAME, LINES_PER_BLOCK, SCHEMA, Block
 from specsolve.lines import LineList
-
-
-@contextmanager
-def output_errors(path: Path):
-    """Turn the operating system's refusals to write into one clear `OutputError`."""
-    try:
-        yield
-    except OSError as error:
-        if error.errno in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG):
-            why = "the disk is full. What is finished is kept: free some space and run the same command again"
-        elif error.errno in (errno.EACCES, errno.EPERM, errno.EROFS):
-            why = "no permission to write there. Choose another --output"
-        elif isinstance(error, FileExistsError | NotADirectoryError):
-            why = "it is a file, not a folder. Choose another --output"
-        else:
-            why = error.strerror or str(error)
-        raise OutputError(f"cannot write {path}: {why}", path=path) from error
-
-
-def write_atomically(path: Path, content: bytes) -> None:
-    """Write aside, flush to the disk, rename over `path`, flush the folder.
-
-    Raises
-    ------
-    OutputError
-        Disk full, no permission; nothing is left aside.
-    """
-    aside = path.with_name(f"{path.name}.{os.getpid()}.aside")
-    with output_errors(path):
-        try:
-            with open(aside, "wb") as stream:
-                stream.write(content)
-                stream.flush()
-                os.fsync(stream.fileno())
-            os.replace(aside, path)
-        except OSError:
-            aside.unlink(missing_ok=True)
-            raise
-        sync_folder(path.parent)
-
-
-def sync_folder(folder: Path) -> None:
-    """Flush the entries of a folder to the disk."""
-    descriptor = os.open(folder, os.O_RDONLY)
-    try:
-        os.fsync(descriptor)
-    finally:
-        os.close(descriptor)
 
 
 def npy_bytes(array: np.ndarray) -> bytes:

@@ -9,6 +9,7 @@ import pytest
 from astropy.table import QTable
 
 from specsolve.atmosphere.store import AtmosphereStore
+from specsolve.errors import OutputError
 
 
 def run(*arguments: str):
@@ -68,6 +69,16 @@ def test_shown_tables_are_imported_back(tmp_path):
         AtmosphereStore.packaged().get(5750.0, 4.5, 0.0).temperature,
         rtol=1e-12,
     )
+
+
+def test_unwritable_output_is_one_line(tmp_path):
+    (tmp_path / "file").write_text("")
+    code, _, err = run(
+        "atmosphere", "build", "--output", str(tmp_path / "file" / "x"), "--teff", "5750", "--logg", "4.5", "--mh", "0"
+    )
+    assert code == OutputError.exit_code
+    assert "cannot write" in err
+    assert err.count("\n") == 1
 
 
 @pytest.mark.slow

@@ -13,10 +13,10 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from specsolve import durable
 from specsolve.errors import InputError, LockError, MissingNodeError, OutputError, SpecsolveError, StoreError
 from specsolve.grid import Interpolator
 from specsolve.grid import build as build_module
-from specsolve.grid import write as write_module
 from specsolve.grid.build import build_grid
 from specsolve.grid.codes import MISSING, encode
 from specsolve.grid.lock import LOCK_NAME, exclusive
@@ -264,7 +264,7 @@ def test_a_full_disk_is_told_keeps_what_is_finished_and_the_build_goes_on(whole,
         real(source, target)
 
     with monkeypatch.context() as patch:
-        patch.setattr(write_module.os, "replace", full)
+        patch.setattr(durable.os, "replace", full)
         with pytest.raises(OutputError, match="disk is full"):
             build(LINES, tmp_path / "grid")
     assert not list((tmp_path / "grid").rglob("*.aside"))
