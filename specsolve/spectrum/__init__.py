@@ -1,0 +1,1 @@
+"""From a spectrum to equivalent widths: reading, velocity, continuum, fits of lines."""
