@@ -73,10 +73,10 @@ def sample_wavelengths(band_edges_cm: np.ndarray, n_samples: int) -> np.ndarray:
     return band_edges_cm[:-1, None] + np.diff(band_edges_cm)[:, None] * fraction
 
 
-def gas_states(lines: BlanketingLines, gas: Gas, mh: float) -> list[dict]:
+def gas_states(lines: BlanketingLines, gas: Gas, mh: float, alpha: float | None = None) -> list[dict]:
     """What `blanketing_sampling.sample` needs of each point of the gas."""
     per_ion = np.array([
-        ion_density(gas, ion, number_abundance(ion.split()[0], mh)) / partition_function(ion, gas.temperature)
+        ion_density(gas, ion, number_abundance(ion.split()[0], mh, alpha)) / partition_function(ion, gas.temperature)
         for ion in lines.ions
     ])  # fmt: skip
     per_ion /= gas.density
@@ -100,6 +100,7 @@ def distribution(
     vmic_kms: float,
     band_edges_cm: np.ndarray,
     n_samples: int = SAMPLES,
+    alpha: float | None = None,
 ) -> np.ndarray:
     """Sub-bin opacities of each point of a gas, with the floor of `FLOOR_FRACTION`.
 
@@ -117,7 +118,7 @@ def distribution(
     continuum = absorption + scattering
     least = LEAST_FRACTION * continuum
     result = np.empty((n_bands, len(SUB_EDGES) - 1, len(gas.temperature)))
-    for i, state in enumerate(gas_states(lines, gas, mh)):
+    for i, state in enumerate(gas_states(lines, gas, mh, alpha)):
         opacity = sample(constants, flat, sample_band, nearest, state, vmic_kms, np.ascontiguousarray(least[:, i]))
         result[:, :, i] = order_statistics(opacity.reshape(n_bands, n_samples), SUB_EDGES)
     return result + FLOOR_FRACTION * continuum[:, None, :]
@@ -130,13 +131,14 @@ def build(
     n_samples: int = SAMPLES,
     log_temperature: np.ndarray = LOG_TEMPERATURE,
     log_pressure: np.ndarray = LOG_PRESSURE,
+    alpha: float | None = None,
 ) -> Blanketing:
     """Tables of one metallicity, any value.
 
     Parameters
     ----------
     mh : float
-        [Fe/H] [dex]; the alpha elements follow `specsolve.matter.composition.alpha_law`.
+        [Fe/H] [dex].
     vmic : tuple of float
         Microturbulences of the opacity [km/s].
     lines : BlanketingLines, optional
@@ -145,6 +147,8 @@ def build(
         Samples in each band; a multiple of 200.
     log_temperature, log_pressure : ndarray
         Nodes, uniform; log10 of [K] and [dyn cm^-2].
+    alpha : float, optional
+        [alpha/Fe] [dex]; `specsolve.matter.composition.alpha_law` of the metallicity if not given.
 
     Examples
     --------
@@ -156,10 +160,10 @@ def build(
     constants = line_constants(lines, atomic_mass)
     band_edges_cm = BAND_EDGES_NM * 1e-7
     grid_t, grid_p = np.meshgrid(10.0**log_temperature, 10.0**log_pressure, indexing="ij")
-    gas = equilibrium(grid_t.ravel(), grid_p.ravel(), composition_for(mh))
+    gas = equilibrium(grid_t.ravel(), grid_p.ravel(), composition_for(mh, alpha))
     log_opacity = []
     for vmic_kms in vmic:
-        opacity = distribution(lines, constants, gas, mh, vmic_kms, band_edges_cm, n_samples)
+        opacity = distribution(lines, constants, gas, mh, vmic_kms, band_edges_cm, n_samples, alpha)
         log_opacity.append(np.log10(opacity).reshape(*opacity.shape[:2], *grid_t.shape))
     return Blanketing(
         mh=mh,

@@ -1,0 +1,226 @@
+"""First-order responses of the widths to what the axes of a grid do not hold: [alpha/Fe], the missing-opacity multiplier.
+
+A perturbation p changes every width by p R, with R = d log10(W/lambda) / dp computed by the full engine (new opacity
+tables, new atmospheres, new line formation) at some of the grid's nodes. Between these, R follows a cubic
+radial-basis function in (teff, logg, mh), exact at the nodes, and polynomials in vmic and dA. All nodes of a grid lie
+inside the hull of the nodes that R was computed at, so nothing is extrapolated.
+
+- "alpha": p = [alpha/Fe] minus the law that the atmospheres follow [dex];
+- "missing_opacity": p = power of the multiplier minus one (see `specsolve.atmosphere.blanketing_calibration`).
+"""
+
+from __future__ import annotations
+
+import io
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass
+from functools import cached_property, lru_cache
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from specsolve.durable import write_atomically
+from specsolve.errors import StoreError, UsageError
+
+FORMAT_NAME = "specsolve first-order responses"
+SCHEMA = 1
+FILE_NAME = "perturbations.npz"
+PACKAGED = Path(__file__).resolve().parent.parent / "data" / "perturbations" / FILE_NAME
+STEP = 1e-4  # of the stored integers [dex per unit of p]
+MISSING = np.iinfo(np.int16).min  # the integer of a response that could not be computed
+NODE_SCALE = np.array([500.0, 1.0, 0.7])  # K, dex, dex: one unit of distance between nodes
+RBF_KERNEL, RBF_DEGREE = "cubic", 2
+ALPHA, MISSING_OPACITY = "alpha", "missing_opacity"
+# How far the response was computed for, and compared with the full engine: beyond, first order is not tested.
+TESTED_RANGE: Mapping[str, float] = {ALPHA: 0.3, MISSING_OPACITY: 1.0}
+REMAKE = "python -m specsolve.grid.perturbations_build --grid DIR --work FOLDER --output DIR"
+
+
+@dataclass(frozen=True, eq=False)
+class Perturbations:
+    """Responses of the lines of a grid.
+
+    Attributes
+    ----------
+    header : dict
+        names, nodes, vmic, dA, line keys, identity of the atmospheres, provenance.
+    responses : dict of str to ndarray of int16, shape (n_nodes, n_lines, n_vmic, n_dA)
+        By the name of the perturbation, in steps of `STEP`.
+
+    Examples
+    --------
+    >>> sorted(Perturbations.packaged().names)                                  # doctest: +SKIP
+    ['alpha', 'missing_opacity']
+    """
+
+    header: dict[str, Any]
+    responses: dict[str, np.ndarray]
+
+    @classmethod
+    def packaged(cls) -> Perturbations:
+        """Those of the packaged grid."""
+        return _read_once(str(PACKAGED))
+
+    @classmethod
+    def of_grid(cls, grid: Any) -> Perturbations:
+        """Those in the folder of a grid, else the packaged ones if they fit.
+
+        Raises
+        ------
+        UsageError
+            If none fit its lines and atmospheres; the text says how to make them.
+        """
+        own = Path(grid.directory) / FILE_NAME
+        found = _read_once(str(own)) if own.exists() else cls.packaged()
+        if found.header["atmospheres_identity"] != grid.atmospheres_identity:
+            raise UsageError(
+                f"the stored responses to [alpha/Fe] are of other atmospheres than this grid; run {REMAKE}"
+            )
+        absent = int(np.count_nonzero(found.line_places(grid.lines.key) < 0))
+        if absent:
+            raise UsageError(
+                f"{absent} of {len(grid.lines)} lines of this grid have no stored response to [alpha/Fe]; run {REMAKE}"
+            )
+        return found
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Names of the perturbations."""
+        return tuple(self.responses)
+
+    @cached_property
+    def nodes(self) -> np.ndarray:
+        """teff, logg, mh of the nodes, shape (n_nodes, 3)."""
+        return np.array(self.header["nodes"], float)
+
+    @cached_property
+    def keys(self) -> tuple[str, ...]:
+        """Keys of the lines."""
+        return tuple(self.header["lines"])
+
+    def line_places(self, keys) -> np.ndarray:
+        """Position of each line key, -1 where there is none."""
+        place = {key: i for i, key in enumerate(self.keys)}
+        return np.array([place.get(str(key), -1) for key in keys], dtype=np.int64)
+
+    def node_operator(self, points: np.ndarray) -> np.ndarray:
+        """Weights of the nodes at points (n_points, 3) of (teff, logg, mh), shape (n_points, n_nodes)."""
+        from scipy.interpolate import RBFInterpolator
+
+        unit = np.eye(len(self.nodes))
+        spline = RBFInterpolator(self.nodes / NODE_SCALE, unit, kernel=RBF_KERNEL, degree=RBF_DEGREE)
+        return spline(np.atleast_2d(points) / NODE_SCALE)
+
+    def response(self, name: str, theta: np.ndarray, dA: np.ndarray, places: np.ndarray) -> np.ndarray:
+        """R of some lines at one point.
+
+        Parameters
+        ----------
+        name : str
+        theta : ndarray, shape (4,)
+            teff [K], logg, mh, vmic [km/s]; inside the grid that the responses belong to.
+        dA : ndarray, shape (n_lines,)
+            A(Fe) - solar iron - mh of each line [dex], inside the axis.
+        places : ndarray of int, shape (n_lines,)
+            Of the lines, see `line_places`.
+
+        Returns
+        -------
+        ndarray, shape (n_lines,)
+            d log10(W/lambda) / dp [dex per unit of p]; nan where dA leaves the axis.
+        """
+        weights = self.node_operator(np.asarray(theta, float)[None, :3])[0]
+        at_node = np.tensordot(weights, self.responses[name][:, places].astype(float), axes=1) * STEP
+        vmic = polynomial_weights(self.header["vmic"], np.array([theta[3]]))[0]
+        curve = np.einsum("lvd,v->ld", at_node, vmic)
+        inside = (dA >= self.header["dA"][0]) & (dA <= self.header["dA"][-1])
+        along = polynomial_weights(self.header["dA"], np.where(inside, dA, 0.0))
+        return np.where(inside, np.einsum("ld,ld->l", curve, along), np.nan)
+
+    def expanded(self, name: str, grid: Any) -> np.ndarray:
+        """R at all nodes of a grid, float32 of shape (n_nodes_of_grid, n_lines, n_vmic, n_dA); grid order of lines."""
+        axes = [np.asarray(axis.values, float) for axis in grid.node_axes]
+        points = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 3)
+        operator = self.node_operator(points).astype(np.float32)
+        line_axes = [np.asarray(axis.values, float) for axis in grid.line_axes]
+        vmic = polynomial_weights(self.header["vmic"], line_axes[0]).astype(np.float32)
+        dA = polynomial_weights(self.header["dA"], line_axes[1]).astype(np.float32)
+        stored = self.responses[name][:, self.line_places(grid.lines.key)].astype(np.float32) * np.float32(STEP)
+        n_nodes, n_lines = stored.shape[:2]
+        at_nodes = (operator @ stored.reshape(n_nodes, -1)).reshape(len(points) * n_lines, *stored.shape[2:])
+        full = np.matmul(np.matmul(vmic, at_nodes), dA.T)
+        return full.reshape(len(points), n_lines, *full.shape[1:])
+
+
+def polynomial_weights(nodes, at: np.ndarray) -> np.ndarray:
+    """Lagrange weights of the polynomial through all nodes, shape (n_points, n_nodes).
+
+    Examples
+    --------
+    >>> polynomial_weights([0.0, 1.0, 2.0], [0.5]).tolist()
+    [[0.375, 0.75, -0.125]]
+    """
+    nodes, at = np.asarray(nodes, float), np.asarray(at, float)
+    weights = np.ones((at.size, nodes.size))
+    for j, x in enumerate(nodes):
+        for k, other in enumerate(nodes):
+            if k != j:
+                weights[:, j] *= (at - other) / (x - other)
+    return weights
+
+
+def write_perturbations(path: str | Path, header: Mapping[str, Any], responses: Mapping[str, np.ndarray]) -> None:
+    """Write responses [dex per unit of p] as scaled integers.
+
+    Parameters
+    ----------
+    path : path-like
+    header : mapping
+        names of what the arrays belong to; JSON types.
+    responses : mapping of str to ndarray, shape (n_nodes, n_lines, n_vmic, n_dA)
+
+    Raises
+    ------
+    ValueError
+        If a response is not finite or too large to be stored.
+    """
+    arrays = {}
+    for name, values in responses.items():
+        scaled = np.rint(np.asarray(values) / STEP)
+        if not np.isfinite(scaled).all() or np.abs(scaled).max() > np.iinfo(np.int16).max:
+            raise ValueError(f"response to {name} is not finite or too large")
+        # lines first: neighbouring numbers are alike, which the compression wants
+        arrays[f"response_{name}"] = np.ascontiguousarray(scaled.astype("<i2").transpose(1, 2, 3, 0))
+    text = json.dumps({"format": FORMAT_NAME, "schema": SCHEMA, **header}, sort_keys=True)
+    buffer = io.BytesIO()
+    np.savez_compressed(buffer, header=np.array(text), **arrays)
+    write_atomically(Path(path), buffer.getvalue())
+
+
+def read_perturbations(path: str | Path) -> Perturbations:
+    """Read a store of responses.
+
+    Raises
+    ------
+    StoreError
+    """
+    try:
+        with np.load(path, allow_pickle=False) as stored:
+            header = json.loads(str(stored["header"]))
+            arrays = {
+                name.removeprefix("response_"): np.ascontiguousarray(stored[name].transpose(3, 0, 1, 2))
+                for name in stored.files
+                if name != "header"
+            }
+    except (OSError, ValueError, KeyError, EOFError) as error:
+        raise StoreError(f"{path} cannot be read ({error}); make it anew: {REMAKE}", path=path) from error
+    if header.get("format") != FORMAT_NAME or header.get("schema") != SCHEMA:
+        raise StoreError(f"{path} is not a store of responses of schema {SCHEMA}", path=path)
+    return Perturbations(header, arrays)
+
+
+@lru_cache(maxsize=4)
+def _read_once(path: str) -> Perturbations:
+    return read_perturbations(path)
