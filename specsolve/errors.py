@@ -270,3 +270,18 @@ class NotEnoughLinesError(SpecsolveError):
     def __init__(self, message: str, *, counts: dict[str, int] | None = None) -> None:
         super().__init__(message)
         self.counts = dict(counts or {})
+
+
+class SpectrumError(InputError):
+    """A spectrum cannot be used: not readable, wrong unit, no light, no peak in the velocity search.
+
+    Attributes
+    ----------
+    path : path-like or None
+    value : float or None
+        The number the message speaks of.
+    """
+
+    def __init__(self, message: str, *, path: str | Path | None = None, value: float | None = None) -> None:
+        super().__init__(message, path=path)
+        self.value = value

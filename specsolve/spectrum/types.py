@@ -75,6 +75,8 @@ class Spectrum:
         True where a pixel must not be used.
     order : ndarray of int
         Number of the order of each pixel, from 0.
+    correlation : float
+        Variance of the sum of many pixels over that of independent pixels: above 1 where pixels were interpolated.
     resolving_power : float
         lambda / FWHM of the instrument; nan if unknown (it is then fitted together with the star's broadening).
     normalised : bool
@@ -107,6 +109,7 @@ class Spectrum:
     sigma: np.ndarray
     mask: np.ndarray
     order: np.ndarray
+    correlation: float = 1.0
     resolving_power: float = float("nan")
     normalised: bool = True
     velocity: float = 0.0
