@@ -234,8 +234,43 @@ INPUT = (
     Column("equivalent_width_error", REAL, "mAngstrom", "its error (optional; an assumed error is printed)"),
     Column("excitation_potential", REAL, "eV", "energy of the lower level (optional; identifies the line)"),
     Column("log_gf", REAL, "dex", "log10 of g f (optional; overrides the grid's)"),
+    Column("log_gf_error", REAL, "dex", "its error (optional)"),
     Column("use", FLAG, "", "false leaves the line out (optional)"),
 )
+
+def _outside_columns() -> tuple[Column, ...]:
+    columns = [Column("star", TEXT, "", "name of the star; empty or * for all stars")]
+    for name, unit, words in PARAMETERS:
+        columns += [
+            Column(f"fix_{name}", REAL, unit, f"{words}, held fixed"),
+            Column(f"prior_{name}", REAL, unit, f"{words}, known from elsewhere"),
+            Column(f"prior_{name}_error", REAL, unit, f"error of prior_{name}"),
+        ]
+    columns += [
+        Column("prior_covariance", REAL, "", "of the prior (teff, logg, feh, vmic), instead of their errors", (4, 4)),
+        Column("alpha", REAL, "dex", "[alpha/Fe] of the star; the law of the atmospheres if not given"),
+    ]
+    for name, unit, words in MEASURED:
+        columns += [Column(name, REAL, unit, words), Column(f"{name}_error", REAL, unit, f"error of {name}")]
+    columns.append(Column("colour_scale", TEXT, "", "relation for the colours: dwarfs (and subgiants) or giants"))
+    return tuple(columns)
+
+
+MEASURED = (
+    ("parallax", "mas", "parallax; with magnitude and mass it gives logg as a function of teff"),
+    ("mass", "solMass", "mass of the star"),
+    ("magnitude_v", "mag", "apparent V"),
+    ("magnitude_g", "mag", "apparent Gaia G"),
+    ("magnitude_bolometric", "mag", "apparent bolometric magnitude, free of extinction"),
+    ("reddening", "mag", "E(B-V); needed with magnitudes and colours"),
+    ("numax", "uHz", "frequency of maximum power of solar-like oscillations; gives logg"),
+    ("colour_b_v", "mag", "B-V; colours give teff as a function of feh"),
+    ("colour_v_j", "mag", "V-J (2MASS)"),
+    ("colour_v_h", "mag", "V-H (2MASS)"),
+    ("colour_v_ks", "mag", "V-Ks (2MASS)"),
+    ("colour_j_ks", "mag", "J-Ks (2MASS)"),
+)
+OUTSIDE = _outside_columns()
 
 TRUTH = (
     Column("star", TEXT, "", "name of the invented star"),
@@ -250,6 +285,7 @@ TABLES: dict[str, tuple[Column, ...]] = {
     "candidates": CANDIDATES,
     "decisions": DECISIONS,
     "input": INPUT,
+    "outside": OUTSIDE,
     "truth": TRUTH,
 }
 

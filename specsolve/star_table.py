@@ -1,7 +1,8 @@
 """Read tables of equivalent widths, with one star or many, into `Star`s: the edge where columns and units are checked.
 
 Columns: `star` (optional), `wavelength_air`, `ion`, `equivalent_width`; optional `equivalent_width_error`,
-`excitation_potential`, `log_gf`, `log_gf_error`, `use`. A missing unit is asked for, never guessed.
+`excitation_potential`, `log_gf`, `log_gf_error`, `use`; and what is known of a star from elsewhere, the same in all of
+its rows (`specsolve columns outside`). A missing unit is asked for, never guessed.
 """
 
 from __future__ import annotations
@@ -16,6 +17,7 @@ import numpy as np
 from specsolve.balance.star import HUGE_WIDTH_MA, Star
 from specsolve.errors import ColumnError, InputError, LineError, UnitError
 from specsolve.lines.reading import read_table
+from specsolve.schema import OUTSIDE, TEXT
 
 if TYPE_CHECKING:
     from astropy.table import Table
@@ -31,6 +33,8 @@ UNITS = {
     "excitation_potential": "eV",
 }
 NUMERIC = (*UNITS, "log_gf", "log_gf_error")
+KNOWN = {column.name: column for column in OUTSIDE if column.name != "star"}
+KNOWN_UNITS = {name: column.unit for name, column in KNOWN.items() if column.unit not in ("", "dex")}
 IONS = ("Fe I", "Fe II")
 PLAUSIBLE_WAVELENGTH = (2000.0, 25000.0)  # Angstrom; outside it the unit or the column is wrong
 SMALLEST_MEDIAN_MA = 1.0  # no set of measured lines is that weak in the median
@@ -96,42 +100,86 @@ def read_stars(
     _check_widths(values["equivalent_width"], where, path)
     default = name or (path.stem if path is not None else "star")
     owner = _texts(table[names["star"]]) if "star" in names else np.full(len(table), default)
+    known = {
+        ours: known_values(table[theirs], ours, units or {}, where, path)
+        for ours, theirs in names.items()
+        if ours in KNOWN
+    }
     other = ~np.isin(ion, IONS)
+    optional = [
+        name for name in ("equivalent_width_error", "excitation_potential", "log_gf", "log_gf_error") if name in values
+    ]
     stars = []
-    for star in dict.fromkeys(owner.tolist()):
-        rows = owner == star
-        keep = rows & ~other
+    for star, rows in rows_of_each(owner):
+        keep = rows[~other[rows]]
         notes = []
-        if (rows & other).any():
-            strange = ", ".join(sorted(set(ion[rows & other].tolist()))[:6])
-            notes.append(f"{int((rows & other).sum())} lines of other ions left out ({strange})")
+        if keep.size < rows.size:
+            strange = ", ".join(sorted(set(ion[rows[other[rows]]].tolist()))[:6])
+            notes.append(f"{rows.size - keep.size} lines of other ions left out ({strange})")
         stars.append(
             Star.from_arrays(
                 star or default,
                 values["wavelength_air"][keep],
                 ion[keep],
                 values["equivalent_width"][keep],
-                values["equivalent_width_error"][keep] if "equivalent_width_error" in values else None,
-                excitation_potential=values["excitation_potential"][keep] if "excitation_potential" in values else None,
-                log_gf=values["log_gf"][keep] if "log_gf" in values else None,
-                log_gf_error=values["log_gf_error"][keep] if "log_gf_error" in values else None,
+                **{name: values[name][keep] for name in optional},
                 use=use[keep],
                 notes=tuple(notes),
+                known=_known_of_star(known, rows, star or default, where, path) if known else None,
             )
         )
     return stars
 
 
+def rows_of_each(owner: np.ndarray) -> list[tuple[str, np.ndarray]]:
+    """Names in the order in which they first appear, each with its rows."""
+    names, first, inverse = np.unique(owner, return_index=True, return_inverse=True)
+    by_name = np.split(np.argsort(inverse, kind="stable"), np.cumsum(np.bincount(inverse))[:-1])
+    return [(str(names[i]), by_name[i]) for i in np.argsort(first, kind="stable")]
+
+
+def known_values(
+    column: Any, ours: str, units: Mapping[str, str], where: str = "", path: Path | None = None
+) -> np.ndarray:
+    """A column of what is known from elsewhere, in our unit; "" or nan where a row says nothing."""
+    if KNOWN[ours].dtype == TEXT:
+        return _texts(column)
+    return _numbers(column, ours, units, where, path)
+
+
+def _known_of_star(
+    known: Mapping[str, np.ndarray], rows: np.ndarray, star: str, where: str, path: Path | None
+) -> dict[str, Any]:
+    """The one value of each column among the rows of a star."""
+    found: dict[str, Any] = {}
+    for name, values in known.items():
+        here = values[rows]
+        said = (
+            here[here != ""] if here.dtype.kind == "U" else here[np.isfinite(here).reshape(rows.size, -1).any(axis=1)]
+        )
+        if len(said) == 0:
+            continue
+        if not all(np.array_equal(value, said[0], equal_nan=said.dtype.kind != "U") for value in said[1:]):
+            raise ColumnError(
+                f"{where}column '{name}' holds different values in the rows of {star}; it belongs to the star, not to "
+                "the line.",
+                column=name,
+                path=path,
+            )
+        found[name] = said[0].tolist()
+    return found
+
+
 def _names(table: Table, columns: Mapping[str, str], where: str, path: Path | None) -> dict[str, str]:
     """Our name to the table's, for the columns that it has."""
-    unknown = sorted(set(columns) - set(REQUIRED) - set(OPTIONAL))
+    unknown = sorted(set(columns) - set(REQUIRED) - set(OPTIONAL) - set(KNOWN))
     if unknown:
         raise ColumnError(
             f"'{unknown[0]}' is not a column that is read; there are {', '.join(REQUIRED + OPTIONAL)}.",
             column=unknown[0],
         )
     names = {}
-    for ours in REQUIRED + OPTIONAL:
+    for ours in (*REQUIRED, *OPTIONAL, *KNOWN):
         theirs = columns.get(ours, ours)
         if theirs in table.colnames:
             names[ours] = theirs
@@ -147,7 +195,10 @@ def _names(table: Table, columns: Mapping[str, str], where: str, path: Path | No
 
 
 def _texts(column: Any) -> np.ndarray:
-    masked = np.ma.getmaskarray(np.ma.asarray(column))
+    plain = np.ma.asarray(column)
+    if plain.dtype.kind == "U":
+        return np.char.strip(np.ma.filled(plain, ""))
+    masked = np.ma.getmaskarray(plain)
     out = []
     for value, gone in zip(np.ma.asarray(column).data.tolist(), masked.tolist(), strict=True):
         text = value.decode("utf-8", "replace") if isinstance(value, bytes) else str(value)
@@ -166,31 +217,33 @@ def _numbers(column: Any, ours: str, units: Mapping[str, str], where: str, path:
         raise ColumnError(
             f"{where}column '{column.info.name}' holds text where numbers belong.", column=ours, path=path
         ) from error
-    if ours not in UNITS:
+    wanted = UNITS.get(ours) or KNOWN_UNITS.get(ours)
+    if wanted is None:
         return values
     unit = column.unit if column.unit is not None else units.get(ours)
     if unit is None:
         raise UnitError(
             f"{where}which unit has column '{column.info.name}'? State it in the table, or say "
-            f"--unit {ours}={UNITS[ours]} if that is what it is.",
+            f"--unit {ours}={wanted} if that is what it is.",
             column=ours,
-            expected=UNITS[ours],
+            expected=wanted,
             path=path,
         )
     try:
-        return (values * u.Unit(unit)).to_value(UNITS[ours])
+        return (values * u.Unit(unit)).to_value(wanted)
     except (u.UnitConversionError, ValueError, TypeError) as error:
         raise UnitError(
-            f"{where}column '{column.info.name}' is in '{unit}', which cannot be turned into {UNITS[ours]}.",
+            f"{where}column '{column.info.name}' is in '{unit}', which cannot be turned into {wanted}.",
             column=ours,
             unit=str(unit),
-            expected=UNITS[ours],
+            expected=wanted,
             path=path,
         ) from error
 
 
 def _ions(found: np.ndarray, ions: Mapping[str, str], where: str, path: Path | None) -> np.ndarray:
-    mapped = np.array([ions.get(value, value) for value in found.tolist()], dtype=str)
+    spelled, inverse = np.unique(found, return_inverse=True)
+    mapped = np.array([ions.get(value, value) for value in spelled.tolist()], dtype=str)[inverse]
     if not np.isin(mapped, IONS).any():
         spellings = ", ".join(f"'{value}'" for value in sorted(set(found.tolist()))[:6])
         first = sorted(set(found.tolist()))[0]

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -22,7 +23,8 @@ class Outside:
         Of "teff", "logg", "feh", "vmic".
     mean : tuple
         Each entry a float, or a function of theta = (teff, logg, feh, vmic) that returns the expected value of the
-        parameter there and its gradient, shape (4,); so a gravity from a parallax can follow the temperature.
+        parameter there and its gradient, shape (4,); so a gravity from a parallax can follow the temperature. It may
+        have a method `check(theta)` that raises InputError where a solution lies outside its range.
     covariance : ndarray, shape (n, n)
         Zero variance = fixed: the parameter's own residual is then removed from the solve. A fixed entry must be a
         number.
@@ -49,8 +51,13 @@ class Outside:
         covariance = np.asarray(self.covariance, float)
         if covariance.shape != (len(self.names),) * 2 or len(self.mean) != len(self.names):
             raise ValueError("outside mean and covariance must match the names")
-        if not np.allclose(covariance, covariance.T) or (np.diag(covariance) < 0.0).any():
+        if not np.allclose(covariance, covariance.T) or not (np.diag(covariance) >= 0.0).all():
             raise ValueError("outside covariance must be symmetric with non-negative variances")
+        some = np.diag(covariance) > 0.0
+        if np.any(covariance[~some] != 0.0):
+            raise ValueError("a fixed entry (zero variance) cannot be correlated with another")
+        if np.linalg.eigvalsh(covariance[np.ix_(some, some)]).min(initial=1.0) <= 0.0:
+            raise ValueError("outside covariance must be positive definite among the entries with variance")
         for name, mean, variance in zip(self.names, self.mean, np.diag(covariance), strict=True):
             if callable(mean) and variance == 0.0:
                 raise ValueError(f"{name}: a fixed value must be a number, not a function of the parameters")
@@ -102,7 +109,7 @@ class Outside:
         """Whitened differences L^-1 (theta - mean), shape (n,), and their Jacobian, shape (n, 4); sum of squares is
         the term.
         """
-        free = [i for i, variance in enumerate(np.diag(self.covariance)) if variance > 0.0]
+        free, inverse = self._whitening
         if not free:
             return np.zeros(0), np.zeros((0, len(PARAMETER_NAMES)))
         difference, jacobian = np.zeros(len(free)), np.zeros((len(free), len(PARAMETER_NAMES)))
@@ -113,8 +120,21 @@ class Outside:
             difference[row] = theta[place] - value
             jacobian[row] = -np.asarray(gradient)
             jacobian[row, place] += 1.0
-        lower = np.linalg.cholesky(self.covariance[np.ix_(free, free)])
-        return np.linalg.solve(lower, difference), np.linalg.solve(lower, jacobian)
+        return inverse @ difference, inverse @ jacobian
+
+    @cached_property
+    def _whitening(self) -> tuple[list[int], np.ndarray]:
+        """Entries with variance, and L^-1 of their covariance L L^T."""
+        free = [i for i, variance in enumerate(np.diag(self.covariance)) if variance > 0.0]
+        return free, np.linalg.inv(np.linalg.cholesky(self.covariance[np.ix_(free, free)])) if free else np.zeros(
+            (0, 0)
+        )
+
+    def check(self, theta: np.ndarray) -> None:
+        """Raise InputError if a solution lies outside the range of a relation."""
+        for mean in self.mean:
+            if hasattr(mean, "check"):
+                mean.check(theta)
 
 
 @dataclass(frozen=True, kw_only=True)

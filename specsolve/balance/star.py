@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import hashlib
-from dataclasses import dataclass, fields
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass, field, fields
+from typing import Any
 
 import numpy as np
 
@@ -44,6 +47,8 @@ class Star:
     error_assumed, use : ndarray of bool
     notes : tuple of str
         What was decided on reading.
+    known : mapping
+        What the input says of the star beside its lines, see `specsolve.balance.outside_known`.
     """
 
     name: str
@@ -57,6 +62,7 @@ class Star:
     error_assumed: np.ndarray
     use: np.ndarray
     notes: tuple[str, ...] = ()
+    known: Mapping[str, Any] = field(default_factory=dict)
 
     @classmethod
     def from_arrays(
@@ -72,6 +78,7 @@ class Star:
         log_gf_error=None,
         use=None,
         notes: tuple[str, ...] = (),
+        known: Mapping[str, Any] | None = None,
     ) -> Star:
         """Build a star from arrays of numbers; units as in the class.
 
@@ -104,7 +111,12 @@ class Star:
             "use": np.ones(n_lines, bool) if use is None else np.asarray(use, bool),
         }
         order = np.lexsort((error, width, columns["excitation_potential"], wavelength, columns["ion"]))
-        return cls(name=str(name), notes=notes, **{key: values[order] for key, values in columns.items()})
+        return cls(
+            name=str(name),
+            notes=notes,
+            known=dict(known or {}),
+            **{key: values[order] for key, values in columns.items()},
+        )
 
     def __len__(self) -> int:
         return self.wavelength_air.size
@@ -113,8 +125,10 @@ class Star:
     def identity(self) -> str:
         """SHA-256 of the measured numbers (hex); the name does not enter."""
         digest = hashlib.sha256()
+        if self.known:
+            digest.update(json.dumps(self.known, sort_keys=True, default=lambda array: array.tolist()).encode())
         for item in fields(self):
-            if item.name in ("name", "notes"):
+            if item.name in ("name", "notes", "known"):
                 continue
             values = getattr(self, item.name)
             text = "\n".join(values.tolist()).encode() if values.dtype.kind == "U" else b""
