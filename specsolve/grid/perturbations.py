@@ -31,7 +31,6 @@ PACKAGED = Path(__file__).resolve().parent.parent / "data" / "perturbations" / F
 STEP = 1e-4  # of the stored integers [dex per unit of p]
 MISSING = np.iinfo(np.int16).min  # the integer of a response that could not be computed
 NODE_SCALE = np.array([500.0, 1.0, 0.7])  # K, dex, dex: one unit of distance between nodes
-RBF_KERNEL, RBF_DEGREE = "cubic", 2
 ALPHA, MISSING_OPACITY = "alpha", "missing_opacity"
 # How far the response was computed for, and compared with the full engine: beyond, first order is not tested.
 TESTED_RANGE: Mapping[str, float] = {ALPHA: 0.3, MISSING_OPACITY: 1.0}
@@ -105,13 +104,33 @@ class Perturbations:
         place = {key: i for i, key in enumerate(self.keys)}
         return np.array([place.get(str(key), -1) for key in keys], dtype=np.int64)
 
-    def node_operator(self, points: np.ndarray) -> np.ndarray:
-        """Weights of the nodes at points (n_points, 3) of (teff, logg, mh), shape (n_points, n_nodes)."""
-        from scipy.interpolate import RBFInterpolator
+    @cached_property
+    def _inverse(self) -> np.ndarray:
+        """From values at the nodes to the coefficients of radial functions and polynomial."""
+        x = self.nodes / NODE_SCALE
+        polynomial = _polynomial_terms(x)
+        n, m = polynomial.shape
+        system = np.zeros((n + m, n + m))
+        system[:n, :n] = _radial(x, x)
+        system[:n, n:], system[n:, :n] = polynomial, polynomial.T
+        return np.linalg.inv(system)[:, :n]
 
-        unit = np.eye(len(self.nodes))
-        spline = RBFInterpolator(self.nodes / NODE_SCALE, unit, kernel=RBF_KERNEL, degree=RBF_DEGREE)
-        return spline(np.atleast_2d(points) / NODE_SCALE)
+    def node_operator(self, points: np.ndarray) -> np.ndarray:
+        """Weights of the nodes at points (n_points, 3) of (teff, logg, mh), shape (n_points, n_nodes).
+
+        The cubic spline |x - x_i|^3 with a quadratic polynomial (for example Wendland 2005, Scattered Data
+        Approximation, chapter 8): exact at the nodes, exact everywhere for a quadratic.
+        """
+        x = np.atleast_2d(points) / NODE_SCALE
+        return np.hstack([_radial(x, self.nodes / NODE_SCALE), _polynomial_terms(x)]) @ self._inverse
+
+    @cached_property
+    def _flat(self) -> dict[str, np.ndarray]:
+        """Responses as float32 of shape (n_nodes, n_lines n_vmic n_dA)."""
+        return {
+            name: (values.astype(np.float32) * np.float32(STEP)).reshape(len(values), -1)
+            for name, values in self.responses.items()
+        }
 
     def response(self, name: str, theta: np.ndarray, dA: np.ndarray, places: np.ndarray) -> np.ndarray:
         """R of some lines at one point.
@@ -130,11 +149,16 @@ class Perturbations:
         -------
         ndarray, shape (n_lines,)
             d log10(W/lambda) / dp [dex per unit of p]; nan where dA leaves the axis.
+
+        Examples
+        --------
+        >>> stored = Perturbations.packaged()                                   # doctest: +SKIP
+        >>> stored.response("alpha", (5000.0, 2.0, -1.0, 1.5), dA, stored.line_places(keys))  # doctest: +SKIP
         """
-        weights = self.node_operator(np.asarray(theta, float)[None, :3])[0]
-        at_node = np.tensordot(weights, self.responses[name][:, places].astype(float), axes=1) * STEP
+        weights = self.node_operator(np.asarray(theta, float)[None, :3])[0].astype(np.float32)
+        at_point = (weights @ self._flat[name]).reshape(self.responses[name].shape[1:])[places].astype(float)
         vmic = polynomial_weights(self.header["vmic"], np.array([theta[3]]))[0]
-        curve = np.einsum("lvd,v->ld", at_node, vmic)
+        curve = np.einsum("lvd,v->ld", at_point, vmic)
         inside = (dA >= self.header["dA"][0]) & (dA <= self.header["dA"][-1])
         along = polynomial_weights(self.header["dA"], np.where(inside, dA, 0.0))
         return np.where(inside, np.einsum("ld,ld->l", curve, along), np.nan)
@@ -152,6 +176,16 @@ class Perturbations:
         at_nodes = (operator @ stored.reshape(n_nodes, -1)).reshape(len(points) * n_lines, *stored.shape[2:])
         full = np.matmul(np.matmul(vmic, at_nodes), dA.T)
         return full.reshape(len(points), n_lines, *full.shape[1:])
+
+
+def _radial(x: np.ndarray, nodes: np.ndarray) -> np.ndarray:
+    square = ((x[:, None, :] - nodes[None, :, :]) ** 2).sum(axis=2)
+    return square * np.sqrt(square)
+
+
+def _polynomial_terms(x: np.ndarray) -> np.ndarray:
+    a, b, c = x.T
+    return np.stack([np.ones_like(a), a, b, c, a * a, b * b, c * c, a * b, a * c, b * c], axis=1)
 
 
 def polynomial_weights(nodes, at: np.ndarray) -> np.ndarray:
