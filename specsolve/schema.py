@@ -124,6 +124,11 @@ STARS = (
     Column("flags", TEXT, "", "informative flags, separated by commas"),
     *_parameter_columns(),
     Column("fixed", TEXT, "", "parameters held fixed, separated by commas"),
+    Column(
+        "outside_share", REAL, "", "share of outside knowledge in (teff, logg, feh, vmic): 0 lines alone, 1 fixed", (4,)
+    ),
+    Column("alpha", REAL, "dex", "[alpha/Fe] of the atmosphere: as given, else the law's at this metallicity"),
+    Column("alpha_given", FLAG, "", "alpha was given"),
     Column("cov_star", REAL, "", "covariance of (teff, logg, feh, vmic): the star's own part", (4, 4)),
     Column("cov_list", REAL, "", "covariance of (teff, logg, feh, vmic): shared by all stars on the list", (4, 4)),
     *_residual_columns(),
@@ -237,6 +242,7 @@ INPUT = (
     Column("log_gf_error", REAL, "dex", "its error (optional)"),
     Column("use", FLAG, "", "false leaves the line out (optional)"),
 )
+
 
 def _outside_columns() -> tuple[Column, ...]:
     columns = [Column("star", TEXT, "", "name of the star; empty or * for all stars")]

@@ -8,9 +8,13 @@ from typing import Any
 import numpy as np
 
 from specsolve.constants import SOLAR_IRON
+from specsolve.errors import InputError
+from specsolve.grid.perturbations import ALPHA, TESTED_RANGE
+from specsolve.matter.composition import alpha_law
 
 from .line_table import line_results
 from .minima import REASON_MEASURED, REASON_PREDICTED, Search
+from .outside_share import outside_share
 from .own_sun import SolarLines
 from .problem import Problem
 from .residuals import plane_operator
@@ -61,6 +65,15 @@ def solved(problem: Problem, search: Search, ranking: Ranking, sun: SolarLines |
     elif status == "tied":
         reason = "the rule cannot separate the near-equal candidates"
     robust = state.weighting.robust
+    try:
+        for known in problem.outside:
+            known.check(minimum.theta)
+    except InputError as error:
+        status, reason = UNSOLVED, str(error)
+    alpha = getattr(problem.grid, "alpha", None)
+    law = alpha_law(float(minimum.theta[2]))
+    if alpha is not None and abs(alpha - law) > TESTED_RANGE[ALPHA]:
+        flags.append("alpha_beyond_tested_range")
     fe1, fe2 = ion_abundances(problem, state, sun)
     n_used = int(state.used.sum())
     deviation = state.weighting.deviation
@@ -86,8 +99,12 @@ def solved(problem: Problem, search: Search, ranking: Ranking, sun: SolarLines |
         lines=lines,
         trends=trends(problem, state),
         candidates=ranking.candidates,
-        decisions=_decisions(problem, ranking, lines),
+        decisions=_decisions(problem, ranking, lines, minimum.theta),
         sensitivities=sensitivities(problem, state),
+        outside=tuple(_outside_entries(problem, minimum.theta)),
+        outside_share=outside_share(problem, state),
+        alpha=law if alpha is None else alpha,
+        alpha_given=alpha is not None,
         validity=statements[1],
         n_used=n_used,
         iterations=minimum.iterations,
@@ -153,7 +170,7 @@ def _frame(problem: Problem) -> Solution:
         n_input=n_input,
         n_matched=n_matched,
         unmatched=tuple(f"{star.wavelength_air[i]:.3f} {star.ion[i]}" for i in missing),
-        grid_identity=grid.identity,
+        grid_identity=getattr(grid, "unperturbed", grid).identity,
         atmospheres_identity=grid.atmospheres_identity,
         line_list_hash=grid.lines.identity,
         input_hash=star.identity,
@@ -163,14 +180,17 @@ def _frame(problem: Problem) -> Solution:
     )
 
 
-def _outside_entries(problem: Problem) -> list[dict[str, Any]]:
+def _outside_entries(problem: Problem, theta: np.ndarray | None = None) -> list[dict[str, Any]]:
+    """What was known; values that follow the parameters as they are at theta, nan without it."""
     entries = []
     for item in problem.outside:
         for name, value in item.fixed_values.items():
             entries.append({"name": name, "mean": value, "sigma": 0.0, "source": item.source})
         for term in item.terms:
-            mean = float("nan") if callable(term.mean) else float(term.mean)
-            entries.append({"name": term.name, "mean": mean, "sigma": term.sigma, "source": term.source})
+            mean = term.mean
+            if callable(mean):
+                mean = float("nan") if theta is None else mean(theta)[0]
+            entries.append({"name": term.name, "mean": float(mean), "sigma": term.sigma, "source": item.source})
     return entries
 
 
@@ -257,7 +277,7 @@ def trends(problem: Problem, state: BalanceState) -> tuple[Trend, ...]:
     return tuple(out)
 
 
-def _decisions(problem: Problem, ranking: Ranking, lines: LineResults) -> tuple[Decision, ...]:
+def _decisions(problem: Problem, ranking: Ranking, lines: LineResults, theta: np.ndarray) -> tuple[Decision, ...]:
     """The rule's steps, then what was fixed or known beforehand, then every line that was cut or down-weighted."""
     nan = float("nan")
     entries: list[tuple] = []
@@ -265,7 +285,7 @@ def _decisions(problem: Problem, ranking: Ranking, lines: LineResults) -> tuple[
         for name, value in item.fixed_values.items():
             entries.append(("fix", name, value, nan, "fixed", item.source))
         for term in item.terms:
-            mean = nan if callable(term.mean) else float(term.mean)
+            mean = float(term.mean(theta)[0] if callable(term.mean) else term.mean)
             entries.append(("outside", term.name, mean, term.sigma, "Gaussian term", term.source))
     low, high = problem.options.reduced_width_range
     for i in np.flatnonzero(lines.reason != ""):

@@ -11,10 +11,12 @@ from pathlib import Path
 from typing import Any
 
 from specsolve.errors import SpecsolveError
+from specsolve.grid.perturbed import perturbed_grid
 
 from .assemble import unsolved
 from .options import Options
 from .outside import Outside
+from .outside_known import ALPHA, outside_from_known
 from .own_sun import SolarLines
 from .problem import Problem
 from .solution import Solution
@@ -39,6 +41,9 @@ class Setting:
     zero_points : ZeroPoints
     options : Options
     sun : SolarLines
+    known : mapping
+        What is known of every star from elsewhere, by name (`specsolve.balance.outside_known`); a star's own value of
+        a name goes before it.
     compiled : bool
         Set by `solve_stream` for many stars.
     """
@@ -48,6 +53,7 @@ class Setting:
     zero_points: ZeroPoints = field(default_factory=ZeroPoints.solar)
     options: Options = field(default_factory=Options)
     sun: SolarLines = field(default_factory=SolarLines)
+    known: Mapping[str, Any] = field(default_factory=dict)
     compiled: bool = False
 
 
@@ -126,19 +132,20 @@ def solve_star(star: Star, grid: Any, setting: Setting, known: tuple[Outside, ..
         star=star,
         grid=grid,
         treatment=setting.treatment,
-        outside=setting.fixed + known,
         zero_points=setting.zero_points,
         options=setting.options,
         compiled=setting.compiled,
     )
     try:
-        return solve_problem(problem, setting.sun)
+        about = {**setting.known, **star.known}
+        outside = setting.fixed + known + outside_from_known(about)
+        moved = perturbed_grid(grid, about.get(ALPHA))
+        return solve_problem(replace(problem, outside=outside, grid=moved), setting.sun)
     except SpecsolveError as error:
-        return unsolved(replace(problem, outside=()), str(error), flags=("error",))
+        return unsolved(problem, str(error), flags=("error",))
     except (ArithmeticError, LookupError, RuntimeError, TypeError, ValueError) as error:
         log.warning("%s: unexpected %s: %s", star.name, type(error).__name__, error)
-        bare = replace(problem, outside=())
-        failed = unsolved(bare, f"unexpected {type(error).__name__}: {error}", flags=("unexpected_error",))
+        failed = unsolved(problem, f"unexpected {type(error).__name__}: {error}", flags=("unexpected_error",))
         return replace(failed, notes=(*failed.notes, traceback.format_exc()))
 
 

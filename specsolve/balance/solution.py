@@ -253,7 +253,12 @@ class Solution:
     decisions : tuple of Decision
     sensitivities : tuple of Sensitivity
     outside : tuple of mapping
-        What was known from elsewhere: name, mean, sigma, source.
+        What was known from elsewhere: name, mean (at the solution), sigma, source.
+    outside_share : ndarray, shape (4,)
+        Share of that in each parameter: 0 from the lines alone, 1 fixed.
+    alpha : float
+        [alpha/Fe] of the atmosphere [dex]: as given, else the law's at this metallicity.
+    alpha_given : bool
     validity : tuple of str
         Sentences of limited validity that apply to this star.
     notes : tuple of str
@@ -302,6 +307,9 @@ class Solution:
     sensitivities: tuple[Sensitivity, ...] = ()
     systematics: Mapping[str, np.ndarray] = field(default_factory=dict)
     outside: tuple[Mapping[str, Any], ...] = ()
+    outside_share: np.ndarray = field(default_factory=lambda: np.full(4, np.nan))
+    alpha: float = float("nan")
+    alpha_given: bool = False
     validity: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
     n_input: int = 0

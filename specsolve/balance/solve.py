@@ -45,6 +45,7 @@ def solve(
     reference_parameters: Mapping[str, Any] | None = None,
     fix: Mapping[str, Any] | None = None,
     outside: OutsideChoice = None,
+    known: Mapping[str, Any] | None = None,
     options: Options | None = None,
     columns: Mapping[str, str] | None = None,
     ions: Mapping[str, str] | None = None,
@@ -71,6 +72,9 @@ def solve(
     outside : optional
         What else is known: an `Outside`, several of them, a mapping from star name to either, or a function of the
         star.
+    known : mapping, optional
+        The same by name, for all stars: ``{"prior_teff": 5800.0, "prior_teff_error": 60.0}``, a parallax, colours,
+        ``alpha`` (`specsolve.balance.outside_known`); a star's own columns go before it.
     options : Options, optional
     columns, ions : mapping, optional
         Other headings and spellings, see `specsolve.star_table.read_stars`.
@@ -115,6 +119,7 @@ def solve(
         zero_points=zero_points,
         options=options,
         sun=solar_lines(grid, treatment, options),
+        known=dict(known or {}),
     )
     solutions = solve_many(stars, grid, setting, outside=outside, executor=executor)
     return solutions[0] if single else solutions
