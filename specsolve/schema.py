@@ -155,6 +155,8 @@ STARS = (
     Column("atmospheres_identity", TEXT, "", "SHA-256 of the atmospheres behind the grid"),
     Column("line_list_hash", TEXT, "", "SHA-256 of the lines used"),
     Column("input_hash", TEXT, "", "SHA-256 of the star's input"),
+    Column("outside", TEXT, "", "what was known from elsewhere, as JSON: name, mean, sigma, source"),
+    Column("systematics", TEXT, "", "shift of (teff, logg, feh, vmic) for each systematic term, as JSON"),
     Column("configuration", TEXT, "", "options of this solve as JSON"),
 )
 
@@ -285,6 +287,60 @@ TRUTH = (
     Column("bad_lines", TEXT, "", "lines spoiled on purpose, separated by semicolons"),
 )
 
+MEASUREMENTS = (
+    Column("star", TEXT, "", "name of the star"),
+    Column("wavelength_air", REAL, "Angstrom", "wavelength in air, of the line list"),
+    Column("ion", TEXT, "", "Fe I or Fe II"),
+    Column("excitation_potential", REAL, "eV", "energy of the lower level"),
+    Column("log_gf", REAL, "dex", "log10 of g f of the line list"),
+    Column("equivalent_width", REAL, "mAngstrom", "measured equivalent width; nan where the line is not covered"),
+    Column("equivalent_width_error", REAL, "mAngstrom", "its error: noise, continuum and blends together"),
+    Column("noise_error", REAL, "mAngstrom", "part of the error from the noise"),
+    Column("continuum_error", REAL, "mAngstrom", "part from the continuum, common to the lines of a continuum_group"),
+    Column("blend_error", REAL, "mAngstrom", "part from neighbours"),
+    Column("continuum_group", COUNT, "", "lines of one number share their continuum; -1 for none"),
+    Column("use", FLAG, "", "good enough for a solve"),
+    Column("flags", TEXT, "", "what is wrong with the line, separated by commas"),
+    Column("upper_limit", REAL, "mAngstrom", "three sigma upper limit"),
+    Column("integrated_width", REAL, "mAngstrom", "width by direct integration, neighbours taken out"),
+    Column("predicted_width", REAL, "mAngstrom", "width expected beforehand for the guess of the star"),
+    Column("depth", REAL, "", "central depth of the line"),
+    Column("line_fwhm", REAL, "km / s", "full width at half depth of the fitted line"),
+    Column("line_shift", REAL, "km / s", "fitted centre minus listed wavelength"),
+    Column("reduced_chi2", REAL, "", "reduced chi square of the fit"),
+    Column("order", COUNT, "", "order of the spectrum, from 0; -1 for none"),
+)
+
+SPECTRA = (
+    Column("star", TEXT, "", "name of the star"),
+    Column("file", TEXT, "", "name of the file"),
+    Column("status", TEXT, "", "measured or failed"),
+    Column("reason", TEXT, "", "why it failed"),
+    Column("velocity", REAL, "km / s", "velocity taken out of the wavelengths, positive when receding"),
+    Column("velocity_error", REAL, "km / s", "its error"),
+    Column("velocity_significance", REAL, "", "peak of the cross-correlation over its scatter elsewhere"),
+    Column("barycentric_correction", REAL, "km / s", "velocity of the observatory to be added; nan if not asked for"),
+    Column("vacuum_share", REAL, "", "drift of the velocity in units of what air and vacuum mixed up would do"),
+    Column("vacuum_share_error", REAL, "", "its error"),
+    Column("air_or_vacuum", TEXT, "", "how the wavelengths were understood"),
+    Column("signal_to_noise", REAL, "", "per pixel, median"),
+    Column("noise_source", TEXT, "", "where the errors of the pixels come from"),
+    Column("resolving_power", REAL, "", "of the header or said; nan if unknown"),
+    Column("broadening", REAL, "km / s", "full width at half maximum common to all lines, rotation not counted"),
+    Column("broadening_error", REAL, "km / s", "its error"),
+    Column("rotation", REAL, "km / s", "v sin i where it was fitted"),
+    Column("n_orders", COUNT, "", "orders of the spectrum"),
+    Column("n_lines", COUNT, "", "lines of the list"),
+    Column("n_measured", COUNT, "", "of these, with a width"),
+    Column("n_use", COUNT, "", "of these, good enough for a solve"),
+    Column("guess_teff", REAL, "K", "star for which the lines were predicted: effective temperature"),
+    Column("guess_logg", REAL, "dex", "gravity of that star"),
+    Column("guess_feh", REAL, "dex", "[Fe/H] of that star"),
+    Column("guess_vmic", REAL, "km / s", "microturbulence of that star"),
+    Column("guess_source", TEXT, "", "said, default, or how many times the widths were solved for it"),
+    Column("notes", TEXT, "", "what was decided on the way"),
+)
+
 TABLES: dict[str, tuple[Column, ...]] = {
     "stars": STARS,
     "lines": LINES,
@@ -293,6 +349,8 @@ TABLES: dict[str, tuple[Column, ...]] = {
     "input": INPUT,
     "outside": OUTSIDE,
     "truth": TRUTH,
+    "measurements": MEASUREMENTS,
+    "spectra": SPECTRA,
 }
 
 FILE_ENDINGS = {"stars": "", "lines": "_lines", "candidates": "_candidates", "decisions": "_decisions"}

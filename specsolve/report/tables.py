@@ -52,6 +52,8 @@ def star_row(solution: Solution) -> dict[str, Any]:
         "unmatched": "; ".join(solution.unmatched),
         "n_candidates": len(solution.candidates),
         "configuration": json.dumps(plain(solution.options), sort_keys=True),
+        "systematics": json.dumps(plain(solution.systematics)),
+        "outside": json.dumps(plain(solution.outside)),
     }
     errors_star, errors_list = _sigmas(solution.cov_star), _sigmas(solution.cov_list)
     for i, (name, _, _) in enumerate(PARAMETERS):
@@ -129,14 +131,6 @@ def tables_of(solutions: Sequence[Solution], provenance: Mapping[str, Any] | Non
     }
     tables = {kind: make_table(kind, _columnwise(kind, found), provenance) for kind, found in rows.items()}
     tables["lines"] = make_table("lines", joined, provenance)
-    tables["stars"].meta["systematics"] = {
-        f"{solution.star} {solution.treatment}": plain(solution.systematics)
-        for solution in solutions
-        if solution.systematics
-    }
-    tables["stars"].meta["outside"] = {
-        f"{solution.star} {solution.treatment}": plain(solution.outside) for solution in solutions if solution.outside
-    }
     return tables
 
 
