@@ -1,19 +1,22 @@
 """Line abundances, curves of growth and widths between the nodes of a grid.
 
 Along every axis (teff, logg, mh, vmic, dA) the interpolant of log10(W/lambda) is a piecewise cubic with continuous
-first derivatives (`specsolve.grid.stencil`). The nodes of a cell are gathered once and reused while theta stays in it.
+first derivatives (`specsolve.grid.stencil`). The value and the slopes of a node, its Hermite numbers, serve all cells
+around it; they are kept in units of a code, the slopes rounded to single precision (3e-8 dex), here as in the shared
+table of the compiled path (`specsolve.grid.node_table`), so that both agree to 1e-9.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import product
 
 import numpy as np
 
 from specsolve.constants import SOLAR_IRON
 from specsolve.errors import InputError, OutOfGridError
-from specsolve.grid.codes import decode
+from specsolve.grid.codes import FIRST_LOG_WIDTH, MISSING, STEP
 from specsolve.grid.inversion import dA_slope_matrices, invert_curves, values_on_curves
 from specsolve.grid.stencil import cell_of, hermite_basis, spline_slopes
 from specsolve.grid.store import ResponseGrid
@@ -33,6 +36,8 @@ FLAG_WORDS = {
     OUTSIDE_TABLE: "abundance_outside_table",
     MISSING_WIDTHS: "missing_node",
 }
+
+TABLE_AXES = 3  # node axes of the compiled table; a grid with others takes the plain path
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -93,14 +98,16 @@ class Interpolator:
         self.dA_slopes = dA_slopes_of(tuple(self.dA))
         self._cell: tuple[int, ...] | None = None
         self._numbers: np.ndarray | None = None
+        self._of_node: dict[tuple[int, ...], np.ndarray] = {}
         self._cell_flags = 0
-        self._cell_low = self._cell_width = np.empty(0)
         self._latest: tuple[tuple[float, ...], tuple[np.ndarray, np.ndarray]] | None = None
-        self._kernels = None
-        if compiled:
+        self._kernels = self._table = None
+        if compiled and len(self.node_positions) == TABLE_AXES:
             from specsolve.grid import kernels
+            from specsolve.grid.node_table import node_table
 
-            self._kernels = kernels
+            self._kernels, self._table = kernels, node_table(grid, treatment)
+            self._table.prepare(self.line_indices)
 
     def abundances(self, theta, log_reduced_widths) -> LineAbundances:
         """Abundance of each line from its width.
@@ -205,8 +212,6 @@ class Interpolator:
         node_cell, vmic_cell = cell[:-1], cell[-1]
         self._cell, self._numbers, self._cell_flags, self._latest = cell, None, 0, None
         positions = (*self.node_positions, self.vmic)
-        self._cell_low = np.array([x[c] for x, c in zip(positions, cell, strict=True)])
-        self._cell_width = np.array([x[min(c + 1, x.size - 1)] - x[c] for x, c in zip(positions, cell, strict=True)])
         vmic_edge = self.vmic.size > 1 and (vmic_cell == self.vmic.size - 2 or (vmic_cell == 0 and self.vmic[0] != 0.0))
         if self.stencils.at_edge(node_cell) or vmic_edge:
             self._cell_flags |= AT_EDGE
@@ -214,18 +219,42 @@ class Interpolator:
             self._cell_flags |= BESIDE_MISSING
         if not self.stencils.cell_valid(node_cell):
             return False
-        nodes, matrix = self.stencils.cell_map(node_cell)
-        vmic_map = self._vmic_map(vmic_cell)
-        if self._kernels is not None:
-            shape = (self.line_indices.size, len(matrix), len(vmic_map), self.dA.size)
-            self._numbers = np.full(shape, np.nan)
-            sparse = self.stencils.sparse_map(node_cell)
-            for codes, inside, place in self.grid.flat_blocks(self.treatment, self.line_indices):
-                self._kernels.gather_cell(codes, inside, place, *sparse, vmic_map, self._numbers)
+        if self._kernels is None:
+            numbers = self._cell_numbers(node_cell)
+            self._numbers = np.tensordot(self._vmic_map(vmic_cell), numbers, axes=(1, 2)).swapaxes(0, 1)
         else:
-            values = decode(self.grid.gather(self.treatment, tuple(nodes.T), self.line_indices))
-            self._numbers = apply_maps(matrix, vmic_map, values)
+            self._numbers = np.empty(0)  # the shared table holds them
         return True
+
+    def _cell_numbers(self, cell: tuple[int, ...]) -> np.ndarray:
+        """Hermite numbers of a cell in units of a code, shape (n_numbers, n_lines, n_vmic, n_dA).
+
+        Numbers ordered as the outer product over axes of (value lo, value hi, slope lo, slope hi).
+        """
+        active = self.stencils.active
+        kinds = self.stencils.kinds
+        numbers = []
+        for choice in product(range(4), repeat=len(active)):
+            node = list(cell)
+            for axis, kind in zip(active, choice, strict=True):
+                node[axis] += kind % 2
+            slopes = tuple(axis for axis, kind in zip(active, choice, strict=True) if kind >= 2)
+            numbers.append(self._node_numbers(tuple(node))[kinds.index(slopes)])
+        return np.stack(numbers).astype(np.float64)
+
+    def _node_numbers(self, node: tuple[int, ...]) -> np.ndarray:
+        """Value and slopes of a node in single precision, shape (2 ** n_active, n_lines, n_vmic, n_dA)."""
+        if node not in self._of_node:
+            nodes, matrix = self.stencils.node_map(node)
+            codes = self.grid.gather(self.treatment, tuple(nodes.T), self.line_indices)
+            numbers = (matrix @ codes.reshape(len(nodes), -1).astype(np.float64)).astype(np.float32)
+            numbers = numbers.reshape(len(matrix), *codes.shape[1:])
+            absent = codes == MISSING
+            for place in np.argwhere(absent.any(axis=0)):  # a number is nan only if a code that it needs is missing
+                needed = (matrix[:, absent[(slice(None), *place)]] != 0.0).any(axis=1)
+                numbers[(needed, *place)] = np.nan
+            self._of_node[node] = numbers
+        return self._of_node[node]
 
     def _vmic_map(self, cell: int) -> np.ndarray:
         if self.vmic.size == 1:
@@ -253,12 +282,6 @@ class Interpolator:
     def _vmic_basis(self, theta) -> tuple[np.ndarray, np.ndarray]:
         return self._axis_basis(self.vmic, self._cell[-1], theta[-1])
 
-    def _place(self, theta) -> tuple[np.ndarray, np.ndarray]:
-        """Where theta lies in its cell, and the width of the cell (0 along an axis of one node), an entry an axis."""
-        return (np.asarray(theta, dtype=np.float64) - self._cell_low) / np.where(
-            self._cell_width > 0, self._cell_width, 1.0
-        ), self._cell_width
-
     def _contract(self, theta) -> tuple[np.ndarray, np.ndarray]:
         """Curves and derivatives in the current cell; those of the latest theta are kept, for widths after abundances."""
         here = tuple(map(float, theta))
@@ -268,7 +291,9 @@ class Interpolator:
 
     def _contracted(self, theta) -> tuple[np.ndarray, np.ndarray]:
         if self._kernels is not None:
-            return self._kernels.curves(self._numbers, *self._place(theta))
+            return self._kernels.curves_at(
+                self._table.arrays, np.asarray(theta, dtype=np.float64), np.array(self._cell), self.line_indices
+            )
         value, slopes = self._basis(theta)
         vmic_value, vmic_slope = self._vmic_basis(theta)
         weights = np.concatenate(
@@ -279,7 +304,8 @@ class Interpolator:
             ]
         )
         shape = self._numbers.shape
-        curves = (weights @ self._numbers.reshape(shape[0] * shape[1], -1)).reshape(-1, *shape[2:])
+        curves = (weights @ self._numbers.reshape(shape[0] * shape[1], -1)).reshape(-1, *shape[2:]) * STEP
+        curves[0] += FIRST_LOG_WIDTH
         return curves[0], curves[1:]
 
 
@@ -293,30 +319,3 @@ def slopes_of(vmic: tuple[float, ...]) -> np.ndarray:
 def dA_slopes_of(dA: tuple[float, ...]) -> np.ndarray:
     """Slope matrices of the dA axis; see `specsolve.grid.inversion.dA_slope_matrices`."""
     return dA_slope_matrices(np.array(dA))
-
-
-def apply_maps(matrix: np.ndarray, vmic_map: np.ndarray, values: np.ndarray) -> np.ndarray:
-    """Hermite numbers of a cell; a number is nan only if a value that it needs is.
-
-    Parameters
-    ----------
-    matrix : ndarray, shape (n_numbers, n_nodes)
-    vmic_map : ndarray, shape (n_vmic_numbers, n_vmic)
-    values : ndarray, shape (n_nodes, n_lines, n_vmic, n_dA)
-
-    Returns
-    -------
-    ndarray, shape (n_numbers, n_vmic_numbers, n_lines, n_dA)
-    """
-
-    def mapped(node_map, line_map, array):
-        at_vmic = np.tensordot(array, line_map, axes=(2, 1)).transpose(0, 3, 1, 2)  # (node, vmic number, line, dA)
-        return (node_map @ at_vmic.reshape(len(array), -1)).reshape(len(node_map), *at_vmic.shape[1:])
-
-    absent = np.isnan(values)
-    if not absent.any():
-        return mapped(matrix, vmic_map, values)
-    numbers = mapped(matrix, vmic_map, np.where(absent, 0.0, values))
-    touched = mapped((matrix != 0).astype(float), (vmic_map != 0).astype(float), absent.astype(float))
-    numbers[touched > 0] = np.nan
-    return numbers

@@ -152,8 +152,7 @@ class NodeStencils:
         for size in range(1, len(self.active) + 1):
             for axes in combinations(self.active, size):
                 self._usable[axes] = has_neighbour(self._usable[axes[:-1]], axes[-1])
-        self._cells: dict[tuple[int, ...], tuple[np.ndarray, np.ndarray]] = {}
-        self._sparse: dict[tuple[int, ...], tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]] = {}
+        self._nodes: dict[tuple[int, ...], tuple[np.ndarray, np.ndarray]] = {}
         self._stencils: dict[tuple[int, int, int, bytes], list[tuple[int, float]]] = {}
 
     @property
@@ -182,41 +181,53 @@ class NodeStencils:
         )
         return not bool(self.valid[window].all())
 
-    def cell_map(self, cell: tuple[int, ...]) -> tuple[np.ndarray, np.ndarray]:
-        """Nodes and matrix that give the Hermite numbers of a cell.
+    def node_map(self, node: tuple[int, ...]) -> tuple[np.ndarray, np.ndarray]:
+        """Nodes and matrix that give the Hermite numbers of one node: its value, slopes and mixed slopes.
 
         Returns
         -------
         nodes : ndarray of int, shape (n_nodes, n_axes)
-        matrix : ndarray, shape (n_numbers, n_nodes)
-            Numbers ordered as the outer product over axes of (value lo, value hi, slope lo, slope hi).
+        matrix : ndarray, shape (2 ** n_active, n_nodes)
+            Numbers ordered as the outer product over the axes that have a slope of (value, slope).
         """
-        if cell not in self._cells:
-            rows = []
-            for choice in product(range(4), repeat=len(self.active)):
-                node = list(cell)
-                for axis, kind in zip(self.active, choice, strict=True):
-                    node[axis] += kind % 2
-                axes = tuple(axis for axis, kind in zip(self.active, choice, strict=True) if kind >= 2)
-                rows.append(self._weights(tuple(node), axes, PURE_POINTS if len(axes) == 1 else MIXED_POINTS))
-            nodes = sorted({node for row in rows for node in row})
-            place = {node: i for i, node in enumerate(nodes)}
+        if node not in self._nodes:
+            rows = [self.node_weights(node, axes) for axes in self.kinds]
+            nodes = sorted({source for row in rows for source in row})
+            place = {source: i for i, source in enumerate(nodes)}
             matrix = np.zeros((len(rows), len(nodes)))
             for i, row in enumerate(rows):
-                for node, weight in row.items():
-                    matrix[i, place[node]] = weight
-            self._cells[cell] = np.array(nodes), matrix
-        return self._cells[cell]
+                for source, weight in row.items():
+                    matrix[i, place[source]] = weight
+            self._nodes[node] = np.array(nodes), matrix
+        return self._nodes[node]
 
-    def sparse_map(self, cell: tuple[int, ...]) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-        """`cell_map` for kernels: flat node numbers; row starts, columns and weights of the non-zero elements."""
-        if cell not in self._sparse:
-            nodes, matrix = self.cell_map(cell)
-            rows, columns = np.nonzero(matrix)
-            starts = np.searchsorted(rows, np.arange(len(matrix) + 1))
-            flat = np.ravel_multi_index(tuple(nodes.T), self.valid.shape)
-            self._sparse[cell] = flat, starts.astype(np.int64), columns.astype(np.int64), matrix[rows, columns]
-        return self._sparse[cell]
+    @property
+    def kinds(self) -> list[tuple[int, ...]]:
+        """Axes along which each number of a node is a slope, in the order of `node_map`."""
+        return [
+            tuple(axis for axis, slope in zip(self.active, choice, strict=True) if slope)
+            for choice in product((0, 1), repeat=len(self.active))
+        ]
+
+    def node_weights(self, node: tuple[int, ...], axes: tuple[int, ...]) -> dict[tuple[int, ...], float]:
+        """Weights of the node values in the (mixed) slope of a node along some axes; its value for no axes."""
+        return self._weights(node, axes, PURE_POINTS if len(axes) == 1 else MIXED_POINTS)
+
+    def in_whole_cell(self) -> np.ndarray:
+        """True at nodes that are a corner of at least one cell without a missing corner; bool, shape of the nodes."""
+        cells = self.whole_cells()
+        found = np.zeros(self.valid.shape, dtype=bool)
+        for corner in self.corners((0,) * len(self.positions)):
+            found[tuple(slice(c, c + n) for c, n in zip(corner, cells.shape, strict=True))] |= cells
+        return found
+
+    def whole_cells(self) -> np.ndarray:
+        """True for cells without a missing corner; bool, a cell an interval (one for an axis of one node)."""
+        shape = tuple(max(x.size - 1, 1) for x in self.positions)
+        cells = np.ones(shape, dtype=bool)
+        for corner in self.corners((0,) * len(self.positions)):
+            cells &= self.valid[tuple(slice(c, c + n) for c, n in zip(corner, shape, strict=True))]
+        return cells
 
     def _weights(self, node: tuple[int, ...], axes: tuple[int, ...], n_points: int) -> dict[tuple[int, ...], float]:
         if not axes:

@@ -220,6 +220,11 @@ class ResponseGrid:
         return {}
 
     @cached_property
+    def node_tables(self) -> dict[str, Any]:
+        """Tables of the compiled path by treatment, see `specsolve.grid.node_table`."""
+        return {}
+
+    @cached_property
     def _mapped(self) -> dict[str, np.ndarray]:
         return {block.file: self.codes(block) for block in self.blocks}
 
