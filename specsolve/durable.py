@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import errno
 import os
+from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
+from typing import BinaryIO
 
 from specsolve.errors import OutputError
 
@@ -47,6 +49,41 @@ def write_atomically(path: Path, content: bytes) -> None:
             aside.unlink(missing_ok=True)
             raise
         sync_folder(path.parent)
+
+
+@contextmanager
+def writing_aside(path: Path) -> Iterator[BinaryIO]:
+    """As `write_atomically`, for what is written piece by piece: `path` is replaced when the block ends well.
+
+    Raises
+    ------
+    OutputError
+        Disk full, no permission; nothing is left aside.
+    """
+    aside = path.with_name(f"{path.name}.{os.getpid()}.aside")
+    with output_errors(path):
+        try:
+            with open(aside, "wb") as stream:
+                yield stream
+                stream.flush()
+                os.fsync(stream.fileno())
+            os.replace(aside, path)
+        finally:
+            aside.unlink(missing_ok=True)
+        sync_folder(path.parent)
+
+
+def append_durably(stream: BinaryIO, content: bytes, path: Path) -> None:
+    """Add to the end of an open file and flush it to the disk; a crash leaves a beginning of `content`, or all of it.
+
+    Raises
+    ------
+    OutputError
+    """
+    with output_errors(path):
+        stream.write(content)
+        stream.flush()
+        os.fsync(stream.fileno())
 
 
 def sync_folder(folder: Path) -> None:

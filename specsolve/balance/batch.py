@@ -4,13 +4,13 @@ from __future__ import annotations
 
 import logging
 import traceback
-from collections.abc import Iterable, Iterator, Mapping, Sequence
-from concurrent.futures import Executor, as_completed
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from concurrent.futures import FIRST_COMPLETED, Executor, wait
 from dataclasses import dataclass, field, replace
-from pathlib import Path
+from itertools import islice
 from typing import Any
 
-from specsolve.errors import SpecsolveError
+from specsolve.errors import SpecsolveError, StoreError
 from specsolve.grid.perturbed import perturbed_grid
 
 from .assemble import unsolved
@@ -26,7 +26,9 @@ from .zero_points import ZeroPoints
 log = logging.getLogger(__name__)
 
 COMPILED_FROM = 50  # stars; below it loading the compiled kernels costs more than they spare
-STARS_PER_BLOCK = 8  # a block should take 0.5 s or more
+STARS_PER_BLOCK = 32  # a block should take 0.5 s or more
+LEAST_BLOCKS = 8  # where stars are few, they are shared out finely
+BLOCKS_IN_FLIGHT = 64  # submitted and not yet given back
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -83,30 +85,65 @@ def solve_stream(
     *,
     outside: Any = None,
     executor: Executor | None = None,
-) -> Iterator[tuple[int, Solution]]:
-    """(place in the input, Solution) as stars are finished, so that an interrupted run keeps what it has."""
+    places: Sequence[int] | None = None,
+    then: Callable[[Solution], Any] | None = None,
+) -> Iterator[tuple[int, Any]]:
+    """(place in the input, Solution) as stars are finished, so that an interrupted run keeps what it has.
+
+    Parameters
+    ----------
+    stars, grid, setting, outside, executor
+        As for `solve_many`. With an executor there are never more than `BLOCKS_IN_FLIGHT` blocks in its hands.
+    places : sequence of int, optional
+        Solve only the stars at these places; the numbers are those of a run over all of them.
+    then : callable, optional
+        A module-level function applied to each `Solution` where it is made; its value is given instead.
+    """
     setting = setting or Setting()
     if len(stars) >= COMPILED_FROM:
         setting = replace(setting, compiled=True)
-    known = [outside_of(star, outside) for star in stars]
+    wanted = range(len(stars)) if places is None else list(places)
     if executor is None:
-        for i, star in enumerate(stars):
-            yield i, solve_star(star, grid, setting, known[i])
+        for i in wanted:
+            solution = solve_star(stars[i], grid, setting, outside_of(stars[i], outside))
+            yield i, solution if then is None else then(solution)
         return
-    blocks = [range(first, min(first + STARS_PER_BLOCK, len(stars))) for first in range(0, len(stars), STARS_PER_BLOCK)]
-    futures = {
-        executor.submit(
-            _solve_block, str(grid.directory), setting, [stars[i] for i in block], [known[i] for i in block]
-        ): block
-        for block in blocks
-    }
+    size = block_size(len(wanted))
+    blocks = iter([wanted[first : first + size] for first in range(0, len(wanted), size)])
+    pending: dict[Any, Sequence[int]] = {}
+
+    def submit(block: Sequence[int]) -> None:
+        known = [outside_of(stars[i], outside) for i in block]
+        task = executor.submit(
+            _solve_block, str(grid.directory), grid.identity, setting, [stars[i] for i in block], known, then
+        )
+        pending[task] = block
+
     try:
-        for future in as_completed(futures):
-            yield from zip(futures[future], future.result(), strict=True)
+        for block in islice(blocks, BLOCKS_IN_FLIGHT):
+            submit(block)
+        while pending:
+            finished, _ = wait(pending, return_when=FIRST_COMPLETED)
+            for future in finished:
+                block = pending.pop(future)
+                yield from zip(block, future.result(), strict=True)
+                for further in islice(blocks, 1):
+                    submit(further)
     except BaseException:
-        for future in futures:
+        for future in pending:
             future.cancel()
         raise
+
+
+def block_size(n_stars: int) -> int:
+    """Stars in a block: large enough to take half a second, small enough that all workers have work.
+
+    Examples
+    --------
+    >>> block_size(10), block_size(10000)
+    (1, 32)
+    """
+    return min(max(n_stars // LEAST_BLOCKS, 1), STARS_PER_BLOCK)
 
 
 def outside_of(star: Star, outside: Any) -> tuple[Outside, ...]:
@@ -150,20 +187,29 @@ def solve_star(star: Star, grid: Any, setting: Setting, known: tuple[Outside, ..
 
 
 def _solve_block(
-    directory: str, setting: Setting, stars: list[Star], known: list[tuple[Outside, ...]]
-) -> list[Solution]:
-    grid = _open_once(directory)
-    return [solve_star(star, grid, setting, terms) for star, terms in zip(stars, known, strict=True)]
+    directory: str,
+    identity: str,
+    setting: Setting,
+    stars: list[Star],
+    known: list[tuple[Outside, ...]],
+    then: Callable[[Solution], Any] | None,
+) -> list[Any]:
+    grid = _open_once(directory, identity)
+    solutions = (solve_star(star, grid, setting, terms) for star, terms in zip(stars, known, strict=True))
+    return [solution if then is None else then(solution) for solution in solutions]
 
 
-_OPEN: dict[str, Any] = {}
+_OPEN: dict[tuple[str, str], Any] = {}
 
 
-def _open_once(directory: str) -> Any:
-    """The grid of a worker process, opened at its first block."""
-    if directory not in _OPEN:
+def _open_once(directory: str, identity: str) -> Any:
+    """The grid of a worker process, opened at its first block; StoreError if it is not the one meant."""
+    if (directory, identity) not in _OPEN:
         from specsolve.grid.store import ResponseGrid
 
+        grid = ResponseGrid.open(directory, verify=False)
+        if grid.identity != identity:
+            raise StoreError(f"{directory} is not the grid of this run; has it changed?", path=directory)
         _OPEN.clear()
-        _OPEN[directory] = ResponseGrid.open(Path(directory), verify=False)
-    return _OPEN[directory]
+        _OPEN[directory, identity] = grid
+    return _OPEN[directory, identity]

@@ -2,8 +2,8 @@
 
 A perturbation p changes every width by p R, with R = d log10(W/lambda) / dp computed by the full engine (new opacity
 tables, new atmospheres, new line formation) at some of the grid's nodes. Between these, R follows a cubic
-radial-basis function in (teff, logg, mh), exact at the nodes, and polynomials in vmic and dA. All nodes of a grid lie
-inside the hull of the nodes that R was computed at, so nothing is extrapolated.
+radial-basis function in (teff, logg, mh), exact at the nodes, and polynomials in vmic and dA. Outside the hull of the
+nodes that R was computed at there is none: nothing is extrapolated.
 
 - "alpha": p = [alpha/Fe] minus the law that the atmospheres follow [dex];
 - "missing_opacity": p = power of the multiplier minus one (see `specsolve.atmosphere.blanketing_calibration`).
@@ -31,6 +31,7 @@ PACKAGED = Path(__file__).resolve().parent.parent / "data" / "perturbations" / F
 STEP = 1e-4  # of the stored integers [dex per unit of p]
 MISSING = np.iinfo(np.int16).min  # the integer of a response that could not be computed
 NODE_SCALE = np.array([500.0, 1.0, 0.7])  # K, dex, dex: one unit of distance between nodes
+HULL_TOLERANCE = 1e-6
 ALPHA, MISSING_OPACITY = "alpha", "missing_opacity"
 # How far the response was computed for, and compared with the full engine: beyond, first order is not tested.
 TESTED_RANGE: Mapping[str, float] = {ALPHA: 0.3, MISSING_OPACITY: 1.0}
@@ -44,7 +45,7 @@ class Perturbations:
     Attributes
     ----------
     header : dict
-        names, nodes, vmic, dA, line keys, identity of the atmospheres, provenance.
+        nodes by name of the perturbation, vmic, dA, line keys, identity of the atmospheres.
     responses : dict of str to ndarray of int16, shape (n_nodes, n_lines, n_vmic, n_dA)
         By the name of the perturbation, in steps of `STEP`.
 
@@ -90,9 +91,9 @@ class Perturbations:
         return tuple(self.responses)
 
     @cached_property
-    def nodes(self) -> np.ndarray:
-        """teff, logg, mh of the nodes, shape (n_nodes, 3)."""
-        return np.array(self.header["nodes"], float)
+    def splines(self) -> dict[str, NodeSpline]:
+        """Interpolation between the nodes, by name."""
+        return {name: NodeSpline(np.array(nodes, float)) for name, nodes in self.header["nodes"].items()}
 
     @cached_property
     def keys(self) -> tuple[str, ...]:
@@ -103,26 +104,6 @@ class Perturbations:
         """Position of each line key, -1 where there is none."""
         place = {key: i for i, key in enumerate(self.keys)}
         return np.array([place.get(str(key), -1) for key in keys], dtype=np.int64)
-
-    @cached_property
-    def _inverse(self) -> np.ndarray:
-        """From values at the nodes to the coefficients of radial functions and polynomial."""
-        x = self.nodes / NODE_SCALE
-        polynomial = _polynomial_terms(x)
-        n, m = polynomial.shape
-        system = np.zeros((n + m, n + m))
-        system[:n, :n] = _radial(x, x)
-        system[:n, n:], system[n:, :n] = polynomial, polynomial.T
-        return np.linalg.inv(system)[:, :n]
-
-    def node_operator(self, points: np.ndarray) -> np.ndarray:
-        """Weights of the nodes at points (n_points, 3) of (teff, logg, mh), shape (n_points, n_nodes).
-
-        The cubic spline |x - x_i|^3 with a quadratic polynomial (for example Wendland 2005, Scattered Data
-        Approximation, chapter 8): exact at the nodes, exact everywhere for a quadratic.
-        """
-        x = np.atleast_2d(points) / NODE_SCALE
-        return np.hstack([_radial(x, self.nodes / NODE_SCALE), _polynomial_terms(x)]) @ self._inverse
 
     @cached_property
     def _flat(self) -> dict[str, np.ndarray]:
@@ -155,7 +136,7 @@ class Perturbations:
         >>> stored = Perturbations.packaged()                                   # doctest: +SKIP
         >>> stored.response("alpha", (5000.0, 2.0, -1.0, 1.5), dA, stored.line_places(keys))  # doctest: +SKIP
         """
-        weights = self.node_operator(np.asarray(theta, float)[None, :3])[0].astype(np.float32)
+        weights = self.splines[name].weights(np.asarray(theta, float)[None, :3])[0].astype(np.float32)
         at_point = (weights @ self._flat[name]).reshape(self.responses[name].shape[1:])[places].astype(float)
         vmic = polynomial_weights(self.header["vmic"], np.array([theta[3]]))[0]
         curve = np.einsum("lvd,v->ld", at_point, vmic)
@@ -164,10 +145,15 @@ class Perturbations:
         return np.where(inside, np.einsum("ld,ld->l", curve, along), np.nan)
 
     def expanded(self, name: str, grid: Any) -> np.ndarray:
-        """R at all nodes of a grid, float32 of shape (n_nodes_of_grid, n_lines, n_vmic, n_dA); grid order of lines."""
+        """R at all nodes of a grid, float32 of shape (n_nodes_of_grid, n_lines, n_vmic, n_dA), in its order of lines.
+
+        nan at nodes outside the hull of those that R was computed at.
+        """
         axes = [np.asarray(axis.values, float) for axis in grid.node_axes]
         points = np.stack(np.meshgrid(*axes, indexing="ij"), axis=-1).reshape(-1, 3)
-        operator = self.node_operator(points).astype(np.float32)
+        operator = self.splines[name].weights(points)
+        operator[~self.splines[name].holds(points)] = np.nan
+        operator = operator.astype(np.float32)
         line_axes = [np.asarray(axis.values, float) for axis in grid.line_axes]
         vmic = polynomial_weights(self.header["vmic"], line_axes[0]).astype(np.float32)
         dA = polynomial_weights(self.header["dA"], line_axes[1]).astype(np.float32)
@@ -176,6 +162,44 @@ class Perturbations:
         at_nodes = (operator @ stored.reshape(n_nodes, -1)).reshape(len(points) * n_lines, *stored.shape[2:])
         full = np.matmul(np.matmul(vmic, at_nodes), dA.T)
         return full.reshape(len(points), n_lines, *full.shape[1:])
+
+
+class NodeSpline:
+    """The cubic spline |x - x_i|^3 with a quadratic polynomial through values at scattered nodes.
+
+    Exact at the nodes, and everywhere for a quadratic; see for example Wendland 2005, Scattered Data Approximation,
+    chapter 8.
+
+    Parameters
+    ----------
+    nodes : ndarray, shape (n_nodes, 3)
+        teff [K], logg, mh.
+    """
+
+    def __init__(self, nodes: np.ndarray) -> None:
+        self.nodes = nodes
+        self._x = nodes / NODE_SCALE
+        polynomial = _polynomial_terms(self._x)
+        n, m = polynomial.shape
+        system = np.zeros((n + m, n + m))
+        system[:n, :n] = _radial(self._x, self._x)
+        system[:n, n:], system[n:, :n] = polynomial, polynomial.T
+        self._inverse = np.linalg.inv(system)[:, :n]
+
+    def weights(self, points: np.ndarray) -> np.ndarray:
+        """Weights of the nodes at points (n_points, 3), shape (n_points, n_nodes)."""
+        x = np.atleast_2d(points) / NODE_SCALE
+        return np.hstack([_radial(x, self._x), _polynomial_terms(x)]) @ self._inverse
+
+    def holds(self, points: np.ndarray) -> np.ndarray:
+        """Whether points (n_points, 3) lie inside the hull of the nodes; bool, shape (n_points,)."""
+        return self._hull.find_simplex(np.atleast_2d(points) / NODE_SCALE, tol=HULL_TOLERANCE) >= 0
+
+    @cached_property
+    def _hull(self) -> Any:
+        from scipy.spatial import Delaunay
+
+        return Delaunay(self._x)
 
 
 def _radial(x: np.ndarray, nodes: np.ndarray) -> np.ndarray:

@@ -9,6 +9,8 @@ from __future__ import annotations
 
 import argparse
 import sys
+from dataclasses import replace
+from functools import lru_cache
 from pathlib import Path
 
 import numpy as np
@@ -20,14 +22,15 @@ from specsolve.atmosphere.model import Atmosphere
 from specsolve.atmosphere.store import AtmosphereStore
 from specsolve.atmosphere.structure import solve_structure
 from specsolve.durable import write_atomically
-from specsolve.errors import SpecsolveError
 from specsolve.grid.engine import lte_engine
 from specsolve.grid.perturbations import ALPHA, FILE_NAME, MISSING_OPACITY, write_perturbations
 from specsolve.grid.store import ResponseGrid
-from specsolve.matter.composition import Composition, alpha_law, composition_for
+from specsolve.matter.composition import alpha_law, composition_for
 
 ALPHA_STEP = 0.2  # dex
 POWER_STEP = 1.0
+SHARES = (1.0, 0.5, 0.25)  # of a step, where the whole one does not converge
+LOGG_STEP = 0.5
 TEFF = np.arange(4000.0, 7000.1, 500.0)
 MIDDLE_LOGG = (1.5, 3.0, 4.0)  # besides the lowest and the highest that the atmospheres have
 MH = (-3.0, -2.0, -1.0, -0.5, 0.0, 0.5)
@@ -58,49 +61,66 @@ def alpha_table(mh: float, alpha: float, work: Path) -> Blanketing:
     return load_blanketing(mh, folder)
 
 
-def changed(
-    original: Atmosphere, composition: Composition, table: Blanketing, power: float, work: Path, name: str
-) -> Atmosphere:
-    """The atmosphere of a node converged anew with another composition or multiplier, kept in a folder."""
-    path = work / f"{name}_{original.teff:g}_{original.logg:g}_{original.mh:+g}.npz"
-    model = read_part(path)
-    if model is None:
-        model = solve_structure(original.teff, original.logg, composition, table, start=original, power=power)
-        write_atomically(path, part_bytes(model))
-    if model.status != "converged":
-        print(f"{path.name}: {model.reason}", file=sys.stderr)
-    return model
+def between(first: Blanketing, second: Blanketing, share: float) -> Blanketing:
+    """Opacity table that lies `share` of the way from the first to the second, in the logarithm."""
+    log_opacity = first.log_opacity + np.float32(share) * (second.log_opacity - first.log_opacity)
+    return replace(first, log_opacity=log_opacity)
 
 
-def responses(grid: ResponseGrid, store: AtmosphereStore, work: Path) -> tuple[list, dict[str, np.ndarray]]:
-    """Nodes, and the responses of all lines there.
+def changed(original: Atmosphere, name: str, work: Path) -> tuple[Atmosphere, float] | None:
+    """The atmosphere of a node converged anew after a step of a perturbation, and the step; kept in a folder.
 
-    Raises
-    ------
-    SpecsolveError
-        If more than a few atmospheres do not converge.
+    Beside the limit of radiation pressure the whole step may not converge: then half or a quarter of it is taken.
+    None if none converges.
+    """
+    teff, logg, mh = original.teff, original.logg, original.mh
+    for share in SHARES:
+        path = work / f"{name}_{share:g}_{teff:g}_{logg:g}_{mh:+g}.npz"
+        model = read_part(path)
+        if model is None:
+            composition, table, power = composition_for(mh), _packaged_table(mh), 1.0
+            if name == ALPHA:
+                alpha = alpha_law(mh) + ALPHA_STEP
+                table = between(table, _alpha_table(mh, alpha, work), share)
+                composition = composition_for(mh, alpha_law(mh) + share * ALPHA_STEP)
+            else:
+                power += share * POWER_STEP
+            model = solve_structure(teff, logg, composition, table, start=original, power=power)
+            write_atomically(path, part_bytes(model))
+        if model.status == "converged":
+            return model, share * (ALPHA_STEP if name == ALPHA else POWER_STEP)
+    return None
+
+
+_packaged_table = lru_cache(maxsize=1)(load_blanketing)
+_alpha_table = lru_cache(maxsize=1)(alpha_table)
+
+
+def responses(
+    grid: ResponseGrid, store: AtmosphereStore, work: Path, name: str
+) -> tuple[list[tuple[float, float, float]], np.ndarray]:
+    """Nodes, and the responses of all lines there, shape (n_nodes, n_lines, n_vmic, n_dA).
+
+    A node that converges at no step is left out, and the one above it in gravity taken.
     """
     widths = lte_engine().widths
     axes = (np.array(VMIC), np.array(DA))
-    nodes, found = [], {ALPHA: [], MISSING_OPACITY: []}
-    wanted = coarse_nodes(store)
-    for teff, logg, mh in wanted:
-        original = store.get(teff, logg, mh)
-        alpha = alpha_law(mh) + ALPHA_STEP
-        richer = changed(original, composition_for(mh, alpha), alpha_table(mh, alpha, work), 1.0, work, ALPHA)
-        thicker = changed(
-            original, composition_for(mh), load_blanketing(mh), 1.0 + POWER_STEP, work, MISSING_OPACITY
-        )  # fmt: skip
-        if "failed" in (richer.status, thicker.status):
+    found: dict[tuple[float, float, float], np.ndarray] = {}
+    waiting = coarse_nodes(store)
+    while waiting:
+        teff, logg, mh = node = waiting.pop(0)
+        original = store.get(*node)
+        moved = changed(original, name, work)
+        if moved is None:
+            denser = (teff, logg + LOGG_STEP, mh)
+            print(f"{name}: {node} does not converge, {denser} instead", file=sys.stderr)
+            if denser not in found and denser not in waiting:
+                waiting.insert(0, denser)
             continue
-        base = widths(original, grid.lines, *axes)
-        nodes.append((teff, logg, mh))
-        found[ALPHA].append((widths(richer, grid.lines, *axes) - base) / ALPHA_STEP)
-        found[MISSING_OPACITY].append((widths(thicker, grid.lines, *axes) - base) / POWER_STEP)
-        print(f"{len(nodes)}/{len(wanted)}", file=sys.stderr, flush=True)
-    if len(nodes) < 0.95 * len(wanted):
-        raise SpecsolveError(f"only {len(nodes)} of {len(wanted)} atmospheres converged")
-    return nodes, {name: np.array(values) for name, values in found.items()}
+        model, step = moved
+        found[node] = (widths(model, grid.lines, *axes) - widths(original, grid.lines, *axes)) / step
+        print(f"{name}: {len(found)} done, {len(waiting)} to go", file=sys.stderr, flush=True)
+    return list(found), np.array(list(found.values()))
 
 
 def main(arguments: list[str] | None = None) -> None:
@@ -116,9 +136,11 @@ def main(arguments: list[str] | None = None) -> None:
     store = AtmosphereStore.packaged()
     if store.identity != grid.atmospheres_identity:
         raise SystemExit("the grid was made on other atmospheres than the packaged ones")
-    nodes, found = responses(grid, store, options.work)
+    nodes, found = {}, {}
+    for name in (ALPHA, MISSING_OPACITY):
+        nodes[name], found[name] = responses(grid, store, options.work, name)
     header = {
-        "nodes": [list(node) for node in nodes],
+        "nodes": {name: [list(node) for node in of_one] for name, of_one in nodes.items()},
         "vmic": list(VMIC),
         "dA": list(DA),
         "lines": grid.lines.key.tolist(),

@@ -19,11 +19,11 @@ import numpy as np
 from specsolve.errors import UsageError
 from specsolve.grid.codes import CODE_TYPE, MISSING, STEP
 from specsolve.grid.perturbations import ALPHA, MISSING_OPACITY, Perturbations
-from specsolve.grid.stencil import NodeStencils
 from specsolve.grid.store import Block, ResponseGrid
 from specsolve.matter.composition import alpha_law
 
 KEPT_GRIDS = 3  # moved grids kept in memory; about 30 MB each
+NO_RESPONSE = "no response to [alpha/Fe] or the missing opacity: the changed atmosphere did not converge"
 ALPHA_LIMITS = (-0.5, 1.0)  # dex; beyond, no star is known and no response is tested (common practice, no source)
 
 
@@ -55,9 +55,20 @@ class PerturbedGrid(ResponseGrid):
         text = f"{self.unperturbed.identity} {self.alpha!r} {self.missing_opacity!r}"
         return hashlib.sha256(text.encode()).hexdigest()
 
-    def stencils(self, treatment: str) -> NodeStencils:
-        """Those of the grid on disk: the nodes are the same."""
-        return self.unperturbed.stencils(treatment)
+    def missing(self, treatment: str) -> dict[tuple[int, ...], str]:
+        """Reason by node index of the nodes that have no widths, those without a response among them."""
+        found = dict(self.unperturbed.missing(treatment))
+        for node in np.argwhere(~self._responds):
+            found.setdefault(tuple(int(i) for i in node), NO_RESPONSE)
+        return found
+
+    @cached_property
+    def _responds(self) -> np.ndarray:
+        """Nodes at which all responses that are asked for are known; bool, shape (teff, logg, mh)."""
+        known = np.ones(int(np.prod(self.node_shape)), dtype=bool)
+        for name in self.steps():
+            known &= np.isfinite(responses_at_nodes(self.unperturbed, name)[:, 0, 0, 0])
+        return known.reshape(self.node_shape)
 
     def codes(self, block: Block) -> np.ndarray:
         """Codes of a block, shape (teff, logg, mh, line, vmic, dA)."""
