@@ -1,0 +1,132 @@
+"""The common broadening of a spectrum, fitted to its cleanest lines: a Gaussian, and rotation where it shows."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from . import system as systems
+from .broadening import FWHM_PER_SIGMA, LIGHT_SPEED_KM_S, ROTATION_TO_SIGMA, total_fwhm, transform
+from .fit import Fit, pixel_range
+from .predict import N_TABLE, TABLE_STEP, Prediction
+
+MOST_LINES = 60
+DEPTHS = (0.04, 0.7)  # central depths of the lines that serve
+LARGEST_CONTAMINATION = 0.25
+ROTATION_GAIN = 16.0
+"""Rotation is taken where it lowers chi square by this much (4 sigma), after scaling to the residuals."""
+LARGEST_FWHM = 45.0  # km/s
+
+
+@dataclass(frozen=True)
+class Broadening:
+    """Common broadening.
+
+    Attributes
+    ----------
+    fwhm, fwhm_error : float
+        Gaussian part [km/s]; the error is nan where too few lines served.
+    vsini : float
+        [km/s]; 0 where rotation does not show.
+    n_lines : int
+    """
+
+    fwhm: float
+    fwhm_error: float
+    vsini: float
+    n_lines: int
+
+
+def fit_broadening(fit: Fit, prediction: Prediction, instrument: float) -> Broadening:
+    """Fit the common broadening with free strengths, shifts as they are.
+
+    Parameters
+    ----------
+    fit : Fit
+    prediction : Prediction
+    instrument : float
+        Full width of the instrument [km/s]; nan if unknown.
+    """
+    from scipy.optimize import minimize, minimize_scalar
+
+    data = _pixels(fit)
+    if data is None:
+        return Broadening(fit.fwhm, float("nan"), fit.vsini, 0)
+    rows, row_of, share, velocity, line, depth, weight = data
+    transforms = prediction.shapes[rows]
+    n_lines = int(line.max()) + 1
+
+    def chi_square(fwhm: float, vsini: float) -> float:
+        kernel = transform(2 * N_TABLE, TABLE_STEP, fwhm=max(fwhm, 0.3), vsini=vsini)
+        table = np.fft.irfft(transforms * kernel, axis=1)[:, :N_TABLE]
+        x = np.abs(velocity) / TABLE_STEP
+        i = np.minimum(x.astype(int), N_TABLE - 2)
+        t = x - i
+        phi = (1.0 - share) * ((1.0 - t) * table[row_of, i] + t * table[row_of, i + 1])
+        phi += share * ((1.0 - t) * table[row_of + 1, i] + t * table[row_of + 1, i + 1])
+        own = np.bincount(line, weight * phi * phi, n_lines)
+        mixed = np.bincount(line, weight * phi * depth, n_lines)
+        level = np.where(own > 0.0, mixed / np.maximum(own, 1e-30), 0.0)
+        difference = depth - level[line] * phi
+        return float(np.sum(2.0 * (np.sqrt(1.0 + weight * difference**2) - 1.0)))  # soft: a blend counts linearly
+
+    low = 0.5 if not np.isfinite(instrument) else 0.8 * instrument
+    best = minimize_scalar(
+        chi_square, bounds=(low, LARGEST_FWHM), args=(0.0,), method="bounded", options={"xatol": 0.02}
+    )
+    fwhm, vsini, chi2 = float(best.x), 0.0, float(best.fun)
+    scale = max(1.0, chi2 / max(1, depth.size - n_lines))
+    floor = instrument if np.isfinite(instrument) else 2.0
+    excess = np.sqrt(max(fwhm**2 - floor**2, 0.0)) / (FWHM_PER_SIGMA * ROTATION_TO_SIGMA)
+    if excess > 0.5 * floor:
+        two = minimize(
+            lambda p: chi_square(np.hypot(low, p[0]), abs(p[1])),
+            [0.3 * floor, excess],
+            method="Nelder-Mead",
+            options={"xatol": 0.05, "fatol": 0.1, "maxfev": 60},
+        )
+        if (chi2 - two.fun) / scale > ROTATION_GAIN:
+            fwhm, vsini, chi2 = float(np.hypot(low, two.x[0])), float(abs(two.x[1])), float(two.fun)
+    h = 0.03 * fwhm
+    curvature = (chi_square(fwhm + h, vsini) - 2.0 * chi_square(fwhm, vsini) + chi_square(fwhm - h, vsini)) / h**2
+    error = float(np.sqrt(2.0 * scale / curvature)) if curvature > 0.0 else float("nan")
+    return Broadening(fwhm, error, vsini, n_lines)
+
+
+def _pixels(fit: Fit):
+    """Pixels of the lines that serve, with the depths of all others taken out; None with fewer than 5 lines."""
+    lines, own = fit.lines, fit.targets
+    own = own[lines.own[own] >= 0]
+    peak = lines.width[own] * fit.shapes[lines.row[own], 0]
+    total = total_fwhm(fit.fwhm, fit.vsini)
+    alone = systems.depth_of(fit.wavelength, fit.order, lines, fit.shapes, fit.reach, own)
+    others = fit.depth - alone
+    quality = np.full(own.size, -np.inf)
+    ranges = [pixel_range(fit, j, 0.9 * total + 3.0) for j in own]
+    for k, (low, high) in enumerate(ranges):
+        if not DEPTHS[0] < peak[k] < DEPTHS[1] or high - low < 5 or not fit.good[low:high].all():
+            continue
+        dirt = others[low:high].max() / peak[k]
+        if dirt < LARGEST_CONTAMINATION:
+            quality[k] = peak[k] / np.median(fit.sigma[low:high]) * (1.0 - dirt / LARGEST_CONTAMINATION)
+    chosen = np.argsort(-quality)[:MOST_LINES]
+    chosen = chosen[np.isfinite(quality[chosen])]
+    if chosen.size < 5:
+        return None
+    continuum = fit.continuum
+    rows, row_of, share, velocity, number, depth, weight = [], [], [], [], [], [], []
+    for n, k in enumerate(chosen):
+        j = own[k]
+        low, high = ranges[k]
+        size = high - low
+        rows += [lines.row[j], lines.row[j] + 1]
+        row_of.append(np.full(size, 2 * n))
+        share.append(np.full(size, lines.share[j]))
+        velocity.append((fit.wavelength[low:high] / lines.centre[j] - 1.0) * LIGHT_SPEED_KM_S - lines.shift[j])
+        number.append(np.full(size, n))
+        depth.append(1.0 - fit.flux[low:high] / continuum[low:high] - others[low:high])
+        error = np.hypot(fit.sigma[low:high], fit.options.shape_error * peak[k])
+        weight.append(1.0 / error**2)
+    joined = [np.concatenate(v) for v in (row_of, share, velocity, number, depth, weight)]
+    return (np.array(rows), *joined)
