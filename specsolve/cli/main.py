@@ -18,6 +18,8 @@ from specsolve.errors import EXIT_INTERRUPTED, EXIT_UNEXPECTED, EXIT_USAGE, Spec
 
 COMMANDS = {
     "solve": ("specsolve.cli.solve", "Teff, log g, [Fe/H] and microturbulence from tables of equivalent widths."),
+    "measure": ("specsolve.cli.measure", "Equivalent widths of a line list in spectra."),
+    "run": ("specsolve.cli.run", "Measure spectra and solve their widths at once."),
     "check": ("specsolve.cli.check", "Dry run: what of a table would be used, and what is wrong with it."),
     "again": ("specsolve.cli.again", "Repeat a solve from its own output files."),
     "columns": ("specsolve.cli.columns", "Explain the columns of the tables read and written."),

@@ -6,7 +6,7 @@ import math
 from collections.abc import Iterable, Mapping
 
 from specsolve.errors import UsageError
-from specsolve.schema import INPUT, PARAMETERS
+from specsolve.schema import INPUT, OUTSIDE, PARAMETERS
 
 NAMES = tuple(name for name, _, _ in PARAMETERS)
 LIMITS = {"teff": (2000.0, 12000.0), "logg": (-1.0, 6.5), "feh": (-6.0, 2.0), "vmic": (0.0, 10.0)}
@@ -45,26 +45,6 @@ def numbers(texts: Iterable[str], option: str) -> dict[str, float]:
     return {name: _checked(name, value, option) for name, value in pairs(split, option, "logg=4.44").items()}
 
 
-def gaussians(texts: Iterable[str], option: str) -> dict[str, tuple[float, float]]:
-    """Values with errors such as ``teff=4810:60``.
-
-    Examples
-    --------
-    >>> gaussians(["teff=4810:60"], "--known")
-    {'teff': (4810.0, 60.0)}
-    """
-    found = {}
-    for name, text in pairs(texts, option, "teff=4810:60").items():
-        mean, sign, sigma = text.partition(":")
-        if not sign:
-            raise UsageError(f"{option} {name}={text}: give value and error, as {option} teff=4810:60")
-        error = _number(sigma, option, name)
-        if not error > 0:
-            raise UsageError(f"{option} {name}={text}: the error must be positive; to hold a value use --fix")
-        found[name] = (_checked(name, mean, option), error)
-    return found
-
-
 def cuts(texts: Iterable[str]) -> dict[str, tuple[float, float]]:
     """Line cuts such as ``reduced_width=-6:-4.8`` as options of a solve.
 
@@ -85,10 +65,25 @@ def cuts(texts: Iterable[str]) -> dict[str, tuple[float, float]]:
     return found
 
 
+def interval(text: str, option: str, example: str) -> tuple[float, float]:
+    """A range such as ``-100:300``.
+
+    Examples
+    --------
+    >>> interval("-100:300", "--velocity-range", "-100:300")
+    (-100.0, 300.0)
+    """
+    low, sign, high = text.partition(":")
+    limits = (_number(low, option, "range"), _number(high, option, "range")) if sign else (math.nan, math.nan)
+    if not limits[0] < limits[1]:
+        raise UsageError(f"{option} {text}: give lower and upper limit, as {option} {example}")
+    return limits
+
+
 def column_names(texts: Iterable[str]) -> dict[str, str]:
     """``--column OURS=THEIRS``; unknown names of ours are refused."""
     found = pairs(texts, "--column", "equivalent_width=EW")
-    ours = [column.name for column in INPUT]
+    ours = [column.name for column in (*INPUT, *OUTSIDE)]
     for name in found:
         if name not in ours:
             raise UsageError(f"--column {name}={found[name]}: specsolve has no column {name}; it has {', '.join(ours)}")
@@ -115,7 +110,7 @@ def unit_names(texts: Iterable[str]) -> dict[str, str]:
     found = pairs(texts, "--unit", "equivalent_width=mAngstrom")
     from astropy.units import Unit
 
-    known = {column.name: column.unit for column in INPUT if column.unit}
+    known = {column.name: column.unit for column in (*INPUT, *OUTSIDE) if column.unit}
     for name, text in found.items():
         if name not in known:
             raise UsageError(f"--unit {name}={text}: the columns with a unit are {', '.join(known)}")
@@ -130,17 +125,29 @@ def disjoint(fixed: Mapping[str, float], known: Mapping[str, tuple[float, float]
     """A parameter is fixed or known with an error, not both."""
     for name in fixed:
         if name in known:
-            raise UsageError(f"--fix and --known both give {name}")
+            raise UsageError(f"--fix and --prior both give {name}")
+
+
+def check_parameter(name: str, value: float, option: str) -> None:
+    """Refuse what is no parameter, or a value that no star has."""
+    if name not in NAMES:
+        raise UsageError(f"{option} {name}={value:g}: the parameters are {', '.join(NAMES)}")
+    low, high = LIMITS[name]
+    if not low <= value <= high:
+        raise UsageError(f"{option} {name}={value:g}: {name} must lie between {low:g} and {high:g}")
 
 
 def _checked(name: str, text: str, option: str) -> float:
     if name not in NAMES:
         raise UsageError(f"{option} {name}={text}: the parameters are {', '.join(NAMES)}")
     value = _number(text, option, name)
-    low, high = LIMITS[name]
-    if not low <= value <= high:
-        raise UsageError(f"{option} {name}={text}: {name} must lie between {low:g} and {high:g}")
+    check_parameter(name, value, option)
     return value
+
+
+def number(text: str, option: str, name: str) -> float:
+    """A finite number."""
+    return _number(text, option, name)
 
 
 def _number(text: str, option: str, name: str) -> float:
