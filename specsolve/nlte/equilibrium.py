@@ -222,32 +222,53 @@ def iterate(
     )
     fixed = fixed_equations(collisions, atom.continuum_level, atom.continuum_target, ionization, recombination)
     low, up = atom.line_lower[s.lines], atom.line_upper[s.lines]
-    thick = slice(0, s.n_transfer)
     thin = slice(s.n_transfer, None)
     nothing = np.zeros_like(s.mean[thin])
     add_lines(
         fixed, low[thin], up[thin], s.coefficient[thin], s.boltzmann[thin], s.emission[thin], s.mean[thin], nothing
     )
     log_b = np.zeros_like(s.lte) if start is None else _remapped(start, s.log_tau)
+    return lambda_iteration(s, low, up, fixed, log_b, tolerance)
+
+
+def lambda_iteration(
+    surroundings: Medium,
+    low: np.ndarray,
+    up: np.ndarray,
+    fixed: np.ndarray,
+    log_b: np.ndarray,
+    tolerance: float,
+    most: int = MOST_ITERATIONS,
+) -> Departures:
+    """Iterate until the populations no longer change.
+
+    Parameters
+    ----------
+    surroundings : Medium
+    low, up : ndarray of int, shape (m,)
+        Levels of its lines.
+    fixed : ndarray, shape (n, n_levels, n_levels)
+        Equations of all that does not change, see `rates.fixed_equations`.
+    log_b : ndarray, shape (n_levels, n)
+        First guess.
+    tolerance : float
+        On |d ln b|.
+    most : int
+        Iterations after which it is given up.
+    """
+    s = surroundings
+    thick = slice(0, s.n_transfer)
+    low, up = low[thick], up[thick]
     effective, diagonal = np.empty_like(s.mean[thick]), np.empty_like(s.mean[thick])
     history = History()
     change = np.inf
-    for iteration in range(1, MOST_ITERATIONS + 1):
+    for iteration in range(1, most + 1):
         line_fields(
-            low[thick], up[thick], log_b, s.strength[thick], s.boltzmann[thick], s.emission[thick], s.opacity[thick],
+            low, up, log_b, s.strength[thick], s.boltzmann[thick], s.emission[thick], s.opacity[thick],
             s.source[thick], s.profile, s.quadrature, s.column_mass, ANGLE_COSINES, ANGLE_WEIGHTS, effective, diagonal,
         )  # fmt: skip
         matrix = fixed.copy()
-        add_lines(
-            matrix,
-            low[thick],
-            up[thick],
-            s.coefficient[thick],
-            s.boltzmann[thick],
-            s.emission[thick],
-            effective,
-            diagonal,
-        )
+        add_lines(matrix, low, up, s.coefficient[thick], s.boltzmann[thick], s.emission[thick], effective, diagonal)
         b = solve_populations(matrix, s.lte)
         if not np.all(np.isfinite(b)) or np.any(b <= 0.0):
             return _result(s, np.full_like(log_b, np.nan), False, iteration, change, "populations not positive")
@@ -256,8 +277,8 @@ def iterate(
         if change < tolerance:
             return _result(s, new, True, iteration, change, "")
         log_b = history.accelerated(new)
-    reason = f"not converged after {MOST_ITERATIONS} iterations: populations still change by {change:.1e}"
-    return _result(s, log_b, False, MOST_ITERATIONS, change, reason)
+    reason = f"not converged after {most} iterations: populations still change by {change:.1e}"
+    return _result(s, np.full_like(log_b, np.nan), False, most, change, reason)
 
 
 def _result(s: Medium, log_b, converged: bool, iterations: int, change: float, reason: str) -> Departures:

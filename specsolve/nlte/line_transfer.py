@@ -79,7 +79,7 @@ def line_fields(
     effective, diagonal : ndarray, shape (m, n)
         Returned: J - L S, and L = integral of phi Lambda* (line share).
     """
-    m, n, q = profile.shape
+    n, q = profile.shape[1:]
     n_mu = cosines.shape[0]
     width = q * n_mu
     chi = np.empty((n, q))
@@ -90,11 +90,13 @@ def line_fields(
     extra = np.empty((n, width))
     right = np.empty((n, width))
     carried = np.empty((n, width))
-    back = np.empty(width)
+    pivot = np.empty((n, width))
+    below = np.empty((n, width))
+    rest = np.empty(width)
     factor = np.empty((n, width))
     u = np.empty((n, width))
     inverse_mu = 1.0 / cosines
-    for k in range(m):
+    for k in range(low.size):
         i, j = low[k], up[k]
         for d in range(n):
             b_low = np.exp(log_b[i, d])
@@ -138,32 +140,33 @@ def line_fields(
         for d in range(n - 1):
             for p in range(width):
                 step_inverse[d, p] = 1.0 / step_inverse[d, p]
-        # downwards
+        step_inverse[n - 1] = 0.0
+        # downwards; loops are kept short so that each is vectorised
         for p in range(width):
             carried[0, p] = extra[0, p]
-            pivot = 1.0 / (extra[0, p] + step_inverse[0, p])
-            u[0, p] = right[0, p] * pivot
-            back[p] = pivot
+            pivot[0, p] = 1.0 / (extra[0, p] + step_inverse[0, p])
+            u[0, p] = right[0, p] * pivot[0, p]
         for d in range(1, n):
             for p in range(width):
-                s = step_inverse[d - 1, p]
-                c = extra[d, p] + s * carried[d - 1, p] * back[p]
-                carried[d, p] = c
-                above = step_inverse[d, p] if d < n - 1 else 0.0
-                pivot = 1.0 / (c + above)
-                u[d, p] = (right[d, p] + s * u[d - 1, p]) * pivot
-                back[p] = pivot
+                carried[d, p] = extra[d, p] + step_inverse[d - 1, p] * (carried[d - 1, p] * pivot[d - 1, p])
+            for p in range(width):
+                pivot[d, p] = 1.0 / (carried[d, p] + step_inverse[d, p])
+            for p in range(width):
+                u[d, p] = (right[d, p] + step_inverse[d - 1, p] * u[d - 1, p]) * pivot[d, p]
         # upwards: solution, and the elimination from below for the diagonal
         for p in range(width):
-            back[p] = extra[n - 1, p]  # G of the point below
-            extra[n - 1, p] = 1.0 / carried[n - 1, p]
+            below[n - 1, p] = 0.0
+            rest[p] = extra[n - 1, p]
         for d in range(n - 2, -1, -1):
             for p in range(width):
-                s = step_inverse[d, p]
-                u[d, p] += u[d + 1, p] * s / (carried[d, p] + s)
-                from_below = s * back[p] / (back[p] + s)
-                back[p] = extra[d, p] + from_below
-                extra[d, p] = 1.0 / (carried[d, p] + from_below)
+                u[d, p] += u[d + 1, p] * step_inverse[d, p] * pivot[d, p]
+            for p in range(width):
+                below[d, p] = step_inverse[d, p] * rest[p] / (rest[p] + step_inverse[d, p])
+            for p in range(width):
+                rest[p] = extra[d, p] + below[d, p]
+        for d in range(n):
+            for p in range(width):
+                extra[d, p] = factor[d, p] / (carried[d, p] + below[d, p])
         for d in range(n):
             mean = 0.0
             local = 0.0
@@ -173,7 +176,7 @@ def line_fields(
                 for a in range(n_mu):
                     p = a * q + f
                     j_nu += weights[a] * u[d, p]
-                    l_nu += weights[a] * factor[d, p] * extra[d, p]
+                    l_nu += weights[a] * extra[d, p]
                 mean += quadrature[k, d, f] * j_nu
                 local += quadrature[k, d, f] * l_nu * share[d, f]
             effective[k, d] = mean - local * line_source[d]
