@@ -28,11 +28,10 @@ from specsolve.radiation.transfer_kernels import radiation_field
 LEAST_LINE = 3e-3
 #: Longest wavelength with sampled lines [cm]; they matter little beyond.
 LONGEST_LINES_CM = 2.5e-4
-#: Edges [cm] of the bands of the residual opacity and the cross-section [cm^2] per Fe I atom in each.
-RESIDUAL_EDGES_CM = (
-    np.array([1250.0, 2900.0, 3030.0, 3150.0, 3280.0, 3400.0, 3520.0, 3647.0, 3750.0, 3870.0, 4000.0]) * 1e-8
-)
-RESIDUAL_CM2 = np.zeros(10)
+#: Edges [cm] of the bands of the residual opacity and log10 of the cross-section [cm^2] per Fe I atom in each, by
+#: `python -m specsolve.nlte.residual_calibration`; below the observed range, 2900 A, that of the bluest band.
+RESIDUAL_EDGES_CM = np.array([1250, 2900, 3030, 3150, 3280, 3400, 3520, 3647, 3750, 3870, 4000]) * 1e-8
+RESIDUAL_LOG_CM2 = np.array([-19.075, -19.075, -19.076, -19.108, -19.178, -19.252, -19.326, -19.227, -19.200, -19.492])
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -112,8 +111,8 @@ def line_opacity(wavelength_cm: np.ndarray, gas: Gas, vmic: float, continuum: np
 def residual_cross_section(wavelength_cm: np.ndarray) -> np.ndarray:
     """Residual opacity per Fe I atom [cm^2]; zero beyond the calibrated bands."""
     place = np.searchsorted(RESIDUAL_EDGES_CM, wavelength_cm, side="right") - 1
-    inside = (place >= 0) & (place < RESIDUAL_CM2.size)
-    return np.where(inside, RESIDUAL_CM2[np.clip(place, 0, RESIDUAL_CM2.size - 1)], 0.0)
+    inside = (place >= 0) & (place < RESIDUAL_LOG_CM2.size)
+    return np.where(inside, 10.0 ** RESIDUAL_LOG_CM2[np.clip(place, 0, RESIDUAL_LOG_CM2.size - 1)], 0.0)
 
 
 def background(
