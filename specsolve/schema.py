@@ -156,6 +156,7 @@ STARS = (
     Column("line_list_hash", TEXT, "", "SHA-256 of the lines used"),
     Column("input_hash", TEXT, "", "SHA-256 of the star's input"),
     Column("outside", TEXT, "", "what was known from elsewhere, as JSON: name, mean, sigma, source"),
+    Column("known", TEXT, "", "what the input said of the star beside its lines, as JSON"),
     Column("systematics", TEXT, "", "shift of (teff, logg, feh, vmic) for each systematic term, as JSON"),
     Column("configuration", TEXT, "", "options of this solve as JSON"),
 )

@@ -166,6 +166,7 @@ def _frame(problem: Problem) -> Solution:
         zero_point_source=problem.zero_points.source,
         lines=line_results(problem, None, None),
         outside=tuple(_outside_entries(problem)),
+        known=dict(star.known),
         notes=tuple(notes),
         n_input=n_input,
         n_matched=n_matched,

@@ -254,6 +254,8 @@ class Solution:
     sensitivities : tuple of Sensitivity
     outside : tuple of mapping
         What was known from elsewhere: name, mean (at the solution), sigma, source.
+    known : mapping
+        What the input said of the star beside its lines.
     outside_share : ndarray, shape (4,)
         Share of that in each parameter: 0 from the lines alone, 1 fixed.
     alpha : float
@@ -307,6 +309,7 @@ class Solution:
     sensitivities: tuple[Sensitivity, ...] = ()
     systematics: Mapping[str, np.ndarray] = field(default_factory=dict)
     outside: tuple[Mapping[str, Any], ...] = ()
+    known: Mapping[str, Any] = field(default_factory=dict)
     outside_share: np.ndarray = field(default_factory=lambda: np.full(4, np.nan))
     alpha: float = float("nan")
     alpha_given: bool = False

@@ -43,6 +43,7 @@ def solve(
     treatment: str = "lte",
     reference: str | Star | None = None,
     reference_parameters: Mapping[str, Any] | None = None,
+    reference_errors: Mapping[str, Any] | None = None,
     fix: Mapping[str, Any] | None = None,
     outside: OutsideChoice = None,
     known: Mapping[str, Any] | None = None,
@@ -67,6 +68,8 @@ def solve(
         widths if the table has no such star, or a `Star`.
     reference_parameters : mapping, optional
         Its teff, logg, feh (and vmic, if it shall not be found); not needed for the Sun.
+    reference_errors : mapping, optional
+        Their errors; they go into the shared covariance.
     fix : mapping, optional
         Parameter name to value (a number in K, dex, dex, km/s, or a Quantity) for all stars.
     outside : optional
@@ -111,7 +114,12 @@ def solve(
     if reference is not None:
         chosen, stars = _split_reference(reference, stars)
         zero_points = reference_star(
-            chosen, grid, treatment, bare_parameters(reference_parameters), options
+            chosen,
+            grid,
+            treatment,
+            bare_parameters(reference_parameters),
+            options,
+            parameter_errors=bare_parameters(reference_errors),
         ).zero_points
     setting = Setting(
         treatment=treatment,

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from typing import TYPE_CHECKING, Any
 
 import click
@@ -42,25 +43,25 @@ def again(settings: Settings, result: str, grid_path: str | None, **delivery: An
         raise InputError(f"{result} does not say with which options it was made", path=result)
     request = Request.from_arguments(arguments, grid_path=grid_path, **delivery)
     recorded = str(stars["grid_identity"][0]) if len(stars) else ""
-    inputs = Inputs(stars=stars_of(lines), files=[])
+    inputs = Inputs(stars=stars_of(lines, stars), files=[])
     return carry_out(settings, inputs, [str(path) for path in (paths["stars"], paths["lines"])], request, recorded)
 
 
-def stars_of(lines: Table) -> list[Star]:
-    """The stars of a lines table, with the widths as they were given.
+def stars_of(lines: Table, stars: Table) -> list[Star]:
+    """The stars of a result, with the widths and what was known of them as they were given.
 
     Parameters
     ----------
-    lines : Table
-        As `specsolve.report.tables.read_table` reads ``X_lines.ecsv``.
+    lines, stars : Table
+        As `specsolve.report.tables.read_table` reads ``X_lines.ecsv`` and ``X.ecsv``.
     """
     from specsolve.balance.star import Star
+    from specsolve.star_table import rows_of_each
 
-    names = np.asarray(lines["star"])
-    order = list(dict.fromkeys(names.tolist()))
+    known = {str(row["star"]): json.loads(row["known"] or "{}") for row in stars}
     found = []
-    for name in order:
-        rows = lines[(names == name)]
+    for name, places in rows_of_each(np.asarray(lines["star"]).astype(str)):
+        rows = lines[places]
         rows = rows[np.asarray(rows["treatment"]) == rows["treatment"][0]]
         assumed = np.asarray(rows["error_assumed"], bool)
         error = _plain(rows["equivalent_width_error"])
@@ -75,6 +76,7 @@ def stars_of(lines: Table) -> list[Star]:
                 log_gf=_plain(rows["log_gf"]),
                 log_gf_error=_plain(rows["log_gf_error"]),
                 use=np.asarray(rows["reason"]) != NOT_USED,
+                known=known.get(name),
             )
         )
     return found

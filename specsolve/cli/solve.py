@@ -5,24 +5,35 @@ from __future__ import annotations
 import json
 import sys
 from collections.abc import Mapping, Sequence
-from concurrent.futures import Executor
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import click
 
-from specsolve.cli import parsing
+from specsolve.cli import bulk, parsing
+from specsolve.cli.bulk import make_executor as make_executor
 from specsolve.cli.inputs import Inputs, coverage, coverage_message, read_inputs, shared_notes
+from specsolve.cli.outside import (
+    known_of_all,
+    measured_values,
+    outside_options,
+    priors,
+    reference_parameters,
+    said,
+    with_outside,
+)
 from specsolve.cli.settings import Settings, common_options, wants_colour
 from specsolve.errors import EXIT_INTERRUPTED, EXIT_SOLVED, EXIT_UNSOLVED, InputError, UsageError
 
 if TYPE_CHECKING:
+    from specsolve.balance.batch import Setting
     from specsolve.balance.solution import Solution
     from specsolve.balance.star import Star
 
 STDOUT = "-"
 REFERENCE_FLAG = "reference_star"
+LISTED_AT_MOST = 20
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -41,11 +52,20 @@ class Request:
         Parameters of the reference star.
     fix : dict
         Parameter to value.
+    at_errors : dict
+        Their errors, where given.
     known : dict
         Parameter to (value, error).
+    measured : dict
+        Parallax, numax, colours, ... with their errors, by name.
+    colour_scale : str or None
+    alpha : float or None
+        [alpha/Fe].
+    outside : str or None
+        Table of what is known of each star.
     wanted : tuple of str
         Names of stars; empty for all.
-    grid_path, output, plots, plot_format, sheets, workers, seed
+    grid_path, output, plots, plot_format, sheets, workers, scheduler, seed
         Where things come from and go to.
     """
 
@@ -58,7 +78,12 @@ class Request:
     reference: str | None = None
     at: Mapping[str, float] | None = None
     fix: Mapping[str, float] = field(default_factory=dict)
+    at_errors: Mapping[str, float] = field(default_factory=dict)
     known: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    measured: Mapping[str, float] = field(default_factory=dict)
+    colour_scale: str | None = None
+    alpha: float | None = None
+    outside: str | None = None
     wanted: tuple[str, ...] = ()
     grid_path: str | None = None
     output: str | None = None
@@ -66,6 +91,7 @@ class Request:
     plot_format: str = "pdf"
     sheets: bool | None = None
     workers: int = 1
+    scheduler: str | None = None
     seed: int | None = None
 
     def arguments(self) -> dict[str, Any]:
@@ -79,8 +105,12 @@ class Request:
             "limits": {name: list(pair) for name, pair in self.limits.items()},
             "reference": self.reference,
             "reference_parameters": dict(self.at) if self.at else None,
+            "reference_errors": dict(self.at_errors),
             "fix": dict(self.fix),
             "known": {name: list(pair) for name, pair in self.known.items()},
+            "measured": dict(self.measured),
+            "colour_scale": self.colour_scale,
+            "alpha": self.alpha,
             "stars": list(self.wanted),
         }
 
@@ -93,6 +123,10 @@ class Request:
             limits={name: tuple(pair) for name, pair in arguments["limits"].items()},
             reference=arguments["reference"],
             at=arguments["reference_parameters"],
+            at_errors=arguments["reference_errors"],
+            measured=arguments["measured"],
+            colour_scale=arguments["colour_scale"],
+            alpha=arguments["alpha"],
             fix=arguments["fix"],
             known={name: tuple(pair) for name, pair in arguments["known"].items()},
             **delivery,
@@ -142,9 +176,16 @@ def delivery_options(function: Any) -> Any:
 @click.argument("tables", nargs=-1, required=True, metavar="TABLE...")
 @delivery_options
 @input_options
-@click.option("--reference", metavar="STAR", help="Work relative to this star of the tables, or to the Sun.")
-@click.option("--reference-parameters", multiple=True, metavar="NAME=VALUE", help="Its teff, logg, feh.")
-@click.option("--known", multiple=True, metavar="NAME=VALUE:ERROR", help="A parameter known from elsewhere.")
+@click.option(
+    "--reference", metavar="STAR", help="Work relative to this star of the tables, that of another table, or the Sun."
+)
+@click.option(
+    "--reference-parameters",
+    multiple=True,
+    metavar="NAME=VALUE",
+    help="Its teff, logg, feh; with errors as teff=5777+-10.",
+)
+@outside_options
 @click.option(
     "--loss",
     type=click.Choice(["huber", "student", "none"]),
@@ -154,6 +195,7 @@ def delivery_options(function: Any) -> Any:
 )
 @click.option("--star", "wanted", multiple=True, metavar="STAR", help="Only this star (may be repeated).")
 @click.option("--workers", type=click.IntRange(1), default=1, show_default=True, help="Processes, for many stars.")
+@click.option("--scheduler", metavar="ADDRESS", help="Let the workers of a dask.distributed scheduler do it.")
 @click.option("--seed", type=int, hidden=True, help="Kept in the output; this analysis draws no random numbers.")
 @common_options()
 def solve(settings: Settings, tables: tuple[str, ...], **chosen: Any) -> int:
@@ -164,24 +206,30 @@ def solve(settings: Settings, tables: tuple[str, ...], **chosen: Any) -> int:
       specsolve solve widths.ecsv
       specsolve solve widths.ecsv --output result --plots figures
       specsolve solve widths.csv --column equivalent_width=EW --unit equivalent_width=mAngstrom
-      specsolve solve widths.ecsv --fix logg=2.45 --known teff=4810:60
+      specsolve solve widths.ecsv --fix logg=2.45 --prior teff=4810+-60
+      specsolve solve widths.ecsv --outside known.ecsv --alpha 0.3
       specsolve solve widths.ecsv --reference Sun --json
 
     Columns: specsolve columns input. A TABLE of - is read from standard input.
     """
+    at, at_errors = reference_parameters(chosen.pop("reference_parameters"))
     request = Request(
         columns=parsing.column_names(chosen.pop("columns")),
         ions=parsing.ion_names(chosen.pop("ions")),
         units=parsing.unit_names(chosen.pop("units")),
         limits=parsing.cuts(chosen.pop("cuts")),
         fix=parsing.numbers(chosen.pop("fixed"), "--fix"),
-        known=parsing.gaussians(chosen.pop("known"), "--known"),
-        at=parsing.numbers(chosen.pop("reference_parameters"), "--reference-parameters") or None,
+        known=priors(chosen.pop("known")),
+        measured=measured_values(chosen.pop("measured")),
+        at=at,
+        at_errors=at_errors,
         **chosen,
     )
     parsing.disjoint(request.fix, request.known)
     if request.at and request.reference is None:
         raise UsageError("--reference-parameters needs --reference")
+    if request.scheduler is not None and request.workers != 1:
+        raise UsageError("--workers is for this computer, --scheduler for a cluster: give one of them")
     before(settings, request)
     inputs = read_inputs(tables, settings, columns=request.columns, ions=request.ions, units=request.units)
     return carry_out(settings, inputs, tables, request)
@@ -239,19 +287,37 @@ def carry_out(
             "description": grid.description,
         },
     )
-    solutions, interrupted, n_stars = solve_all(
-        settings, stars, grid, request, Options(loss=request.loss, **request.limits)
-    )
-    solutions = [solution.with_provenance(provenance) for solution in solutions]
-    deliver(settings, solutions, provenance, request)
-    if interrupted:
-        left = n_stars - len(solutions)
-        settings.warn(f"specsolve: interrupted; {len(solutions)} stars are finished and kept, {left} are not")
+    stars, setting, first = prepare(stars, grid, request, Options(loss=request.loss, **request.limits))
+    if any(star.known for star in stars):
+        settings.say(said(stars))
+    if streams(settings, request, len(stars)):
+        outcome = bulk.solve_to_files(settings, stars, grid, setting, first, request, provenance)
+        click.echo(outcome.summary())
+        status = list(outcome.status.values())
+    else:
+        solutions, outcome = solve_all(settings, stars, grid, setting, first, request)
+        solutions = [solution.with_provenance(provenance) for solution in solutions]
+        deliver(settings, solutions, provenance, request)
+        status = [(one.star, one.status, one.reason) for one in solutions]
+    if outcome.interrupted:
+        kept, left = len(outcome.status), outcome.n_stars - len(outcome.status)
+        settings.warn(f"specsolve: interrupted; {kept} stars are finished and kept, {left} are not")
         return EXIT_INTERRUPTED
-    bad = [one for one in solutions if one.status != "solved"]
-    for one in bad:
-        settings.warn(f"specsolve: {one.star}: {one.status}: {one.reason}")
+    bad = [one for one in status if one[1] != "solved"]
+    for star, word, reason in bad[:LISTED_AT_MOST]:
+        settings.warn(f"specsolve: {star}: {word}: {reason}")
+    if len(bad) > LISTED_AT_MOST:
+        settings.warn(f"specsolve: {len(bad) - LISTED_AT_MOST} more are not solved; the table says why")
     return EXIT_UNSOLVED if bad or inputs.failed else EXIT_SOLVED
+
+
+def streams(settings: Settings, request: Request, n_stars: int) -> bool:
+    """Whether finished stars go straight into files, with a journal; no figure, sheet or JSON is asked for then."""
+    return (
+        request.output not in (None, STDOUT)
+        and n_stars >= bulk.JOURNAL_FROM
+        and not (settings.json or request.plots is not None or request.sheets)
+    )
 
 
 def chosen_stars(inputs: Inputs, wanted: Sequence[str], reference: str | None) -> list[Star]:
@@ -267,40 +333,36 @@ def chosen_stars(inputs: Inputs, wanted: Sequence[str], reference: str | None) -
 
 
 def solve_all(
-    settings: Settings, stars: list[Star], grid: Any, request: Request, options: Any
-) -> tuple[list[Solution], bool, int]:
-    """Solve the stars; on Ctrl-C the finished ones are kept.
+    settings: Settings, stars: list[Star], grid: Any, setting: Setting, first: list[Solution], request: Request
+) -> tuple[list[Solution], bulk.Outcome]:
+    """Solve the stars in memory; on Ctrl-C the finished ones are kept.
 
     Returns
     -------
     solutions : list of Solution
-        In the order of the input; the reference star first, at its own parameters.
-    interrupted : bool
-    n_stars : int
-        How many there should be.
+        `first`, then those of the stars in the order of the input.
+    outcome : Outcome
     """
     from specsolve.balance.batch import solve_stream
-    from specsolve.balance.outside import Outside
     from specsolve.cli.progress import counting
 
-    stars, setting, first = prepare(stars, grid, request, options)
-    known = Outside.gaussian("given by the user", **request.known) if request.known else None
     done: dict[int, Solution] = {}
     interrupted = False
-    executor = make_executor(request.workers)
     try:
-        with counting("stars", quiet=settings.verbosity < 0 or len(stars) < 3) as progress:
-            for place, solution in solve_stream(stars, grid, setting, outside=known, executor=executor):
+        with (
+            bulk.executor_for(request.workers, request.scheduler) as executor,
+            counting("stars", quiet=settings.verbosity < 0 or len(stars) < 3) as progress,
+        ):
+            for place, solution in solve_stream(stars, grid, setting, executor=executor):
                 done[place] = solution
                 settings.detail(f"{solution.star}: {solution.status}, {len(solution.candidates)} minima")
                 if progress:
                     progress(len(done), len(stars))
     except KeyboardInterrupt:
         interrupted = True
-    finally:
-        if executor is not None:
-            executor.shutdown(wait=not interrupted, cancel_futures=True)
-    return first + [done[place] for place in sorted(done)], interrupted, len(first) + len(stars)
+    solutions = first + [done[place] for place in sorted(done)]
+    status = {place: (one.star, one.status, one.reason) for place, one in enumerate(solutions)}
+    return solutions, bulk.Outcome(status, interrupted, len(first) + len(stars))
 
 
 def prepare(stars: list[Star], grid: Any, request: Request, options: Any) -> tuple[list[Star], Any, list[Solution]]:
@@ -317,35 +379,53 @@ def prepare(stars: list[Star], grid: Any, request: Request, options: Any) -> tup
 
     from specsolve.balance.batch import Setting, solve_star
     from specsolve.balance.differential import reference_star
-    from specsolve.balance.own_sun import SUN_NAME, solar_lines, solar_star
+    from specsolve.balance.outside_known import ALPHA
+    from specsolve.balance.own_sun import solar_lines
     from specsolve.balance.solution import PARAMETER_NAMES
     from specsolve.balance.solve import fixed_outside
 
     if request.treatment not in grid.treatments:
         raise UsageError(f"treatment '{request.treatment}' is not in the grid; it has {', '.join(grid.treatments)}")
     shared = {"treatment": request.treatment, "options": options}
-    setting = Setting(**shared, fixed=fixed_outside(request.fix), sun=solar_lines(grid, request.treatment, options))
-    if request.reference is None:
-        return stars, setting, []
-    same = [star for star in stars if star.name == request.reference]
-    if not same and request.reference.strip().lower() != SUN_NAME.lower():
-        raise InputError(f"the reference star '{request.reference}' is not in the tables")
-    chosen = same[0] if same else solar_star()
-    found = reference_star(chosen, grid, request.treatment, request.at, options)
+    setting = Setting(**shared, known=known_of_all(request), sun=solar_lines(grid, request.treatment, options))
+    chosen = reference_of(stars, request)
+    if chosen is None:
+        return with_outside(stars, request.outside), setting, []
+    others = [star for star in stars if star.name != chosen.name]
+    found = reference_star(chosen, grid, request.treatment, request.at, options, parameter_errors=request.at_errors)
     at = dict(zip(PARAMETER_NAMES, found.theta.tolist(), strict=True))
-    own = solve_star(chosen, grid, Setting(**shared, fixed=fixed_outside(at), sun=setting.sun))
-    own = replace(own, flags=(REFERENCE_FLAG, *own.flags))
-    return [star for star in stars if star.name != chosen.name], replace(setting, zero_points=found.zero_points), [own]
+    bare = replace(chosen, known={name: value for name, value in chosen.known.items() if name == ALPHA})
+    own = solve_star(bare, grid, Setting(**shared, fixed=fixed_outside(at), sun=setting.sun))
+    own = replace(own, flags=(REFERENCE_FLAG, *own.flags), cov_list=found.covariance, notes=(*own.notes, found.note))
+    return with_outside(others, request.outside), replace(setting, zero_points=found.zero_points), [own]
 
 
-def make_executor(workers: int) -> Executor | None:
-    """Processes for many stars; `None` for one."""
-    if workers == 1:
+def reference_of(stars: list[Star], request: Request) -> Star | None:
+    """The reference star: one of the tables, the one of another table, or the packaged Sun; None without one.
+
+    Raises
+    ------
+    InputError
+        If there is no such star, or the other table has several.
+    """
+    from specsolve.balance.own_sun import SUN_NAME, solar_star
+
+    if request.reference is None:
         return None
-    import multiprocessing
-    from concurrent.futures import ProcessPoolExecutor
+    same = [star for star in stars if star.name == request.reference]
+    if same:
+        return same[0]
+    path = Path(request.reference)
+    if path.is_file():
+        from specsolve.star_table import read_stars
 
-    return ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context("spawn"))
+        found = read_stars(path, columns=request.columns, ions=request.ions, units=request.units)
+        if len(found) != 1:
+            raise InputError(f"{path} has {len(found)} stars; a table of the reference star has one", path=path)
+        return found[0]
+    if request.reference.strip().lower() == SUN_NAME.lower():
+        return solar_star()
+    raise InputError(f"the reference star '{request.reference}' is neither in the tables nor a file")
 
 
 def deliver(settings: Settings, solutions: Sequence[Solution], provenance: Mapping[str, Any], request: Request) -> None:

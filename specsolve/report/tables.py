@@ -53,6 +53,7 @@ def star_row(solution: Solution) -> dict[str, Any]:
         "n_candidates": len(solution.candidates),
         "configuration": json.dumps(plain(solution.options), sort_keys=True),
         "systematics": json.dumps(plain(solution.systematics)),
+        "known": json.dumps(plain(solution.known)),
         "outside": json.dumps(plain(solution.outside)),
     }
     errors_star, errors_list = _sigmas(solution.cov_star), _sigmas(solution.cov_list)
@@ -296,6 +297,7 @@ def to_json(solutions: Iterable[Solution], provenance: Mapping[str, Any] | None 
         row = plain(star_row(solution))
         row["configuration"] = plain(solution.options)
         row["systematics"], row["outside"] = plain(solution.systematics), plain(solution.outside)
+        row["known"] = plain(solution.known)
         row["lines"] = [dict(zip(columns, values, strict=True)) for values in zip(*columns.values(), strict=True)]
         row["candidates"] = plain(candidate_rows(solution))
         row["decisions"] = plain(decision_rows(solution))

@@ -4,13 +4,15 @@ from __future__ import annotations
 
 import pytest
 
-from specsolve.cli import parsing
+from specsolve.cli import outside, parsing
 from specsolve.errors import UsageError
 
 
 def test_values_and_errors():
     assert parsing.numbers(["logg=4.44", "teff=5772, feh=0"], "--fix") == {"logg": 4.44, "teff": 5772.0, "feh": 0.0}
-    assert parsing.gaussians(["vmic=1.1:0.2"], "--known") == {"vmic": (1.1, 0.2)}
+    assert outside.priors(["vmic=1.1+-0.2"]) == outside.priors(["vmic=1.1:0.2"]) == {"vmic": (1.1, 0.2)}
+    assert outside.measured_values(["numax=3090+-30"]) == {"numax": 3090.0, "numax_error": 30.0}
+    assert outside.reference_parameters(["teff=5777+-10,logg=4.44"]) == ({"teff": 5777.0, "logg": 4.44}, {"teff": 10.0})
     assert parsing.cuts(["reduced_width=-6:-4.9", "wavelength=5000:7000"]) == {
         "reduced_width_range": (-6.0, -4.9),
         "wavelength_range": (5000.0, 7000.0),
@@ -29,8 +31,11 @@ def test_values_and_errors():
         (lambda t: parsing.numbers(t, "--fix"), ["logg=nan"], "not a finite number"),
         (lambda t: parsing.numbers(t, "--fix"), ["teff=57720"], "between 2000 and 12000"),
         (lambda t: parsing.numbers(t, "--fix"), ["logg=4", "logg=5"], "gives logg twice"),
-        (lambda t: parsing.gaussians(t, "--known"), ["logg=4"], "give value and error"),
-        (lambda t: parsing.gaussians(t, "--known"), ["logg=4:0"], "to hold a value use --fix"),
+        (outside.priors, ["logg=4"], "give value and error"),
+        (outside.priors, ["logg=4+-0"], "to hold a value use --fix"),
+        (outside.priors, ["teff=100+-5"], "between 2000 and 12000"),
+        (outside.measured_values, ["distance=4+-1"], "can be parallax, mass"),
+        (outside.measured_values, ["parallax=4"], "give value and error"),
         (parsing.cuts, ["depth=0:1"], "can be reduced_width, excitation, wavelength"),
         (parsing.cuts, ["excitation=5:0"], "lower and upper limit"),
         (parsing.cuts, ["excitation=5"], "lower and upper limit"),
