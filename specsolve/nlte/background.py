@@ -7,7 +7,7 @@ a cross-section per Fe I atom, constant within bands, which is fixed once on the
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from functools import cache
 
 import numpy as np
@@ -26,6 +26,8 @@ from specsolve.radiation.transfer_kernels import radiation_field
 
 #: Lines and wings below this fraction of the continuum are left out.
 LEAST_LINE = 3e-3
+#: On the Eddington factors of the background radiation.
+EDDINGTON_TOLERANCE = 1e-4
 #: Longest wavelength with sampled lines [cm]; they matter little beyond.
 LONGEST_LINES_CM = 2.5e-4
 #: Edges [cm] of the bands of the residual opacity and log10 of the cross-section [cm^2] per Fe I atom in each, by
@@ -132,13 +134,60 @@ def background(
     uv_residual : float
         Factor on the residual cross-sections.
     """
-    absorption, scattering = continuum_opacity(wavelength_cm, gas)
+    none = np.zeros((1, 0))
+    return backgrounds(wavelength_cm, none, gas, column_mass, vmic, uv_residual)[0]
+
+
+def backgrounds(
+    grid_cm: np.ndarray, beside_cm: np.ndarray, gas: Gas, column_mass: np.ndarray, vmic: float, uv_residual: float
+) -> tuple[Background, Background]:
+    """The same on a grid, and at lines, whose background is the geometric mean over wavelengths beside them.
+
+    Parameters
+    ----------
+    grid_cm : ndarray, shape (w,)
+        Vacuum, ascending [cm].
+    beside_cm : ndarray, shape (n_beside, m)
+        Wavelengths beside each of m lines [cm], inside the grid; the continuum is interpolated from the grid.
+
+    Returns
+    -------
+    on_grid, at_lines : Background
+    """
+    absorption, scattering = continuum_opacity(grid_cm, gas)
+    everywhere = np.concatenate([grid_cm, beside_cm.ravel()])
+    order = np.argsort(everywhere, kind="stable")
+    ascending = everywhere[order]
+    absorption, scattering = (
+        _interpolated(grid_cm, absorption, ascending),
+        _interpolated(grid_cm, scattering, ascending),
+    )
     iron = gas.ions[ELEMENTS.index("Fe"), 0] / gas.density
-    absorption += uv_residual * residual_cross_section(wavelength_cm)[:, None] * iron
-    short = wavelength_cm < LONGEST_LINES_CM
-    absorption[short] += line_opacity(wavelength_cm[short], gas, vmic, (absorption + scattering)[short])
-    opacity = absorption + scattering
-    return solve_background(wavelength_cm, opacity, absorption / opacity, gas.temperature, column_mass)
+    absorption += uv_residual * residual_cross_section(ascending)[:, None] * iron
+    short = ascending < LONGEST_LINES_CM
+    absorption[short] += line_opacity(ascending[short], gas, vmic, (absorption + scattering)[short])
+    place = np.empty(order.size, dtype=np.int64)
+    place[order] = np.arange(order.size)
+    on_grid, beside = place[: grid_cm.size], place[grid_cm.size :].reshape(beside_cm.shape)
+    absorbed = np.concatenate([absorption[on_grid], np.exp(np.log(absorption[beside]).mean(axis=0))])
+    opacity = absorbed + np.concatenate([scattering[on_grid], scattering[beside].mean(axis=0)])
+    wavelength = np.concatenate([grid_cm, beside_cm.mean(axis=0)])
+    both = solve_background(wavelength, opacity, absorbed / opacity, gas.temperature, column_mass)
+    parts = (slice(0, grid_cm.size), slice(grid_cm.size, None))
+    first, second = (
+        Background(**{item.name: getattr(both, item.name)[part] for item in fields(both)}) for part in parts
+    )
+    return first, second
+
+
+def _interpolated(grid: np.ndarray, values: np.ndarray, wavelength: np.ndarray) -> np.ndarray:
+    """Opacities (w, n) at other wavelengths inside the grid, linear in logarithms."""
+    left = np.clip(np.searchsorted(grid, wavelength, side="right") - 1, 0, max(grid.size - 2, 0))
+    if grid.size == 1:
+        return values[left]
+    share = (np.log(wavelength / grid[left]) / np.log(grid[left + 1] / grid[left]))[:, None]
+    logs = np.log(values)
+    return np.exp(logs[left] + share * (logs[left + 1] - logs[left]))
 
 
 def solve_background(wavelength_cm, opacity, destruction, temperature, column_mass) -> Background:
@@ -150,7 +199,8 @@ def solve_background(wavelength_cm, opacity, destruction, temperature, column_ma
     surface = np.empty(wavelength_cm.size)
     eddington, edges = np.full_like(opacity, 1.0 / 3.0), np.full((wavelength_cm.size, 2), 0.5)
     radiation_field(
-        steps, top, destruction, thermal, ANGLE_COSINES, ANGLE_WEIGHTS, eddington, mean, flux, surface, edges
-    )
+        steps, top, destruction, thermal, ANGLE_COSINES, ANGLE_WEIGHTS, eddington, mean, flux, surface, edges,
+        EDDINGTON_TOLERANCE,
+    )  # fmt: skip
     source = destruction * thermal + (1.0 - destruction) * mean
     return Background(wavelength_cm=wavelength_cm, opacity=opacity, source=source, mean=mean, surface=surface)

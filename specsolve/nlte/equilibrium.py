@@ -16,7 +16,7 @@ from specsolve.matter.composition import ELEMENTS, Composition
 from specsolve.matter.equation_of_state import Gas, equilibrium
 from specsolve.nlte.acceleration import History
 from specsolve.nlte.atom import ModelAtom
-from specsolve.nlte.background import Background, background
+from specsolve.nlte.background import Background, backgrounds
 from specsolve.nlte.collisions import LINE_CROSS_SECTION, collision_flows
 from specsolve.nlte.line_grid import doppler_width, line_grid
 from specsolve.nlte.line_transfer import line_fields
@@ -127,23 +127,10 @@ def medium(atmosphere: Atmosphere, composition: Composition, atom: ModelAtom, uv
     reference = int(np.argmin(np.abs(atmosphere.log_tau + 1.0)))
     shift = doppler_width(atom, temperature[reference : reference + 1], atmosphere.vmic)[0] / LIGHT_SPEED_CM_S
     wavelength = atom.line_wavelength_cm[lines]
-    samples = [wavelength * (1.0 + offset * shift) for offset in BACKGROUND_OFFSETS]
-    wanted = np.concatenate([photoionization_grid(), *samples])
-    order = np.argsort(wanted, kind="stable")
-    everything = background(wanted[order], gas, column_mass, atmosphere.vmic, uv_residual)
-    place = np.empty(order.size, dtype=np.int64)
-    place[order] = np.arange(order.size)
-    n_grid = wanted.size - wavelength.size * len(samples)
-    field = Background(
-        wavelength_cm=wanted[:n_grid],
-        opacity=everything.opacity[place[:n_grid]],
-        source=everything.source[place[:n_grid]],
-        mean=everything.mean[place[:n_grid]],
-        surface=everything.surface[place[:n_grid]],
-    )
-    beside = place[n_grid:].reshape(len(samples), -1)
-    opacity = np.exp(np.log(everything.opacity[beside]).mean(axis=0))
-    source, mean = everything.source[beside].mean(axis=0), everything.mean[beside].mean(axis=0)
+    beside = wavelength * (1.0 + shift * np.array(BACKGROUND_OFFSETS)[:, None])
+    grid_cm = photoionization_grid()
+    field, at_lines = backgrounds(grid_cm, beside, gas, column_mass, atmosphere.vmic, uv_residual)
+    opacity, source, mean = at_lines.opacity, at_lines.source, at_lines.mean
 
     population = lte[atom.line_lower[lines]]
     cross_section = LINE_CROSS_SECTION * atom.line_f[lines][:, None] * population

@@ -33,7 +33,10 @@ def _eliminate(lower, diagonal_extra, upper, right, ratio, value, out):
 
 
 @njit(cache=True, nogil=True)
-def radiation_field(steps, tops, destruction, thermal, cosines, weights, eddington, mean, flux, surface, edges):
+def radiation_field(
+    steps, tops, destruction, thermal, cosines, weights, eddington, mean, flux, surface, edges,
+    tolerance=EDDINGTON_TOLERANCE,
+):  # fmt: skip
     """Radiation field of all channels.
 
     Parameters
@@ -52,6 +55,8 @@ def radiation_field(steps, tops, destruction, thermal, cosines, weights, eddingt
         Returned H at the first point.
     edges : ndarray, shape (n_k, 2)
         Returned boundary factors H_0 / J_0 and (sum w mu u) / J at the bottom; on entry a first guess.
+    tolerance : float
+        On the change of the Eddington factors.
 
     Returns
     -------
@@ -131,7 +136,7 @@ def radiation_field(steps, tops, destruction, thermal, cosines, weights, eddingt
             for d in range(n):
                 mean[k, d] = total[d]
             surface[k] = top_flux
-            if change < EDDINGTON_TOLERANCE:
+            if change < tolerance:
                 settled = True
                 break
         if not settled:
