@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import sys
 from collections.abc import Sequence
+from concurrent.futures import Executor
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -13,7 +14,6 @@ import click
 
 from specsolve.cli import parsing
 from specsolve.cli.settings import Settings, common_options
-from specsolve.cli.solve import STDOUT, make_executor
 from specsolve.errors import (
     EXIT_INTERRUPTED,
     EXIT_NO_INPUT,
@@ -28,6 +28,7 @@ if TYPE_CHECKING:
 
 READ_COLUMNS = ("wavelength", "flux", "sigma", "mask", "order")
 DEFAULT_LIST = "default"
+STDOUT = "-"
 
 
 @dataclass(frozen=True)
@@ -225,6 +226,16 @@ def measure_all(settings: Settings, tasks: Sequence[Task], workers: int) -> Batc
     return batch
 
 
+def make_executor(workers: int) -> Executor | None:
+    """Processes for many spectra; `None` for one."""
+    if workers == 1:
+        return None
+    import multiprocessing
+    from concurrent.futures import ProcessPoolExecutor
+
+    return ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context("spawn"))
+
+
 def unique_names(measured: Sequence[Measured]) -> list[Measured]:
     """Give a star another name if an earlier spectrum has one of that name."""
     from dataclasses import replace
@@ -252,9 +263,16 @@ def provenance_of(spectra: Sequence[str], chosen: dict[str, Any]) -> dict[str, A
 
 
 def deliver(
-    settings: Settings, batch: Batch, provenance: dict[str, Any], output: str | None, plots: str | None, kind: str
+    settings: Settings,
+    batch: Batch,
+    provenance: dict[str, Any],
+    output: str | None,
+    plots: str | None,
+    kind: str,
+    *,
+    told: bool = True,
 ) -> None:
-    """Write tables and figures, print the summaries or JSON."""
+    """Write tables and figures, print the summaries or JSON; `told` says which tables were written."""
     from specsolve.report import measured as report
 
     if output == STDOUT:
@@ -269,7 +287,8 @@ def deliver(
                 click.echo(line)
     if output not in (None, STDOUT) and batch.good:
         paths = report.write(batch.measured, output, provenance)
-        settings.say("wrote " + ", ".join(str(path) for path in paths))
+        if told:
+            settings.say("wrote " + ", ".join(str(path) for path in paths))
     if plots is not None:
         from specsolve.report.spectrum_figures import save_pages
 

@@ -11,9 +11,9 @@ from typing import Any
 
 import click
 
-from specsolve.cli.measure import deliver, make_tasks, measure_all, provenance_of, spectrum_options
+from specsolve.cli.measure import STDOUT, deliver, make_tasks, measure_all, provenance_of, spectrum_options
 from specsolve.cli.settings import Settings, common_options
-from specsolve.cli.solve import STDOUT, solve
+from specsolve.cli.solve import solve
 from specsolve.errors import EXIT_INTERRUPTED, EXIT_SOLVED, EXIT_UNSOLVED, UsageError
 
 OF_THE_TABLE = {"columns", "ions", "units", "tables"}
@@ -77,7 +77,7 @@ def run(settings: Settings, spectra: tuple[str, ...], **chosen: Any) -> int:
         widths = (Path(output).parent if kept else Path(aside)) / f"{stem}{WIDTHS_ENDING}.ecsv"
         spoken = io.StringIO()
         with contextlib.redirect_stdout(spoken):
-            deliver(settings, batch, provenance, str(widths), for_solve["plots"], for_solve["plot_format"])
+            deliver(settings, batch, provenance, str(widths), for_solve["plots"], for_solve["plot_format"], told=kept)
         solved = io.StringIO()
         if settings.json:
             with contextlib.redirect_stdout(solved):
