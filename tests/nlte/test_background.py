@@ -32,6 +32,6 @@ def test_residual_darkens_the_ultraviolet():
     full = background(wavelength, gas, atmosphere.column_mass, atmosphere.vmic, 1.0)
     assert np.all(full.surface[:2] < bare.surface[:2])
     np.testing.assert_allclose(full.surface[2], bare.surface[2], rtol=1e-3)
-    assert np.all(full.opacity >= 0.999 * bare.opacity)  # weak lines are cut relative to the continuum
+    assert np.all(full.opacity >= 0.97 * bare.opacity)  # weak lines are cut relative to the continuum
     # deep inside the radiation is black-body radiation
     np.testing.assert_allclose(full.mean[:, -1], full.source[:, -1], rtol=0.02)
