@@ -154,6 +154,17 @@ def strengths_at(medium: Medium, lines: SpectralLines, layer: slice) -> np.ndarr
     return result
 
 
+def central_ratios(medium: Medium, lines: SpectralLines, vmic: float) -> np.ndarray:
+    """Line over continuum opacity at the lines' centres in the reference layer, without the loss by damping."""
+    at = reference_layer(medium.layers)
+    temperature = medium.layers.gas.temperature[at]
+    names, inverse = np.unique(lines.ion, return_inverse=True)
+    masses = np.array([ATOMIC_WEIGHTS[str(ion).split()[0]] * ATOMIC_MASS_G for ion in names])
+    doppler = np.array([float(doppler_width(temperature, float(vmic), mass)) for mass in masses])[inverse]
+    continuum = medium.factors.opacity[medium.block_of(lines.wavelength_air)]
+    return strengths_at(medium, lines, slice(at, at + 1))[:, 0] / doppler / continuum
+
+
 def opacities_of(medium: Medium, lines: SpectralLines, vmic: float, least: float = 1e-3) -> Opacities:
     """Opacities of the lines that matter.
 
@@ -176,8 +187,7 @@ def opacities_of(medium: Medium, lines: SpectralLines, vmic: float, least: float
     names, inverse = np.unique(lines.ion, return_inverse=True)
     element = np.array([row[str(ion).split()[0]] for ion in names])[inverse]
     block = medium.block_of(lines.wavelength_air)
-    continuum = medium.factors.opacity[block]
-    ratio = strengths_at(medium, lines, slice(at, at + 1))[:, 0] / doppler[element, at] / continuum
+    ratio = central_ratios(medium, lines, vmic)
     keep = np.flatnonzero(ratio > least)
     lines, element, block, ratio = lines.select(keep), element[keep], block[keep], ratio[keep]
     strength = strengths_at(medium, lines, slice(None))

@@ -31,7 +31,7 @@ def add_lines(part, wavelength, first, last, centre, reach, element, doppler, st
         Doppler width as a fraction of the wavelength.
     strength, damping : ndarray, shape (n_lines, n)
     """
-    n, n_points = part.shape
+    n = part.shape[0]
     for i in range(first, last):
         low = np.searchsorted(wavelength, centre[i] * (1.0 - reach[i]))
         high = np.searchsorted(wavelength, centre[i] * (1.0 + reach[i]))

@@ -11,7 +11,8 @@ from .broadening import FWHM_PER_SIGMA, LIGHT_SPEED_KM_S, ROTATION_TO_SIGMA, tot
 from .fit import Fit, pixel_range
 from .predict import N_TABLE, TABLE_STEP, Prediction
 
-MOST_LINES = 60
+MOST_LINES = 50
+N_SHORT = 256  # velocities of the shapes compared, 100 km/s
 DEPTHS = (0.04, 0.7)  # central depths of the lines that serve
 LARGEST_CONTAMINATION = 0.25
 ROTATION_GAIN = 16.0
@@ -54,15 +55,15 @@ def fit_broadening(fit: Fit, prediction: Prediction, instrument: float) -> Broad
     if data is None:
         return Broadening(fit.fwhm, float("nan"), fit.vsini, 0)
     rows, row_of, share, velocity, line, depth, weight = data
-    transforms = prediction.shapes[rows]
+    transforms = prediction.shapes[rows][:, :: N_TABLE // N_SHORT]
+    x = np.abs(velocity) / TABLE_STEP
+    i = np.minimum(x.astype(int), N_SHORT - 2)
+    t = x - i
     n_lines = int(line.max()) + 1
 
     def chi_square(fwhm: float, vsini: float) -> float:
-        kernel = transform(2 * N_TABLE, TABLE_STEP, fwhm=max(fwhm, 0.3), vsini=vsini)
-        table = np.fft.irfft(transforms * kernel, axis=1)[:, :N_TABLE]
-        x = np.abs(velocity) / TABLE_STEP
-        i = np.minimum(x.astype(int), N_TABLE - 2)
-        t = x - i
+        kernel = transform(2 * N_SHORT, TABLE_STEP, fwhm=max(fwhm, 0.3), vsini=vsini)
+        table = np.fft.irfft(transforms * kernel, axis=1)[:, :N_SHORT]
         phi = (1.0 - share) * ((1.0 - t) * table[row_of, i] + t * table[row_of, i + 1])
         phi += share * ((1.0 - t) * table[row_of + 1, i] + t * table[row_of + 1, i + 1])
         own = np.bincount(line, weight * phi * phi, n_lines)
@@ -84,7 +85,7 @@ def fit_broadening(fit: Fit, prediction: Prediction, instrument: float) -> Broad
             lambda p: chi_square(np.hypot(low, p[0]), abs(p[1])),
             [0.3 * floor, excess],
             method="Nelder-Mead",
-            options={"xatol": 0.05, "fatol": 0.1, "maxfev": 60},
+            options={"xatol": 0.1, "fatol": 1.0, "maxfev": 40},
         )
         if (chi2 - two.fun) / scale > ROTATION_GAIN:
             fwhm, vsini, chi2 = float(np.hypot(low, two.x[0])), float(abs(two.x[1])), float(two.fun)
@@ -101,7 +102,7 @@ def _pixels(fit: Fit):
     peak = lines.width[own] * fit.shapes[lines.row[own], 0]
     total = total_fwhm(fit.fwhm, fit.vsini)
     alone = systems.depth_of(fit.wavelength, fit.order, lines, fit.shapes, fit.reach, own)
-    others = fit.depth - alone
+    others = 1.0 - (1.0 - fit.depth) / (1.0 - alone)
     quality = np.full(own.size, -np.inf)
     ranges = [pixel_range(fit, j, 0.9 * total + 3.0) for j in own]
     for k, (low, high) in enumerate(ranges):
@@ -125,7 +126,7 @@ def _pixels(fit: Fit):
         share.append(np.full(size, lines.share[j]))
         velocity.append((fit.wavelength[low:high] / lines.centre[j] - 1.0) * LIGHT_SPEED_KM_S - lines.shift[j])
         number.append(np.full(size, n))
-        depth.append(1.0 - fit.flux[low:high] / continuum[low:high] - others[low:high])
+        depth.append(1.0 - fit.flux[low:high] / continuum[low:high] / (1.0 - others[low:high]))
         error = np.hypot(fit.sigma[low:high], fit.options.shape_error * peak[k])
         weight.append(1.0 / error**2)
     joined = [np.concatenate(v) for v in (row_of, share, velocity, number, depth, weight)]

@@ -19,7 +19,7 @@ from .continuum import (
     update_part,
 )
 from .options import MeasureOptions
-from .predict import Prediction
+from .predict import OWN_STEP, Prediction
 from .system import FIXED, NEIGHBOUR, TARGET, Lines, Priors
 from .types import Spectrum
 
@@ -27,8 +27,12 @@ FOUND_SIGNIFICANCE = 5.0
 """Absorption that nobody predicted becomes a line of its own above this many sigma ..."""
 FOUND_DEPTH = 0.01  # ... and this depth
 FOUND_ERROR = 1.0  # of ln W, beforehand
+COSMIC_SHAPE_ERROR = 0.04
+"""A line that is less deep than fitted by less than 5 times this part of its depth is no cosmic ray."""
 LARGEST_STRETCH = 0.5  # |ln| of the factor on a line's width
 LARGEST_SHIFT = 4.0  # km/s
+LARGEST_WING = 2.0  # steps of the shapes, 0.8 dex
+LEAST_LEVEL = 0.2  # of the corrected continuum
 LARGEST_STEP = 1.0  # in ln W of a neighbour, an iteration
 
 
@@ -59,6 +63,8 @@ class Fit:
         Part of the pixels with unpredicted absorption.
     probability : ndarray, shape (n_pixels,)
         That a pixel holds none.
+    depth, continuum : ndarray, shape (n_pixels,)
+        Of all lines together, and corrected continuum, about 1.
     """
 
     wavelength: np.ndarray
@@ -79,6 +85,7 @@ class Fit:
     part: float = 0.03
     probability: np.ndarray = field(default_factory=lambda: np.empty(0))
     depth: np.ndarray = field(default_factory=lambda: np.empty(0))
+    continuum: np.ndarray = field(default_factory=lambda: np.empty(0))
 
     @property
     def reach(self) -> float:
@@ -86,17 +93,17 @@ class Fit:
         return 1.2 * total_fwhm(self.fwhm, self.vsini) + 4.0
 
     @property
-    def continuum(self) -> np.ndarray:
-        """Corrected continuum at the pixels, about 1."""
-        return self.knots.evaluate(self.levels)
-
-    @property
     def targets(self) -> np.ndarray:
         """Entries of the lines to measure."""
         return np.flatnonzero(self.lines.kind == TARGET)
 
+    def move_continuum(self, step: np.ndarray) -> None:
+        """Change the levels at the knots."""
+        self.levels = np.maximum(self.levels + step, LEAST_LEVEL)
+        self.continuum = self.knots.evaluate(self.levels)
+
     def update_depth(self) -> None:
-        """Sum of the depths of all lines."""
+        """Depth of all lines together."""
         self.depth = systems.depth_of(self.wavelength, self.order, self.lines, self.shapes, self.reach)
 
     def near_targets(self, distance: float) -> np.ndarray:
@@ -165,9 +172,15 @@ def start_fit(
         fwhm=fwhm,
         vsini=vsini,
         options=options,
-        priors=Priors(shift=options.shift_error, stretch=options.stretch_error, level_change=change),
+        priors=Priors(
+            shift=options.shift_error,
+            stretch=options.stretch_error,
+            wing=options.wing_error / OWN_STEP,
+            level_change=change,
+        ),
         probability=np.ones(good.size),
     )
+    fit.move_continuum(np.zeros(len(knots)))
     choose_kinds(fit)
     fit.update_depth()
     return fit
@@ -197,6 +210,7 @@ def entries(prediction: Prediction, wavelength: np.ndarray, order: np.ndarray) -
         prior_error=np.zeros(n),
         shift=np.zeros(n),
         stretch=np.ones(n),
+        wing=np.zeros(n),
         row=np.zeros(n, np.int64),
         share=np.zeros(n),
     )
@@ -204,20 +218,15 @@ def entries(prediction: Prediction, wavelength: np.ndarray, order: np.ndarray) -
 
 def assign_shapes(lines: Lines, prediction: Prediction) -> None:
     """Shapes that fit the present widths, in place."""
-    known = lines.source >= 0
-    widths = prediction.relative_width.copy()
     family = prediction.shape_width[prediction.family]
     logarithm = np.log10(np.maximum(lines.width / LIGHT_SPEED_KM_S, 1e-9))
     at = np.clip(np.searchsorted(family, logarithm) - 1, 0, family.size - 2)
     lines.row[:] = prediction.family.start + at
     lines.share[:] = np.clip((logarithm - family[at]) / (family[at + 1] - family[at]), 0.0, 1.0)
-    own = np.flatnonzero(known)
-    own = own[prediction.own_shape[lines.source[own]] >= 0]
-    for number in np.unique(lines.order[own]):
-        of = own[lines.order[own] == number]
-        widths[lines.source[of]] = lines.width[of] / LIGHT_SPEED_KM_S
-        row, share = prediction.rows_for(widths)
-        lines.row[of], lines.share[of] = row[lines.source[of]], share[lines.source[of]]
+    own = np.flatnonzero(lines.own >= 0)
+    lines.row[own], lines.share[own] = prediction.rows_for(
+        lines.source[own], lines.width[own] / LIGHT_SPEED_KM_S, lines.wing[own]
+    )
 
 
 def choose_kinds(fit: Fit) -> None:
@@ -225,7 +234,9 @@ def choose_kinds(fit: Fit) -> None:
     lines = fit.lines
     own = own_entries(fit)
     peak = lines.width * fit.shapes[lines.row, 0]
-    lines.kind[:] = np.where(peak > fit.options.least_neighbour_depth, NEIGHBOUR, FIXED)
+    noise = float(np.median(fit.sigma[fit.good])) if fit.good.any() else 0.0
+    least = max(fit.options.least_neighbour_depth, 0.6 * noise)  # shallower ones the data cannot correct
+    lines.kind[:] = np.where(peak > least, NEIGHBOUR, FIXED)
     lines.prior_error[:] = np.where(lines.source >= 0, fit.options.neighbour_error, FOUND_ERROR)
     lines.kind[own] = TARGET
 
@@ -276,7 +287,8 @@ def iterate(fit: Fit, prediction: Prediction, *, weigh: bool) -> None:
     lines.shift[own] = np.clip(lines.shift[own] + step[column[own] + 1], -LARGEST_SHIFT, LARGEST_SHIFT)
     stretch = np.log(lines.stretch[own]) + np.clip(step[column[own] + 2], -0.2, 0.2)
     lines.stretch[own] = np.exp(np.clip(stretch, -LARGEST_STRETCH, LARGEST_STRETCH))
-    fit.levels = np.maximum(fit.levels + step_knots, 0.2)
+    lines.wing[own] = np.clip(lines.wing[own] + np.clip(step[column[own] + 3], -0.5, 0.5), -LARGEST_WING, LARGEST_WING)
+    fit.move_continuum(step_knots)
     assign_shapes(lines, prediction)
     fit.update_depth()
 
@@ -291,7 +303,8 @@ def weights(fit: Fit, residual: np.ndarray, *, weigh: bool) -> np.ndarray:
         among = fit.good & ~core & (fit.depth < 0.3)
         fit.part = update_part(probability, among)
         fit.probability = np.where(core, 1.0, probability)
-        fit.cosmic = fit.good & (deviation > POSITIVE_OUTLIER)
+        coarse = np.hypot(fit.sigma, COSMIC_SHAPE_ERROR * np.clip(fit.depth, 0.0, 1.0))
+        fit.cosmic = fit.good & (residual > POSITIVE_OUTLIER * coarse)
     usable = fit.good & ~fit.cosmic
     return np.where(usable, fit.probability / np.where(usable, error, 1.0) ** 2, 0.0)
 
@@ -349,6 +362,7 @@ def added(lines: Lines, centre: np.ndarray, order: np.ndarray, width: np.ndarray
         "prior_error": np.full(n, FOUND_ERROR),
         "shift": np.zeros(n),
         "stretch": np.ones(n),
+        "wing": np.zeros(n),
         "row": np.zeros(n, np.int64),
         "share": np.zeros(n),
     }

@@ -10,16 +10,16 @@ from specsolve.errors import SpectrumError
 from specsolve.formation.spectral_lines import SpectralLines
 from specsolve.lines import LineList
 
-from . import system as systems
 from . import types as t
 from .broadening import LIGHT_SPEED_KM_S, total_fwhm
 from .common import Broadening, fit_broadening
-from .fit import Fit, assign_shapes, choose_kinds, find_lines, iterate, start_fit
+from .fit import Fit, assign_shapes, choose_kinds, find_lines, iterate, pixel_range, start_fit
 from .flags import SPOILING, flags_of, telluric
 from .options import MeasureOptions
 from .predict import Prediction, predict
 from .results import (
     cross_checks,
+    depth_alone,
     edge_of_order,
     errors_of,
     half_width,
@@ -189,9 +189,10 @@ def collect(
             fit.lines.row[j] + 1
         ]
         fwhm = half_width(shape) * fit.lines.stretch[j]
-        alone = systems.depth_of(fit.wavelength, fit.order, fit.lines, fit.shapes, fit.reach, np.array([j]))
-        low, high = _range(fit, j, 1.2 * fwhm + 2.0)
-        checks = cross_checks(fit, j, alone[low:high], (fit.depth - alone)[low:high], low, high, fwhm)
+        low, high = pixel_range(fit, j, 1.2 * fwhm + 2.0)
+        alone = depth_alone(fit, j, low, high)
+        others = 1.0 - (1.0 - fit.depth[low:high]) / (1.0 - alone)
+        checks = cross_checks(fit, j, alone, others, low, high, fwhm)
         width = fit.lines.width[j]
         unknown = unknown_variance(fit, prediction, j, fit.options.unknown_part)
         noise = errors["noise"][k]
@@ -216,7 +217,7 @@ def collect(
         for name in marks:
             marks[name][i] = checks[name]
         if windows:
-            kept[line] = window_of(fit, j, alone, fwhm, level_error[i])
+            kept[line] = window_of(fit, j, level_error[i], fwhm)
     columns["upper_limit"] = 3.0 * columns["equivalent_width_error"]
     flags = np.full(n, t.FLAG_NOT_COVERED, np.int64)
     j = entries[chosen]
@@ -266,12 +267,6 @@ def collect(
         notes=notes_of(spectrum, fit, broadening, offset),
         **columns,
     )
-
-
-def _range(fit: Fit, entry: int, distance: float) -> tuple[int, int]:
-    from .fit import pixel_range
-
-    return pixel_range(fit, entry, distance)
 
 
 def _level_errors(fit: Fit, entries: np.ndarray) -> np.ndarray:

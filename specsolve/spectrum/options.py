@@ -25,6 +25,9 @@ class MeasureOptions:
         1-sigma of the position of a line [km/s].
     stretch_error : float
         1-sigma of ln of a line's width against the common broadening.
+    wing_error : float
+        1-sigma of how far a line's shape may be from that of its width, in opacity [dex]: the guess has another
+        microturbulence and another damping than the star.
     least_neighbour_depth : float
         Neighbours that are shallower are taken out as predicted.
     shape_error : float
@@ -41,6 +44,7 @@ class MeasureOptions:
     neighbour_error: float = 0.6
     shift_error: float = 0.4
     stretch_error: float = 0.04
+    wing_error: float = 0.2
     least_neighbour_depth: float = 0.004
     shape_error: float = 0.01
     unknown_part: float = 0.15

@@ -18,6 +18,7 @@ from specsolve.errors import InputError
 from specsolve.formation.spectral_lines import SpectralLines
 from specsolve.formation.synthesis import (
     Medium,
+    central_ratios,
     line_profiles,
     line_widths,
     make_medium,
@@ -29,15 +30,19 @@ from specsolve.matter.composition import composition_for
 
 from .broadening import LIGHT_SPEED_KM_S, transform
 
-OWN_DA = np.arange(-1.6, 1.7, 0.4)
+OWN_STEP = 0.4  # dex
+OWN_DA = np.arange(-4, 5) * OWN_STEP
 """Abundances, relative to the guess, at which the shapes of the lines to measure are computed [dex]."""
 FAMILY_DA = np.arange(-2.5, 5.1, 0.5)
 """The same for the one line whose shapes stand for those of all neighbours [dex]."""
 FAMILY_LINE = (5500.0, "Fe I", 3.0, -2.5)
 N_TABLE = 1024
 TABLE_STEP = 0.4  # km/s: the tables reach 410 km/s
-LEAST_CENTRAL_RATIO = 4e-3
-"""Neighbours whose central opacity is below this part of the continuum's are left out: their widths stay below 0.2 mA."""
+LEAST_CENTRAL_RATIO = 3e-4
+"""Neighbours whose central opacity is below this part of the continuum's are left out: their widths stay below 0.02 mA;
+all of them together take less than 0.02 % of the light of the Sun."""
+WEAK_CENTRAL_RATIO = 5e-3
+"""Below this a width is proportional to the central opacity."""
 PREDICTION_LAYERS = 40
 LIMITS = (4350.0, 8050.0)  # Angstrom, where the table of neighbours is complete
 
@@ -94,17 +99,19 @@ class Prediction:
         kernel = transform(2 * N_TABLE, TABLE_STEP, fwhm=fwhm, vsini=vsini)
         return np.fft.irfft(self.shapes[rows] * kernel, axis=1)[:, :N_TABLE]
 
-    def rows_for(self, relative_width) -> tuple[np.ndarray, np.ndarray]:
-        """Row below each line's width, and the share of the row above it."""
+    def rows_for(self, source: np.ndarray, relative_width: np.ndarray, wing: np.ndarray):
+        """Row below, and the share of the row above, for own lines of a width, `wing` steps further along the shapes."""
         logarithm = np.log10(np.maximum(relative_width, 1e-9))
-        first = np.where(self.own_shape >= 0, self.own_shape, self.family.start)
-        count = np.where(self.own_shape >= 0, OWN_DA.size, self.family.stop - self.family.start)
-        row = first.copy()
-        for _ in range(int(count.max()) - 2):
-            up = (row + 1 < first + count - 1) & (logarithm > self.shape_width[row + 1])
-            row += up
-        low, high = self.shape_width[row], self.shape_width[row + 1]
-        return row, np.clip((logarithm - low) / (high - low), 0.0, 1.0)
+        first = self.own_shape[source]
+        rows = first[:, None] + np.arange(OWN_DA.size)
+        known = self.shape_width[rows]
+        below = np.clip((logarithm[:, None] > known).sum(axis=1) - 1, 0, OWN_DA.size - 2)
+        at = np.arange(source.size)
+        low, high = known[at, below], known[at, below + 1]
+        place = below + np.clip((logarithm - low) / (high - low), 0.0, 1.0) + wing
+        place = np.clip(place, 0.0, OWN_DA.size - 1.0)
+        below = np.minimum(place.astype(np.int64), OWN_DA.size - 2)
+        return first + below, place - below
 
     def scaled(self, dA: float) -> np.ndarray:
         """W / lambda if all lines had dA more opacity [dex], by the family's curve of growth."""
@@ -179,7 +186,17 @@ def predict(lines: LineList, guess: Guess, neighbours: SpectralLines | None = No
 
 def from_medium(medium: Medium, everything: SpectralLines, vmic: float) -> Prediction:
     """Widths and shapes of lines in one atmosphere."""
-    near = opacities_of(medium, everything.select(everything.own < 0), vmic, LEAST_CENTRAL_RATIO)
+    others = everything.select(everything.own < 0)
+    ratio = central_ratios(medium, others, vmic)
+    near = opacities_of(medium, others.select(ratio > WEAK_CENTRAL_RATIO), vmic, -1.0)
+    near_width = line_widths(medium, near, n_points=11)[:, 0]
+    near_ratio = ratio[ratio > WEAK_CENTRAL_RATIO]
+    faint = (ratio > LEAST_CENTRAL_RATIO) & (ratio <= WEAK_CENTRAL_RATIO)
+    weak = near_ratio < 4.0 * WEAK_CENTRAL_RATIO
+    per_ratio = np.median(near_width[weak] / near_ratio[weak]) if weak.any() else 0.0
+    neighbours = near.lines.joined(others.select(faint))
+    order = np.argsort(np.concatenate([near.lines.wavelength_air, others.wavelength_air[faint]]), kind="stable")
+    neighbour_width = np.concatenate([near_width, per_ratio * ratio[faint]])[order]
     own = opacities_of(medium, everything.select(everything.own >= 0), vmic, -1.0)
     family = opacities_of(medium, _family_line(), vmic, -1.0)
     velocity, weights = velocity_points(41)
@@ -187,16 +204,16 @@ def from_medium(medium: Medium, everything: SpectralLines, vmic: float) -> Predi
     family_depths = line_profiles(medium, family, velocity, FAMILY_DA)
     depths = np.concatenate([own_depths.reshape(-1, velocity.size), family_depths[0]])
     widths = depths @ weights
-    lines = own.lines.joined(near.lines)
-    order = np.argsort(np.concatenate([own.lines.wavelength_air, near.lines.wavelength_air]), kind="stable")
+    lines = own.lines.joined(neighbours)
+    order = np.argsort(np.concatenate([own.lines.wavelength_air, neighbours.wavelength_air]), kind="stable")
     centre = int(np.argmin(np.abs(OWN_DA)))
     relative = np.concatenate(
         [
             own_depths[:, centre] @ weights / LIGHT_SPEED_KM_S,
-            line_widths(medium, near, n_points=11)[:, 0],
+            neighbour_width,
         ]
     )
-    shape = np.concatenate([np.arange(len(own.lines)) * OWN_DA.size, np.full(len(near.lines), -1)])
+    shape = np.concatenate([np.arange(len(own.lines)) * OWN_DA.size, np.full(len(neighbours), -1)])
     return Prediction(
         lines=lines,
         relative_width=np.maximum(relative[order], 1e-9),

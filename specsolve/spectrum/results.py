@@ -42,17 +42,17 @@ def errors_of(fit: Fit) -> dict[str, np.ndarray]:
     built = systems.build(*arguments, weight, residual, fit.reach)
     systems.add_priors(built, fit.lines, fit.knots, fit.levels, fit.priors)
     own = built.column[:-1][fit.targets]
-    every = np.concatenate([own, own + 1, own + 2])
-    variances = built.line_variances(every).reshape(3, -1)
+    given = built.line_covariances(own, 4)
+    variances = np.array([given[:, i, i] for i in range(3)])
     covariance, response = built.continuum_covariance()
     common = response[own] @ covariance @ response[own].T
     usable = fit.good & ~fit.cosmic
     photon = np.where(usable, 1.0 / np.where(usable, fit.sigma, 1.0) ** 2, 0.0)
     alone = systems.build(*arguments, photon, residual, fit.reach)
     systems.add_priors(alone, fit.lines, fit.knots, fit.levels, fit.priors)
-    block = np.empty((own.size, 3, 3))
-    for i in range(3):
-        for j in range(3):
+    block = np.empty((own.size, 4, 4))
+    for i in range(4):
+        for j in range(4):
             low, high = min(i, j), max(i, j)
             block[:, i, j] = alone.band[high - low, own + low] if high - low < alone.band.shape[0] else 0.0
     return {
@@ -103,8 +103,9 @@ def cross_checks(fit: Fit, entry: int, line: np.ndarray, others: np.ndarray, low
     velocity = (fit.wavelength[at] / lines.centre[entry] - 1.0) * LIGHT_SPEED_KM_S - lines.shift[entry]
     step = np.gradient(velocity)
     usable = fit.good[at] & ~fit.cosmic[at]
-    data = np.where(usable, 1.0 - fit.flux[at] / fit.continuum[at] - others, line)
-    sigma = np.where(usable, fit.sigma[at] / fit.continuum[at], 0.0)
+    free = fit.continuum[at] * (1.0 - others)
+    data = np.where(usable, 1.0 - fit.flux[at] / free, line)
+    sigma = np.where(usable, fit.sigma[at] / free, 0.0)
     reach = 1.0 * fwhm
     inside = np.clip((reach + 0.5 * step - np.abs(velocity)) / step, 0.0, 1.0)  # part of each pixel within the range
     covered = float(np.sum(inside * step * line))
@@ -131,13 +132,19 @@ def cross_checks(fit: Fit, entry: int, line: np.ndarray, others: np.ndarray, low
     }
 
 
-def window_of(fit: Fit, entry: int, alone: np.ndarray, fwhm: float, level_error: float) -> Window:
+def depth_alone(fit: Fit, entry: int, low: int, high: int) -> np.ndarray:
+    """Depth of one line at the pixels from low to high."""
+    at = slice(low, high)
+    one = np.array([entry])
+    return systems.depth_of(fit.wavelength[at], fit.order[at], fit.lines, fit.shapes, fit.reach, one)
+
+
+def window_of(fit: Fit, entry: int, level_error: float, fwhm: float) -> Window:
     """Pixels and fit around one line."""
     low, high = pixel_range(fit, entry, WINDOW_FWHM * fwhm)
     at = slice(low, high)
     continuum = fit.continuum[at]
-    line = np.zeros(high - low)
-    line += alone[at]
+    line = depth_alone(fit, entry, low, high)
     good = fit.good[at]
     return Window(
         wavelength_air=fit.wavelength[at].copy(),
@@ -145,7 +152,7 @@ def window_of(fit: Fit, entry: int, alone: np.ndarray, fwhm: float, level_error:
         sigma=np.where(good, fit.sigma[at] / continuum, np.nan),
         model=1.0 - fit.depth[at],
         line=1.0 - line,
-        neighbours=1.0 - (fit.depth[at] - line),
+        neighbours=(1.0 - fit.depth[at]) / (1.0 - line),
         used=good & ~fit.cosmic[at] & (fit.probability[at] > 0.5),
         continuum_error=level_error,
     )
@@ -154,7 +161,8 @@ def window_of(fit: Fit, entry: int, alone: np.ndarray, fwhm: float, level_error:
 def edge_of_order(fit: Fit, entry: int, distance: float) -> bool:
     """Whether a line's core lies within a distance [km/s] of the end of its order or of a gap in the pixels."""
     order = fit.lines.order[entry]
-    w = fit.wavelength[(fit.order == order) & fit.good]
+    low, high = np.searchsorted(fit.order, order), np.searchsorted(fit.order, order, side="right")
+    w = fit.wavelength[low:high][fit.good[low:high]]
     part = distance / LIGHT_SPEED_KM_S
     centre = fit.lines.centre[entry]
     return bool(w[0] > centre * (1.0 - part) or w[-1] < centre * (1.0 + part))

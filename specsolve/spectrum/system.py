@@ -1,7 +1,8 @@
 """All lines and the continuum of a spectrum in one least-squares system.
 
-Model: F = C (1 - sum of W phi), with C piecewise straight and phi the broadened shape of each line. Parameters: W,
-shift and stretch of every line to measure, ln W of every neighbour that matters, C at its knots. The lines make a banded
+Model: F = C times the product of (1 - W phi), with C piecewise straight and phi the broadened shape of each line (a
+product, because a weak line in a deep one finds less light to take). Parameters: W,
+shift, stretch and wing of every line to measure, ln W of every neighbour that matters, C at its knots. The lines make a banded
 matrix, bordered by the continuum:
 
     | L  B | |x|   |p|
@@ -46,6 +47,8 @@ class Lines:
         1-sigma of ln W of a neighbour beforehand.
     shift, stretch : ndarray
         [km/s], factor on the broadened shape's width.
+    wing : ndarray
+        Steps along the line's shapes away from that of its width: more of the line in its wings.
     row, share : ndarray
         Shape: row below, share of the next row.
     """
@@ -60,6 +63,7 @@ class Lines:
     prior_error: np.ndarray
     shift: np.ndarray
     stretch: np.ndarray
+    wing: np.ndarray
     row: np.ndarray
     share: np.ndarray
 
@@ -77,16 +81,21 @@ class Priors:
         Of a line to measure [km/s].
     stretch : float
         Of ln of the factor on a line's width.
+    wing : float
+        Of `Lines.wing`.
     level_change : float
         Of the corrected continuum between knots.
     """
 
     shift: float
     stretch: float
+    wing: float
     level_change: float
 
 
-LEAST_DEPTH = 3e-4
+LARGEST_REACH = 60  # parameters
+FREE_WIDTH = 1e3  # km/s, 1-sigma of W c / lambda of a line to measure: no knowledge
+LEAST_DEPTH = 2e-5
 """A line's depth is followed out to this; its parameters' effect out to `LEAST_COLUMN`."""
 LEAST_COLUMN = 2e-3
 
@@ -103,12 +112,19 @@ class System:
     column: np.ndarray
 
     def solve(self) -> tuple[np.ndarray, np.ndarray]:
-        """Steps of the line parameters and of the knots."""
-        eliminated = self._eliminate(np.column_stack([self.border, self.right]))
-        response, free = eliminated[:, :-1], eliminated[:, -1]
-        schur = self.corner - self.border.T @ response
-        knots = np.linalg.solve(schur, self.right_knots - self.border.T @ free)
-        return free - response @ knots, knots
+        """Steps of the line parameters and of the knots, by sparse elimination of the whole."""
+        from scipy import sparse
+        from scipy.sparse.linalg import splu
+
+        n = self.band.shape[1]
+        offsets = np.arange(self.band.shape[0])
+        lower = sparse.dia_array((self.band, -offsets), shape=(n, n))
+        lines = lower + sparse.triu(lower.T, 1)
+        border = sparse.csc_array(self.border)
+        whole = sparse.block_array([[lines, border], [border.T, sparse.csc_array(self.corner)]], format="csc")
+        factors = splu(whole, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True})
+        step = factors.solve(np.concatenate([self.right, self.right_knots]))
+        return step[:n], step[n:]
 
     def _eliminate(self, right: np.ndarray) -> np.ndarray:
         from scipy.linalg import solveh_banded
@@ -122,11 +138,35 @@ class System:
         response = self._eliminate(self.border)
         return np.linalg.inv(self.corner - self.border.T @ response), -response
 
-    def line_variances(self, which: np.ndarray) -> np.ndarray:
-        """Variances of some line parameters for a given continuum."""
-        unit = np.zeros((self.band.shape[1], which.size))
-        unit[which, np.arange(which.size)] = 1.0
-        return self._eliminate(unit)[which, np.arange(which.size)]
+    def line_covariances(self, columns: np.ndarray, size: int) -> np.ndarray:
+        """Covariances of blocks of `size` neighbouring line parameters for a given continuum.
+
+        The inverse of a banded matrix falls off with distance: of the matrix two bandwidths to both sides enter.
+
+        Parameters
+        ----------
+        columns : ndarray of int, shape (n,)
+            First parameter of each block.
+
+        Returns
+        -------
+        ndarray, shape (n, size, size)
+        """
+        width, n = self.band.shape[0] - 1, self.band.shape[1]
+        reach = min(2 * width + size, LARGEST_REACH)
+        result = np.empty((columns.size, size, size))
+        for k, first in enumerate(columns):
+            low, high = max(first - reach, 0), min(first + size + reach, n)
+            m = high - low
+            block = np.zeros((m, m))
+            for d in range(min(width, m - 1) + 1):
+                values = self.band[d, low : high - d]
+                block[np.arange(d, m), np.arange(m - d)] = values
+                block[np.arange(m - d), np.arange(d, m)] = values
+            unit = np.zeros((m, size))
+            unit[first - low + np.arange(size), np.arange(size)] = 1.0
+            result[k] = np.linalg.solve(block, unit)[first - low : first - low + size]
+        return result
 
 
 def runs(wavelength, order, lines: Lines, shapes, least_depth: float, least_reach: float):
@@ -150,11 +190,11 @@ def runs(wavelength, order, lines: Lines, shapes, least_depth: float, least_reac
 
 
 def depth_of(wavelength, order, lines: Lines, shapes, least_reach: float, which=slice(None)) -> np.ndarray:
-    """Sum of the depths of some lines at the pixels."""
+    """Depth of some lines together at the pixels, 1 - product of (1 - depth)."""
     some = pick(lines, which)
     start, stop = runs(wavelength, order, some, shapes, LEAST_DEPTH, least_reach)
-    depth = np.zeros(wavelength.size)
-    kernels.depths_of_lines(
+    transmission = np.ones(wavelength.size)
+    kernels.transmit(
         wavelength,
         start,
         stop,
@@ -166,9 +206,9 @@ def depth_of(wavelength, order, lines: Lines, shapes, least_reach: float, which=
         some.share,
         shapes,
         TABLE_STEP,
-        depth,
+        transmission,
     )
-    return depth
+    return 1.0 - transmission
 
 
 def pick(lines: Lines, which) -> Lines:
@@ -184,12 +224,12 @@ def build(
     Parameters
     ----------
     continuum, depth : ndarray, shape (n_pixels,)
-        Present corrected continuum and sum of depths.
+        Present corrected continuum and depth of all lines.
     weight, residual : ndarray, shape (n_pixels,)
         Inverse variances, and data minus model.
     """
     start, stop = runs(wavelength, order, lines, shapes, LEAST_COLUMN, least_reach)
-    n_of = np.array([0, 1, 3])[lines.kind]
+    n_of = np.array([0, 1, 4])[lines.kind]
     column = np.concatenate([[0], np.cumsum(n_of)])
     n = int(column[-1])
     owner = np.repeat(np.arange(len(lines)), n_of)
@@ -208,6 +248,7 @@ def build(
         lines.share,
         shapes,
         TABLE_STEP,
+        1.0 - depth,
         lines.kind,
         column,
         offset,
@@ -241,10 +282,13 @@ def add_priors(system: System, lines: Lines, knots: Knots, levels: np.ndarray, p
     system.band[0, column[neighbour]] += precision
     system.right[column[neighbour]] += precision * np.log(lines.prior_width[neighbour] / lines.width[neighbour])
     target = np.flatnonzero(lines.kind == TARGET)
+    system.band[0, column[target]] += 1.0 / FREE_WIDTH**2  # a line without usable pixels
     system.band[0, column[target] + 1] += 1.0 / priors.shift**2
     system.right[column[target] + 1] -= lines.shift[target] / priors.shift**2
     system.band[0, column[target] + 2] += 1.0 / priors.stretch**2
     system.right[column[target] + 2] -= np.log(lines.stretch[target]) / priors.stretch**2
+    system.band[0, column[target] + 3] += 1.0 / priors.wing**2
+    system.right[column[target] + 3] -= lines.wing[target] / priors.wing**2
     same = np.flatnonzero(knots.order[1:] == knots.order[:-1])
     stiff = 1.0 / priors.level_change**2
     difference = levels[same + 1] - levels[same]

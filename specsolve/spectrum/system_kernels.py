@@ -10,6 +10,7 @@ import numpy as np
 from numba import njit
 
 LIGHT_SPEED_KM_S = 299792.458
+LEAST_TRANSMISSION = 0.02  # of one line; lines end near 0.05
 
 
 @njit(cache=True, nogil=True)
@@ -30,9 +31,9 @@ def runs_of_lines(
     """
     n = shapes.shape[1]
     for j in range(centre.size):
-        reach = n - 1
-        while reach > 0 and abs(width[j]) * shapes[row[j], reach] < least_depth:
-            reach -= 1
+        reach = 0
+        while reach < n - 1 and abs(width[j]) * shapes[row[j], reach] > least_depth:
+            reach = min(reach + 2 + reach // 8, n - 1)
         fraction = max(reach * step, least_reach) / LIGHT_SPEED_KM_S
         low = np.searchsorted(order, line_order[j])
         high = np.searchsorted(order, line_order[j], side="right")
@@ -41,8 +42,8 @@ def runs_of_lines(
 
 
 @njit(cache=True, nogil=True)
-def depths_of_lines(wavelength, start, stop, centre, width, shift, stretch, row, share, shapes, step, depth):
-    """Add the depths of lines to `depth` of shape (n_pixels,)."""
+def transmit(wavelength, start, stop, centre, width, shift, stretch, row, share, shapes, step, transmission):
+    """Multiply `transmission`, shape (n_pixels,), by 1 - depth of every line."""
     n = shapes.shape[1]
     for j in range(centre.size):
         scale = 1.0 / (stretch[j] * step)
@@ -53,19 +54,35 @@ def depths_of_lines(wavelength, start, stop, centre, width, shift, stretch, row,
                 t = x - i
                 a = (1.0 - t) * shapes[row[j], i] + t * shapes[row[j], i + 1]
                 b = (1.0 - t) * shapes[row[j] + 1, i] + t * shapes[row[j] + 1, i + 1]
-                depth[p] += width[j] / stretch[j] * ((1.0 - share[j]) * a + share[j] * b)
+                depth = width[j] / stretch[j] * ((1.0 - share[j]) * a + share[j] * b)
+                transmission[p] *= max(1.0 - depth, LEAST_TRANSMISSION)
 
 
 @njit(cache=True, nogil=True)
 def columns_of_lines(
-    wavelength, start, stop, centre, width, shift, stretch, row, share, shapes, step, kind, column, offset, values
+    wavelength,
+    start,
+    stop,
+    centre,
+    width,
+    shift,
+    stretch,
+    row,
+    share,
+    shapes,
+    step,
+    transmission,
+    kind,
+    column,
+    offset,
+    values,
 ):
-    """Derivatives of the depth by the parameters of each line.
+    """Derivatives of the depth of all lines together by the parameters of each.
 
     Parameters
     ----------
     kind : ndarray of int, shape (n_lines,)
-        0: no parameter; 1: ln W; 2: W [km/s], shift [km/s], ln stretch.
+        0: no parameter; 1: ln W; 2: W [km/s], shift [km/s], ln stretch, step along its shapes.
     column : ndarray of int, shape (n_lines,)
         The line's first column.
     offset : ndarray of int, shape (n_columns,)
@@ -82,24 +99,28 @@ def columns_of_lines(
             v = (wavelength[p] / centre[j] - 1.0) * LIGHT_SPEED_KM_S - shift[j]
             x = abs(v) * scale
             i = int(x)
-            phi, slope = 0.0, 0.0
+            phi, slope, change = 0.0, 0.0, 0.0
             if i < n - 1:
                 t = x - i
                 f = share[j]
                 left = (1.0 - f) * shapes[row[j], i] + f * shapes[row[j] + 1, i]
                 right = (1.0 - f) * shapes[row[j], i + 1] + f * shapes[row[j] + 1, i + 1]
                 phi = ((1.0 - t) * left + t * right) / stretch[j]
+                change = (1.0 - t) * (shapes[row[j] + 1, i] - shapes[row[j], i])
+                change = (change + t * (shapes[row[j] + 1, i + 1] - shapes[row[j], i + 1])) / stretch[j]
                 slope = (right - left) * scale / stretch[j]
                 if v < 0.0:
                     slope = -slope
+            rest = transmission[p] / max(1.0 - width[j] * phi, LEAST_TRANSMISSION)  # of the other lines
             c = column[j]
             k = p - start[j]
             if kind[j] == 1:
-                values[offset[c] + k] = width[j] * phi
+                values[offset[c] + k] = rest * width[j] * phi
             else:
-                values[offset[c] + k] = phi
-                values[offset[c + 1] + k] = -width[j] * slope
-                values[offset[c + 2] + k] = -width[j] * (phi + v * slope)
+                values[offset[c] + k] = rest * phi
+                values[offset[c + 1] + k] = -rest * width[j] * slope
+                values[offset[c + 2] + k] = -rest * width[j] * (phi + v * slope)
+                values[offset[c + 3] + k] = rest * width[j] * change
 
 
 @njit(cache=True, nogil=True)
