@@ -10,21 +10,22 @@ from specsolve.errors import OutOfGridError
 
 from .problem import Problem
 from .state import BalanceState
+from .steps import (
+    LEVENBERG_START,
+    MAX_HALVINGS,
+    MAX_STEP,
+    NEAR_ZERO_VMIC,
+    ON_FACE,
+    RANK_TOLERANCE,
+    ROOT_OBJECTIVE,
+    ROUGH_TOLERANCE,
+    STALLED_STEP,
+    STEP_TOLERANCE,
+    STEP_UNIT,
+    VMIC,
+)
 
-# Units in which steps are measured, one default grid step of each axis: K, dex, dex, km/s.
-STEP_UNIT = np.array([250.0, 0.5, 0.5, 0.5])
-MAX_STEP = 1.0  # in STEP_UNIT
-# The step below the tolerance is still taken, and steps shrink nearly quadratically: 1e-5 is 2.5e-3 K, and far less is left.
-STEP_TOLERANCE = 1e-5  # in STEP_UNIT
-ROUGH_TOLERANCE = 5e-2  # in STEP_UNIT
-STALLED_STEP = 1e-4  # where no damping gives a better point, the full step must be below this to count as an end
-MAX_HALVINGS = 12
-LEVENBERG_START = 1e-3
-RANK_TOLERANCE = 1e-10
-VMIC = 3  # place of the microturbulence in theta
-NEAR_ZERO_VMIC = 0.05  # km/s; below it widths hardly feel vmic any more, and steps towards zero never end
-ON_FACE = 1e-6  # in STEP_UNIT
-ROOT_OBJECTIVE = 1e-6  # chi2 below which residuals and Outside terms are met
+NO_ABUNDANCE = "no line has an abundance here (beside missing nodes, or outside the tables)"
 
 
 @dataclass(frozen=True, eq=False)
@@ -99,6 +100,10 @@ def refine(
     previous : BalanceState, optional
         Near the start: where the weights begin; changes the speed alone.
     """
+    if problem.compiled and problem.linear_outside:
+        from .bulk import refine_compiled
+
+        return refine_compiled(problem, start, allowed, rough, previous)
     low, high = problem.bounds
     theta = np.clip(np.asarray(start, float), low, high)
     for name, value in problem.fixed.items():
@@ -192,5 +197,5 @@ def _evaluate(problem: Problem, theta: np.ndarray, allowed, previous, rough: boo
     except OutOfGridError as error:
         return None, str(error)
     if not state.used.any():
-        return None, "no line has an abundance here (beside missing nodes, or outside the tables)"
+        return None, NO_ABUNDANCE
     return state, ""

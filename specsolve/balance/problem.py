@@ -297,6 +297,11 @@ class Problem:
             groups[used],
         )
 
+    @cached_property
+    def linear_outside(self) -> bool:
+        """Whether all means of Outside terms are numbers, so that the terms are linear in theta."""
+        return not any(callable(term.mean) for item in self.outside for term in item.terms)
+
     def outside_terms(self, theta: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Whitened Outside differences and their Jacobian; the sum of squares is minus two ln of the prior."""
         return whitened_terms(self.outside, theta)

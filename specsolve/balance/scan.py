@@ -13,7 +13,7 @@ from itertools import product
 import numpy as np
 
 from specsolve.constants import SOLAR_IRON
-from specsolve.grid.codes import MISSING, STEP, encode
+from specsolve.grid.coarse_inverse import coarse_inverse, coarse_offsets
 
 from .problem import GRID_AXES, Problem
 from .residuals import balance_operator, residual_covariance
@@ -22,7 +22,6 @@ from .strength import line_variances
 
 SCAN_SCATTER_DEX = 0.08  # line-to-line term of the scan's weights; only scales chi2 there
 SCAN_D_WIDTH = 1.5  # dA/dlogW of the scan's weights: between a weak (1) and a saturated line (about 3)
-MIN_SLOPE = 0.08  # least dlogW/dA with which a curve is continued beyond its table
 CURVATURE_MARGIN = 0.25  # share of a residual's range over a cell by which it may miss zero at the corners
 LANDING_MARGIN = 1.0  # in cells: how far outside a cell the linear prediction may land
 MERGE_CELLS = 0.5  # predictions closer than this in every axis are one starting point
@@ -64,25 +63,35 @@ class Seed:
     count: int
 
 
-def node_relative_abundances(problem: Problem, allowed: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """A_i - zero point at every node with widths.
+def node_residuals(problem: Problem, chosen: np.ndarray, operator: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Residual vectors at every node with widths, with a given operator.
+
+    Parameters
+    ----------
+    chosen : ndarray of int
+        Lines that take part.
+    operator : ndarray, shape (4, n_chosen)
 
     Returns
     -------
     nodes : ndarray of int, shape (n_nodes, 3)
-    relative : ndarray, shape (n_nodes, n_vmic, n_allowed)
-        [dex].
+    residuals : ndarray, shape (n_nodes, n_vmic, 4)
     """
     grid, inputs = problem.grid, problem.inputs
     nodes = _nodes_needed(problem)
-    chosen = np.flatnonzero(allowed)
-    codes = grid.gather(problem.treatment, tuple(nodes.T), problem.line_indices[chosen])
-    target = encode(inputs.log_reduced_width[chosen]).astype(np.int32)
-    spacing = np.asarray(grid.axes["dA"], float)
-    offsets = _invert_linear(codes, target, spacing)
+    lines, widths = problem.line_indices[chosen], inputs.log_reduced_width[chosen]
     mh = np.asarray(grid.axes["mh"], float)[nodes[:, 2]]
-    relative = offsets + (SOLAR_IRON - inputs.zero_point[chosen] - problem.log_gf_shift[chosen])[None, :, None]
-    return nodes, np.swapaxes(relative + mh[:, None, None], 1, 2)
+    constant = SOLAR_IRON - inputs.zero_point[chosen] - problem.log_gf_shift[chosen]
+    if problem.compiled:
+        sums = coarse_inverse(grid, problem.treatment).combine(lines, widths, operator)
+        residuals = np.moveaxis(sums[:, np.ravel_multi_index(tuple(nodes.T), grid.node_shape)], 0, -1)
+    else:
+        codes = grid.gather(problem.treatment, tuple(nodes.T), lines)
+        offsets = coarse_offsets(codes, widths, np.asarray(grid.axes["dA"], float))
+        residuals = np.einsum("nlv,rl->nvr", offsets, operator)
+    residuals = residuals + operator @ constant + operator.sum(axis=1) * mh[:, None, None]
+    residuals[..., 2] -= mh[:, None]
+    return nodes, residuals
 
 
 def _nodes_needed(problem: Problem) -> np.ndarray:
@@ -113,26 +122,9 @@ def _around(x: np.ndarray, value: float) -> tuple[tuple[int, ...], tuple[float, 
     return (lower, lower + 1), (1.0 - share, share)
 
 
-def _invert_linear(codes: np.ndarray, target: np.ndarray, spacing: np.ndarray) -> np.ndarray:
-    """Offset dA at which straight lines between nodes reach the width; continued beyond both ends.
-
-    codes (n_nodes, n_lines, n_vmic, n_dA), target (n_lines,) in code units; result (n_nodes, n_lines, n_vmic); nan
-    where missing.
-    """
-    below = (codes <= target[None, :, None, None]).sum(axis=-1)
-    upper = np.clip(below, 1, codes.shape[-1] - 1)
-    first = np.take_along_axis(codes, (upper - 1)[..., None], axis=-1)[..., 0].astype(float)
-    second = np.take_along_axis(codes, upper[..., None], axis=-1)[..., 0].astype(float)
-    step = spacing[upper] - spacing[upper - 1]
-    slope = np.maximum((second - first) / step, MIN_SLOPE / STEP)
-    offset = spacing[upper - 1] + (target[None, :, None] - first) / slope
-    return np.where((first == MISSING) | (second == MISSING), np.nan, offset)
-
-
 def scan_nodes(problem: Problem, allowed: np.ndarray) -> Scan:
     """Residual vectors at all nodes, with fixed weights and the measured width as strength axis."""
     inputs, grid = problem.inputs, problem.grid
-    nodes, relative = node_relative_abundances(problem, allowed)
     chosen = np.flatnonzero(allowed)
     ones = np.ones(chosen.size)
     variances = line_variances(
@@ -147,10 +139,8 @@ def scan_nodes(problem: Problem, allowed: np.ndarray) -> Scan:
     )
     active = np.flatnonzero(problem.active & np.isfinite(operator).all(axis=1))
     vmic = np.asarray(grid.axes["vmic"], float)
-    full = np.full((*np.array(grid.node_valid(problem.treatment)).shape, vmic.size, 4), np.nan)
-    values = np.einsum("nvl,rl->nvr", relative, operator)
-    mh = np.asarray(grid.axes["mh"], float)[nodes[:, 2]]
-    values[..., 2] -= mh[:, None]
+    nodes, values = node_residuals(problem, chosen, operator)
+    full = np.full((*grid.node_shape, vmic.size, 4), np.nan)
     full[tuple(nodes.T)] = values
     positions = [np.asarray(grid.axes[name], float) for name in GRID_AXES]
     for axis, name in enumerate(PARAMETER_NAMES):
@@ -191,12 +181,7 @@ def _cells_with_roots(scan: Scan) -> list[Seed]:
         high = np.fmax(high[first], high[last])
     margin = CURVATURE_MARGIN * (high - low)
     possible = ((low - margin <= 0.0) & (high + margin >= 0.0)).all(axis=-1)
-    seeds = []
-    for cell in np.argwhere(possible):
-        theta, miss = _linear_root(scan, values, cell, axes)
-        if theta is not None:
-            seeds.append(Seed(theta, miss, 1))
-    return seeds
+    return _linear_roots(scan, values, np.argwhere(possible), axes)
 
 
 def _halves(axis: int) -> tuple[tuple, tuple]:
@@ -205,29 +190,33 @@ def _halves(axis: int) -> tuple[tuple, tuple]:
     return tuple(first), tuple(last)
 
 
-def _linear_root(scan: Scan, values: np.ndarray, cell: np.ndarray, axes: list[int]) -> tuple[np.ndarray | None, float]:
-    """Root of the linear fit through a cell's corners; (None, .) if it lands too far away."""
-    corners, rows = [], []
-    for corner in product((0, 1), repeat=len(axes)):
-        index = cell.copy()
-        index[axes] += corner
-        value = values[tuple(index)]
-        if np.isfinite(value).all():
-            corners.append(corner)
-            rows.append(value)
-    if len(rows) <= len(axes):
-        return None, np.inf
-    design = np.column_stack([np.ones(len(rows)), np.array(corners, float) - 0.5])
-    fit, *_ = np.linalg.lstsq(design, np.array(rows), rcond=None)
-    step, *_ = np.linalg.lstsq(fit[1:].T, -fit[0], rcond=1e-8)
-    if np.max(np.abs(step)) > 0.5 + LANDING_MARGIN:
-        return None, np.inf
-    theta = np.array([x[i] for x, i in zip(scan.positions, cell, strict=True)])
-    for axis, move in zip(axes, np.clip(step, -0.5, 0.5), strict=True):
+def _linear_roots(scan: Scan, values: np.ndarray, cells: np.ndarray, axes: list[int]) -> list[Seed]:
+    """Roots of the linear fits through the corners of cells that land near enough."""
+    corners = np.array(list(product((0, 1), repeat=len(axes))))
+    index = np.repeat(cells[:, None, :], len(corners), axis=1)
+    index[:, :, axes] += corners
+    rows = values[tuple(np.moveaxis(index, -1, 0))]  # (cell, corner, residual)
+    known = np.isfinite(rows).all(axis=-1)
+    design = np.column_stack([np.ones(len(corners)), corners - 0.5])
+    whole = known.all(axis=1)
+    fits = np.full((len(cells), len(axes) + 1, rows.shape[-1]), np.nan)
+    fits[whole] = np.linalg.pinv(design) @ rows[whole]
+    for k in np.flatnonzero(~whole & (known.sum(axis=1) > len(axes))):
+        fits[k] = np.linalg.lstsq(design[known[k]], rows[k][known[k]], rcond=None)[0]
+    keep = np.isfinite(fits).all(axis=(1, 2))
+    cells, fits = cells[keep], fits[keep]
+    inverse = np.linalg.pinv(np.swapaxes(fits[:, 1:], 1, 2), rcond=1e-8)
+    steps = -np.einsum("kar,kr->ka", inverse, fits[:, 0])
+    near = np.max(np.abs(steps), axis=1, initial=0.0) <= 0.5 + LANDING_MARGIN
+    cells, fits, steps = cells[near], fits[near], np.clip(steps[near], -0.5, 0.5)
+    theta = np.stack([x[i] for x, i in zip(scan.positions, cells.T, strict=True)], axis=1).astype(float)
+    for place, axis in enumerate(axes):
         x = scan.positions[axis]
-        theta[axis] = x[cell[axis]] + (0.5 + move) * (x[cell[axis] + 1] - x[cell[axis]])
-    miss = fit[0] + np.clip(step, -0.5, 0.5) @ fit[1:]
-    return theta, float(miss @ scan.metric @ miss)
+        low, high = x[cells[:, axis]], x[cells[:, axis] + 1]
+        theta[:, axis] = low + (0.5 + steps[:, place]) * (high - low)
+    miss = fits[:, 0] + np.einsum("ka,kar->kr", steps, fits[:, 1:])
+    chi2 = np.einsum("ki,ij,kj->k", miss, scan.metric, miss)
+    return [Seed(t, float(c), 1) for t, c in zip(theta, chi2, strict=True)]
 
 
 def _lattice_minima(problem: Problem, scan: Scan) -> list[Seed]:

@@ -14,7 +14,7 @@ from specsolve.grid.codes import FIRST_LOG_WIDTH, MISSING, STEP
 from specsolve.grid.inversion import CONVERGED, ITERATIONS
 from specsolve.grid.inversion import MISSING as FLAG_MISSING
 from specsolve.grid.inversion import OUTSIDE as FLAG_OUTSIDE
-from specsolve.grid.node_table import BESIDE, EDGE, WHOLE
+from specsolve.grid.node_table import EDGE, WHOLE
 
 FUSED = {"contract"}
 
