@@ -6,51 +6,11 @@ check of a table that is read back.  Columns and keys are only ever added; a cha
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from specsolve.schema_parts import COUNT, FLAG, PARAMETERS, REAL, RESIDUALS, STAR_KEY, TEXT, Column
+from specsolve.schema_uses import TABLES as TABLES_OF_USES
 
 SCHEMA = 1
 
-TEXT = "str"
-REAL = "float64"
-COUNT = "int64"
-FLAG = "bool"
-
-
-@dataclass(frozen=True)
-class Column:
-    """One column of a table.
-
-    Attributes
-    ----------
-    name : str
-    dtype : str
-        "str", "float64", "int64" or "bool".
-    unit : str
-        As astropy writes it; empty for none.
-    description : str
-    shape : tuple of int
-        Of one cell; empty for a scalar.
-    """
-
-    name: str
-    dtype: str
-    unit: str
-    description: str
-    shape: tuple[int, ...] = ()
-
-
-PARAMETERS = (
-    ("teff", "K", "effective temperature"),
-    ("logg", "dex", "log10 of the surface gravity in cm/s2"),
-    ("feh", "dex", "[Fe/H] on the zero points of this solve"),
-    ("vmic", "km / s", "microturbulence"),
-)
-RESIDUALS = (
-    ("excitation_slope", "dex / eV", "slope of A(Fe I) against the lower excitation potential"),
-    ("ionization_offset", "dex", "mean A(Fe I) - mean A(Fe II)"),
-    ("metallicity_offset", "dex", "mean A(Fe) - zero point - [Fe/H] of the atmosphere"),
-    ("strength_slope", "", "slope of A(Fe I) against the reduced width [dex/dex]"),
-)
 SHIFTS = (("teff", "100 K"), ("logg", "0.3 dex"), ("feh", "0.2 dex"), ("vmic", "0.2 km/s"))
 
 
@@ -111,11 +71,6 @@ def _alternative_columns() -> tuple[Column, ...]:
         for name, unit, words in PARAMETERS
     )
 
-
-STAR_KEY = (
-    Column("star", TEXT, "", "name of the star"),
-    Column("treatment", TEXT, "", "line formation: lte or nlte"),
-)
 
 STARS = (
     *STAR_KEY,
@@ -352,6 +307,7 @@ TABLES: dict[str, tuple[Column, ...]] = {
     "truth": TRUTH,
     "measurements": MEASUREMENTS,
     "spectra": SPECTRA,
+    **TABLES_OF_USES,
 }
 
 FILE_ENDINGS = {"stars": "", "lines": "_lines", "candidates": "_candidates", "decisions": "_decisions"}

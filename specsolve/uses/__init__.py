@@ -1,0 +1,1 @@
+"""What results are for: cross-checking published values, cluster members for age fitting, rehearsing an observation."""
