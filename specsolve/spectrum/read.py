@@ -23,6 +23,8 @@ GZIP_MAGIC = b"\x1f\x8b"
 FITS_MAGIC = b"SIMPLE  ="
 ECSV_MAGIC = b"# %ECSV"
 HEAD_BYTES = 80
+IMAGE_FORMAT = "wcs1d-fits"
+"""The name that specutils gives to images with a wavelength axis."""
 LOG_FLAG = "DC-FLAG"
 """Keyword that is 1 where CRVAL1 and CDELT1 are decimal logarithms (common practice, no source)."""
 
@@ -102,13 +104,15 @@ def _read_fits(path: Path, options: ReadOptions) -> Raw:
                 return _read_fits_table(path, Table.read(unit), header, options)
             shape = unit.data.shape
             header.update(plain_header(unit.header))
+            sigma = _sigma_unit(units, max(shape))
+            row = _one_row(unit) if len(shape) > 1 else None
     except SpectrumError:
         raise
     except Exception as error:  # a damaged file makes astropy raise whatever it meets
         raise SpectrumError(f"{path}: damaged FITS file ({_words(error)}).", path=path) from error
     if sum(size > 1 for size in shape) != 1:
         return _read_orders(path, shape, header)
-    return _read_image(path, header, max(shape))
+    return _read_image(path, header, max(shape), row, sigma)
 
 
 def _complete(path: Path, units: Any) -> None:
@@ -125,21 +129,52 @@ def _complete(path: Path, units: Any) -> None:
         )
 
 
-def _read_image(path: Path, header: dict[str, Any], n_pixels: int) -> Raw:
+ERROR_NAMES = {"ERR", "ERROR", "ERRS", "SIGMA", "STD", "STDDEV", "UNCERT", "UNCERTAINTY"}
+INVERSE_VARIANCE_NAMES = {"IVAR"}
+"""Names of image extensions with errors (common practice, no source)."""
+
+
+def _sigma_unit(units: Any, n_pixels: int) -> np.ndarray | None:
+    """Errors from an image extension that is named so."""
+    for unit in units[1:]:
+        name = unit.name.strip().upper()
+        if name in ERROR_NAMES | INVERSE_VARIANCE_NAMES and unit.data is not None and unit.data.size == n_pixels:
+            values = np.asarray(unit.data, float).ravel()
+            if name in ERROR_NAMES:
+                return values
+            with np.errstate(divide="ignore", invalid="ignore"):
+                return 1.0 / np.sqrt(values)
+    return None
+
+
+def _one_row(unit: Any) -> Any:
+    """An image with axes of one pixel as one of one axis."""
+    from astropy.io import fits
+
+    header = unit.header.copy()
+    for key in [key for key in header if key[:-1] in ("CTYPE", "CUNIT", "CRVAL", "CDELT", "CRPIX") and key[-1] != "1"]:
+        del header[key]
+    return fits.HDUList([fits.PrimaryHDU(np.ravel(unit.data), header)])
+
+
+def _read_image(path: Path, header: dict[str, Any], n_pixels: int, row: Any, sigma: np.ndarray | None) -> Raw:
     """A one-dimensional image with linear or logarithmic steps, by specutils."""
     if not any(key in header for key in ("CDELT1", "CD1_1")) or "CRVAL1" not in header:
         raise SpectrumError(f"{path}: no wavelengths in the header (CRVAL1 and CDELT1 are missing).", path=path)
-    found = _by_specutils(path)
+    found = _by_specutils(path, row, IMAGE_FORMAT)
     axis = np.asarray(found.spectral_axis.value, float).ravel()
     unit: str | None = str(found.spectral_axis.unit)
+    stated = str(header.get("CUNIT1", "")).strip()
+    if stated and stated != unit and not stated.lower().startswith("log"):
+        axis, unit = np.asarray(found.spectral_axis.to_value(stated), float).ravel(), stated
     flux = np.asarray(found.flux.value, float).ravel()
     if flux.size != n_pixels or axis.size != n_pixels:
         raise SpectrumError(f"{path}: {flux.size} flux values for {axis.size} wavelengths.", path=path)
-    if str(header.get(LOG_FLAG, "")).strip() == "1" or str(header.get("CUNIT1", "")).lower().startswith("log"):
+    if str(header.get(LOG_FLAG, "")).strip() == "1" or stated.lower().startswith("log"):
         unit = LOG_UNIT
-    elif not str(header.get("CUNIT1", "")).strip():
+    elif not stated:
         unit = None
-    piece = RawPiece(wavelength=axis, flux=flux, sigma=_sigma(found), mask=_mask(found))
+    piece = RawPiece(wavelength=axis, flux=flux, sigma=_sigma(found) if sigma is None else sigma, mask=_mask(found))
     return Raw(pieces=[piece], unit=unit, medium=medium_of(header), header=header)
 
 
@@ -156,7 +191,7 @@ def _read_orders(path: Path, shape: tuple[int, ...], header: dict[str, Any]) -> 
     try:
         names = identify_spectrum_format(str(path), SpectrumList)
         names = [names] if isinstance(names, str) else list(names)
-        if not names or names == ["wcs1d-fits"]:
+        if not names or names == [IMAGE_FORMAT]:
             raise SpectrumError(refusal, path=path)
         found = SpectrumList.read(str(path), format=names[0])
         members = [one for item in found for one in (item if isinstance(item, SpectrumCollection) else [item])]
@@ -218,14 +253,14 @@ def _read_table(path: Path, table: Any, options: ReadOptions) -> Raw:
     return table_to_raw(table, options.columns, path)
 
 
-def _by_specutils(path: Path) -> Any:
-    """One `specutils` spectrum of a file."""
+def _by_specutils(path: Path, row: Any = None, kind: str | None = None) -> Any:
+    """One `specutils` spectrum of a file, or of an image in memory."""
     try:
         from specutils import Spectrum as Found
     except ImportError:  # its name before specutils 2
         from specutils import Spectrum1D as Found
     try:
-        return Found.read(str(path))
+        return Found.read(str(path) if row is None else row, format=kind)
     except Exception as error:  # readers of many formats raise whatever they meet
         raise SpectrumError(f"{path}: not a spectrum that can be read ({_words(error)}).", path=path) from error
 

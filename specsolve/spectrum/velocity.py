@@ -394,7 +394,7 @@ def _groups(velocity: np.ndarray, stack: _Stack, wavelength: np.ndarray) -> tupl
     found = []
     for part in np.array_split(rows, n_groups) if n_groups >= 2 else []:
         value = centre_of(velocity, _mean(stack, part))[0]
-        error = _jackknife(velocity, stack, part, part.size)
+        error = _jackknife(velocity, stack, part, N_DRIFT_GROUPS)
         if np.isfinite(value) and error > 0.0:
             weight = stack.weight[part].sum(axis=1)
             found.append((float(np.average(wavelength[part], weights=weight)), value, error))
