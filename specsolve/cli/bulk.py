@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import os
 import time
 from collections import Counter
 from collections.abc import Callable, Iterator, Mapping, Sequence
@@ -82,13 +83,16 @@ def executor_for(workers: int, scheduler: str | None = None) -> Iterator[Executo
 
 
 def make_executor(workers: int) -> Executor | None:
-    """Processes on this computer; None for one."""
+    """Processes on this computer, which end when this one is killed; None for one."""
     if workers == 1:
         return None
     import multiprocessing
     from concurrent.futures import ProcessPoolExecutor
 
-    return ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context("spawn"))
+    from specsolve.grid.engine import start_worker
+
+    context = multiprocessing.get_context("spawn")
+    return ProcessPoolExecutor(workers, mp_context=context, initializer=start_worker, initargs=(os.getpid(),))
 
 
 @contextmanager
