@@ -4,9 +4,10 @@ A first estimate is the level of the pixels that the predicted lines leave free,
 is then fitted by hat functions at equal distances, in one system with all lines (`system`), so that the error of the
 continuum and its effect on every width, common to neighbouring lines, come out of the same matrix.
 
-Absorption by lines that nobody predicted is one-sided. A pixel is therefore a mixture: with a probability that is
-found from the residuals it holds further absorption, exponentially distributed, else noise alone; it counts by its
-probability of the latter. Without unknown lines that probability goes to one and noise alone moves nothing.
+Absorption by lines that nobody predicted is one-sided. A pixel is therefore a mixture: with some probability it holds
+further absorption, exponentially distributed, else noise alone; it counts by its probability of the latter. How many
+pixels hold further absorption, and how much, follows from the predicted lines (as if a part of their like were
+missing); where the noise is small the residuals correct the number.
 """
 
 from __future__ import annotations
@@ -15,8 +16,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-UNKNOWN_DEPTH = 0.04
-"""Mean depth of unpredicted absorption [of the continuum]; order of magnitude, common practice, no source."""
+SHALLOW = 0.005
+"""Predicted depths above this say how often and how deep lines are that nobody predicted."""
+LEAST_UNKNOWN_DEPTH = 0.01
 PART_LIMITS = (1e-3, 0.3)  # of the pixels with unpredicted absorption
 LEVEL_CHANGE = 0.03
 """1-sigma change of the corrected continuum from knot to knot, which bridges gaps and regions full of lines."""
@@ -140,7 +142,39 @@ def first_estimate(
     return knots.evaluate(values)
 
 
-def noise_probability(deviation: np.ndarray, sigma: np.ndarray, part: float) -> np.ndarray:
+@dataclass(frozen=True)
+class Unpredicted:
+    """Absorption that nobody predicted.
+
+    Attributes
+    ----------
+    part : float
+        Part of the pixels that hold some.
+    depth : float
+        Its mean there, in units of the continuum.
+    """
+
+    part: float
+    depth: float
+
+
+def expected_unpredicted(depth: np.ndarray, missing: float) -> Unpredicted:
+    """What is to be expected if a part `missing` of all lines is unknown, from the depths of the known ones.
+
+    Examples
+    --------
+    >>> some = expected_unpredicted(np.array([0.0, 0.0, 0.0, 0.1]), 0.2)
+    >>> round(some.part, 4), round(some.depth, 2)
+    (0.0625, 0.1)
+    """
+    with_lines = depth > SHALLOW
+    share = float(with_lines.mean()) if depth.size else 0.0
+    mean = float(depth[with_lines].mean()) if with_lines.any() else LEAST_UNKNOWN_DEPTH
+    part = float(np.clip(missing / (1.0 - missing) * share, *PART_LIMITS))
+    return Unpredicted(part, max(mean, LEAST_UNKNOWN_DEPTH))
+
+
+def noise_probability(deviation: np.ndarray, sigma: np.ndarray, unpredicted: Unpredicted) -> np.ndarray:
     """Probability that a pixel holds noise alone and no unpredicted absorption.
 
     Parameters
@@ -149,27 +183,37 @@ def noise_probability(deviation: np.ndarray, sigma: np.ndarray, part: float) -> 
         Residual over its error.
     sigma : ndarray
         Error in units of the continuum.
-    part : float
-        Probability beforehand of further absorption.
+    unpredicted : Unpredicted
 
     Examples
     --------
-    >>> p = noise_probability(np.array([0.0, -6.0]), np.array([0.01, 0.01]), 0.05)
+    >>> p = noise_probability(np.array([0.0, -6.0]), np.array([0.01, 0.01]), Unpredicted(0.05, 0.04))
     >>> bool(p[0] > 0.95), bool(p[1] < 0.01)
     (True, True)
     """
     from scipy.special import log_ndtr
 
-    mean = UNKNOWN_DEPTH / sigma
+    mean = unpredicted.depth / sigma
     log_noise = -0.5 * deviation**2 - 0.5 * np.log(2.0 * np.pi)
     # noise minus an exponential: exponentially modified Gaussian
     log_absorbed = -np.log(mean) + deviation / mean + 0.5 / mean**2 + log_ndtr(-deviation - 1.0 / mean)
-    ratio = np.exp(np.clip(log_absorbed - log_noise, -50.0, 50.0)) * part / (1.0 - part)
-    return 1.0 / (1.0 + ratio)
+    odds = unpredicted.part / (1.0 - unpredicted.part)
+    return 1.0 / (1.0 + np.exp(np.clip(log_absorbed - log_noise, -50.0, 50.0)) * odds)
 
 
-def update_part(probability: np.ndarray, among: np.ndarray) -> float:
-    """Part of the pixels with unpredicted absorption, from the probabilities under the last value."""
-    if not among.any():
-        return PART_LIMITS[0]
-    return float(np.clip(1.0 - probability[among].mean(), *PART_LIMITS))
+def corrected(expected: Unpredicted, probability: np.ndarray, sigma: np.ndarray) -> Unpredicted:
+    """The part that the probabilities show, as far as the noise lets it be seen.
+
+    Parameters
+    ----------
+    expected : Unpredicted
+        Beforehand.
+    probability, sigma : ndarray
+        Of pixels outside known deep lines; errors in units of the continuum.
+    """
+    if not probability.size:
+        return expected
+    blindness = min((float(np.median(sigma)) / (0.5 * expected.depth)) ** 2, 1e3)
+    seen = float(np.mean(1.0 - probability))
+    part = (blindness * expected.part + seen) / (1.0 + blindness)
+    return Unpredicted(float(np.clip(part, *PART_LIMITS)), expected.depth)

@@ -13,10 +13,12 @@ from .continuum import (
     LEVEL_CHANGE_NORMALISED,
     POSITIVE_OUTLIER,
     Knots,
+    Unpredicted,
+    corrected,
+    expected_unpredicted,
     first_estimate,
     make_knots,
     noise_probability,
-    update_part,
 )
 from .options import MeasureOptions
 from .predict import OWN_STEP, Prediction
@@ -59,8 +61,8 @@ class Fit:
         Corrected continuum at the knots.
     fwhm, vsini : float
         Common broadening [km/s].
-    part : float
-        Part of the pixels with unpredicted absorption.
+    expected, unpredicted : Unpredicted
+        Absorption that nobody predicted, beforehand and as found.
     probability : ndarray, shape (n_pixels,)
         That a pixel holds none.
     depth, continuum : ndarray, shape (n_pixels,)
@@ -82,7 +84,8 @@ class Fit:
     vsini: float
     options: MeasureOptions
     priors: Priors
-    part: float = 0.03
+    expected: Unpredicted | None = None
+    unpredicted: Unpredicted | None = None
     probability: np.ndarray = field(default_factory=lambda: np.empty(0))
     depth: np.ndarray = field(default_factory=lambda: np.empty(0))
     continuum: np.ndarray = field(default_factory=lambda: np.empty(0))
@@ -298,10 +301,13 @@ def weights(fit: Fit, residual: np.ndarray, *, weigh: bool) -> np.ndarray:
     error = fit.model_error()
     deviation = np.where(fit.good, residual / error, 0.0)
     if weigh:
-        probability = noise_probability(deviation, error / fit.continuum, fit.part)
+        relative = error / fit.continuum
+        if fit.expected is None:
+            fit.expected = fit.unpredicted = expected_unpredicted(fit.depth, fit.options.unknown_part)
+        probability = noise_probability(deviation, relative, fit.unpredicted)
         core = fit.near_targets(0.6 * total_fwhm(fit.fwhm, fit.vsini))
         among = fit.good & ~core & (fit.depth < 0.3)
-        fit.part = update_part(probability, among)
+        fit.unpredicted = corrected(fit.expected, probability[among], relative[among])
         fit.probability = np.where(core, 1.0, probability)
         coarse = np.hypot(fit.sigma, COSMIC_SHAPE_ERROR * np.clip(fit.depth, 0.0, 1.0))
         fit.cosmic = fit.good & (residual > POSITIVE_OUTLIER * coarse)

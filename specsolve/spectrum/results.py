@@ -13,7 +13,7 @@ from .types import Window
 
 NEIGHBOURHOOD = 3.0
 """Half width of the range whose predicted lines say how much an unknown one may hold [Angstrom]."""
-UNSEEN_PART = 0.3
+UNSEEN_PART = 0.12
 """An unknown line with more than this part of a line's width would show in the line's shape; own estimate."""
 WINDOW_FWHM = 6.0  # half width of the pixels kept for figures, in widths of the line
 
