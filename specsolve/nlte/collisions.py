@@ -1,5 +1,8 @@
 """Rates of collisions with electrons and hydrogen atoms.
 
+Ionization by hydrogen is only the computed charge transfer: the classical formula would tie every high level to the ion, for
+which there is no evidence.
+
 All rates are symmetric flows W_ij = n_i* C_ij = n_j* C_ji [cm^-3 s^-1], n* the LTE populations: detailed balance is built in.
 """
 
@@ -150,12 +153,7 @@ def collision_flows(atom: ModelAtom, gas: Gas, lte: np.ndarray, recipe: Recipe) 
         threshold = np.maximum(atom.energy_ev[target] - atom.energy_ev[level], LEAST_DIFFERENCE_EV)
         sigma = atom.continuum_sigma
         rate = electron_ionization(temperature, threshold, sigma, atom.stage[level]) * electrons
-        # oscillator strength of a continuum that falls as nu^-3: sigma nu / 2 over pi e^2 / m c
-        f_free = sigma * LIGHT_SPEED_CM_S / atom.continuum_edge_cm / (2.0 * LINE_CROSS_SECTION)
-        classical = hydrogen_allowed(temperature, threshold, f_free, atom.mass)
-        classical *= np.where(atom.stage[level] == 0, recipe.hydrogen_factor, 0.0)[:, None]
-        classical[np.isin(level, atom.exchange_level)] = 0.0
-        _add(flows, level, target, (rate + classical * (gas.h1 * recipe.hydrogen_scale)) * lte[level])
+        _add(flows, level, target, rate * lte[level])
 
     if atom.hydrogen_upper.size:
         down = _interpolated(atom.hydrogen_temperature, atom.hydrogen_log_rate, temperature)

@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 #: Factor S_H on the classical rates of hydrogen collisions where no computed ones exist; see `calibration`.
-HYDROGEN_FACTOR = 0.3
+HYDROGEN_FACTOR = 1.0
 #: The same for levels of Fe II, for which no rates have been computed: they hold Fe II near LTE.
 ION_HYDROGEN_FACTOR = 1.0
 #: Factor on the ultraviolet opacity in proportion to Fe I, see `background.residual_cross_section`; 1 is the calibrated.
