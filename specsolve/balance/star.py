@@ -20,6 +20,8 @@ HUGE_WIDTH_MA = 1000.0  # no iron line of the grid's stars comes near (common pr
 ASSUMED_ERROR_FLOOR_MA = 0.5
 ASSUMED_ERROR_FRACTION = 0.01
 
+KEPT_MATCHES = 256  # lists of lines whose match with the grid's is remembered
+
 REASON_BAD_WIDTH = "bad_width"
 REASON_HUGE_WIDTH = "huge_width"
 REASON_NOT_USED = "marked_unused"
@@ -185,14 +187,7 @@ def match_lines(star: Star, lines) -> Match:
 
     Of repeated measurements of one line the one with the smallest relative error is kept.
     """
-    index = nearest_lines(
-        star.wavelength_air,
-        star.ion,
-        star.excitation_potential,
-        lines.wavelength_air,
-        lines.ion,
-        lines.excitation_potential,
-    )
+    index = _known_index(star, lines)
     looks_like_vacuum = False
     if len(star) >= 5 and np.count_nonzero(index >= 0) < 0.3 * len(star):
         looks_like_vacuum = _fits_as_vacuum(star, lines)
@@ -208,6 +203,21 @@ def match_lines(star: Star, lines) -> Match:
     repeated = np.r_[False, np.diff(index[best_first]) == 0][: rows.size]
     reason[best_first[repeated]] = REASON_REPEATED
     return Match(index=index, reason=reason, looks_like_vacuum=looks_like_vacuum)
+
+
+_INDICES: dict[tuple, np.ndarray] = {}
+
+
+def _known_index(star: Star, lines) -> np.ndarray:
+    """`nearest_lines` of a star, remembered: stars of one survey mostly have the same lines."""
+    columns = (star.wavelength_air, star.ion, star.excitation_potential)
+    key = (lines.identity, *(np.ascontiguousarray(values).tobytes() for values in columns))
+    if key not in _INDICES:
+        if len(_INDICES) >= KEPT_MATCHES:
+            _INDICES.clear()
+        _INDICES[key] = nearest_lines(*columns, lines.wavelength_air, lines.ion, lines.excitation_potential)
+        _INDICES[key].setflags(write=False)
+    return _INDICES[key]
 
 
 def _fits_as_vacuum(star: Star, lines) -> bool:

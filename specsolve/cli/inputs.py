@@ -111,22 +111,24 @@ def coverage(stars: Iterable[Star], grid: ResponseGrid) -> Coverage:
     Lines are distinct if ion, wavelength (0.01 Angstrom) and excitation potential (0.01 eV) differ. A grid build can
     add those whose excitation potential and log gf the table gives.
     """
-    from specsolve.balance.star import match_lines
+    from specsolve.balance.star import nearest_lines
 
-    inside: set[tuple[str, float, float]] = set()
-    absent: dict[tuple[str, float, float], bool] = {}
-    for star in stars:
-        index = match_lines(star, grid.lines).index
-        known = np.isfinite(star.excitation_potential) & np.isfinite(star.log_gf)
-        potential = np.nan_to_num(star.excitation_potential, nan=-1.0)
-        rows = zip(star.ion, star.wavelength_air, potential, index, known, strict=True)
-        for ion, wavelength, energy, place, addable in rows:
-            key = (str(ion), round(float(wavelength), 2), round(float(energy), 2))
-            if place >= 0:
-                inside.add(key)
-            else:
-                absent[key] = bool(addable)
-    return Coverage(len(inside) + len(absent), len(inside), sum(absent.values()))
+    stars = list(stars)
+    if not stars:
+        return Coverage(0, 0, 0)
+    ion, wavelength, energy, log_gf = (
+        np.concatenate([getattr(star, name) for star in stars])
+        for name in ("ion", "wavelength_air", "excitation_potential", "log_gf")
+    )
+    addable = np.isfinite(energy) & np.isfinite(log_gf)
+    key = np.rec.fromarrays([ion, np.rint(wavelength / 0.01), np.rint(np.nan_to_num(energy, nan=-1.0) / 0.01)])
+    _, first, inverse = np.unique(key, return_index=True, return_inverse=True)
+    lines = grid.lines
+    inside = nearest_lines(
+        wavelength[first], ion[first], energy[first], lines.wavelength_air, lines.ion, lines.excitation_potential
+    )
+    can_be_added = np.bincount(inverse, weights=addable, minlength=first.size) > 0
+    return Coverage(first.size, int((inside >= 0).sum()), int(((inside < 0) & can_be_added).sum()))
 
 
 def coverage_message(name: str, found: Coverage, grid: ResponseGrid) -> str:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Iterator
 from dataclasses import dataclass, fields, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -155,7 +156,7 @@ class LineList:
 
         return self.excitation_potential + HC_EV_ANGSTROM / air_to_vacuum(self.wavelength_air)
 
-    @property
+    @cached_property
     def identity(self) -> str:
         """SHA-256 of all that enters a calculation (hex); notes and sources do not."""
         digest = hashlib.sha256()
