@@ -16,6 +16,7 @@ W / lambda = 2 * integral over the half profile of the relative depth R = 1 - F 
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -26,6 +27,9 @@ from specsolve.matter.line_profile import voigt
 from specsolve.radiation.transfer import ANGLE_COSINES, ANGLE_WEIGHTS
 
 from .layers import N_LAYERS, Layers, LineOpacities, Structure, doppler_fractions, line_opacities, make_layers
+
+Departures = Callable[[np.ndarray], tuple[np.ndarray, np.ndarray]]
+"""log tau_5000 -> departure coefficients of the lower and upper levels of the lines."""
 
 N_PROFILE = 20
 CORE_SCALE = 3.0
@@ -244,12 +248,13 @@ def reduced_widths_reference(
     vmic,
     abundances_a,
     *,
+    departures: Departures | None = None,
     n_layers: int = N_LAYERS,
     n_profile: int = N_PROFILE,
 ) -> np.ndarray:
     """As `reduced_widths`, in NumPy: the equations as they stand above, exact Voigt function and E2."""
     layers = make_layers(atmosphere, composition, n_layers)
-    opacities = line_opacities(layers, lines)
+    opacities = line_opacities(layers, lines, None if departures is None else departures(layers.log_tau))
     factors = eddington_factors(layers, opacities)
     abundances_a = np.atleast_1d(np.asarray(abundances_a, float))
     amounts = 10.0 ** (abundances_a - 12.0)
@@ -274,7 +279,7 @@ def reduced_widths(
     vmic,
     abundances_a,
     *,
-    departures: tuple[np.ndarray, np.ndarray] | None = None,
+    departures: Departures | None = None,
     n_layers: int = N_LAYERS,
     n_profile: int = N_PROFILE,
 ) -> np.ndarray:
@@ -291,8 +296,9 @@ def reduced_widths(
         Microturbulence [km/s].
     abundances_a : ndarray, shape (n_a,)
         A(Fe) = log10(N_Fe / N_H) + 12.
-    departures : pair of ndarray, shape (n_lines, n_layers), optional
-        Departure coefficients of the lower and upper levels at the layers of `make_layers`; LTE without.
+    departures : callable, optional
+        Gives, at log tau_5000 of the layers (n_layers,), the departure coefficients of the lower and the upper levels,
+        each of shape (n_lines, n_layers). LTE without.
 
     Returns
     -------
@@ -313,7 +319,7 @@ def reduced_widths(
     from .kernels import relative_widths
 
     layers = make_layers(atmosphere, composition, n_layers)
-    opacities = line_opacities(layers, lines, departures)
+    opacities = line_opacities(layers, lines, None if departures is None else departures(layers.log_tau))
     factors = eddington_factors(layers, opacities)
     abundances_a = np.atleast_1d(np.asarray(abundances_a, float))
     amounts = np.concatenate([[0.0], 10.0 ** (abundances_a - 12.0)])

@@ -4,10 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 
-from specsolve.constants import BOLTZMANN_ERG_K, LIGHT_SPEED_CM_S, PLANCK_ERG_S
+from specsolve.constants import LIGHT_SPEED_CM_S, PLANCK_ERG_S, RADIATION_C2_CM_K
 
 FIRST_RADIATION = 2.0 * PLANCK_ERG_S * LIGHT_SPEED_CM_S**2  # 2 h c^2 [erg cm2 / s]
-SECOND_RADIATION = PLANCK_ERG_S * LIGHT_SPEED_CM_S / BOLTZMANN_ERG_K  # h c / k [cm K]
 _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(6)
 
 
@@ -31,7 +30,7 @@ def planck(wavelength_cm: np.ndarray, temperature: np.ndarray) -> np.ndarray:
     >>> float(planck(5e-5, 5772.0)) > 0
     True
     """
-    exponent = SECOND_RADIATION / (np.asarray(wavelength_cm) * temperature)
+    exponent = RADIATION_C2_CM_K / (np.asarray(wavelength_cm) * temperature)
     return FIRST_RADIATION / np.asarray(wavelength_cm) ** 5 / np.expm1(np.minimum(exponent, 600.0))
 
 
