@@ -11,7 +11,7 @@ from specsolve.atmosphere.store import AtmosphereStore
 from specsolve.constants import HC_EV_CM, LIGHT_SPEED_CM_S
 from specsolve.matter.composition import composition_for
 from specsolve.nlte import equilibrium
-from specsolve.nlte.atom import two_level_atom
+from specsolve.nlte.atom import load_atom, two_level_atom
 from specsolve.nlte.rates import spontaneous
 from specsolve.nlte.recipe import Recipe
 from specsolve.radiation.planck import planck
@@ -19,6 +19,7 @@ from specsolve.radiation.planck import planck
 sys.path.insert(0, str(Path(__file__).parent))
 from atoms import small_atom
 
+DATA_FOLDER = Path(equilibrium.__file__).parent.parent / "data" / "nlte"
 NODE = (5750.0, 3.5, -2.5)
 
 
@@ -38,15 +39,38 @@ def departures(surroundings, atom):
     return equilibrium.iterate(surroundings, atom, Recipe())
 
 
-@pytest.mark.parametrize(("factor", "highest"), [(1e6, -4.0), (1e9, -6.5)])
-def test_strong_collisions_enforce_equilibrium(surroundings, atom, figure, factor, highest):
-    """At the very top of this metal-poor atmosphere even 1e6 times the rates of an atom without near-limit levels is
-    not enough against the ultraviolet: there 1e9."""
-    result = equilibrium.iterate(surroundings, atom, Recipe(electron_factor=factor, hydrogen_scale=factor))
+@pytest.mark.parametrize(
+    ("node", "factor", "highest"),
+    [((5750.0, 4.5, 0.0), 1e6, -9.0), (NODE, 1e6, -4.0), (NODE, 1e9, -9.0)],
+)
+def test_strong_collisions_enforce_equilibrium(figure, node, factor, highest):
+    """The packaged atom. At the very top of a metal-poor atmosphere of low gravity even 1e6 times the rates are not
+    enough against the ultraviolet (1e-2 at log tau = -6): there 1e9 times."""
+    iron = load_atom(DATA_FOLDER / "iron_151.npz")
+    surroundings = equilibrium.medium(AtmosphereStore.packaged().get(*node), composition_for(node[2]), iron)
+    result = equilibrium.iterate(surroundings, iron, Recipe(electron_factor=factor, hydrogen_scale=factor))
     worst = np.max(np.abs(np.exp(result.log_b[:, result.log_tau > highest]) - 1.0))
-    figure(f"largest |b - 1| with collisions x {factor:g}, log tau > {highest}", worst, limit="1e-3")
+    figure(f"largest |b - 1| at {node} with collisions x {factor:g}, log tau > {highest}", worst, limit="1e-3")
     assert result.converged
     assert worst < 1e-3
+
+
+def test_without_hydrogen_collisions_iron_is_far_from_equilibrium(figure):
+    """Not a stub: a thousandth of the hydrogen collisions gives b < 0.7 of low levels in a metal-poor subgiant."""
+    iron = load_atom(DATA_FOLDER / "iron_151.npz")
+    atmosphere = AtmosphereStore.packaged().get(*NODE)
+    surroundings = equilibrium.medium(atmosphere, composition_for(NODE[2]), iron)
+    depth = int(np.argmin(np.abs(atmosphere.log_tau + 2.0)))
+    low = (iron.stage == 0) & (iron.energy_ev < 2.5)
+    weak = equilibrium.iterate(surroundings, iron, Recipe(hydrogen_scale=1e-3))
+    standard = equilibrium.iterate(surroundings, iron, Recipe())
+    assert weak.converged
+    assert standard.converged
+    largest = np.exp(weak.log_b[low, depth]).max()
+    figure("largest b of levels below 2.5 eV at log tau -2, hydrogen collisions x 1e-3", largest, limit="0.7")
+    figure("the same with all hydrogen collisions", np.exp(standard.log_b[low, depth]).max())
+    assert largest < 0.7
+    assert largest < np.exp(standard.log_b[low, depth]).min() < 1.0
 
 
 def test_the_small_atom_departs_without_them(departures):
