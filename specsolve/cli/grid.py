@@ -12,8 +12,10 @@ import numpy as np
 
 from specsolve.cli import parsing
 from specsolve.cli.settings import Settings, common_options
+from specsolve.errors import UsageError
 
 if TYPE_CHECKING:
+    from specsolve.grid.engine import Engine
     from specsolve.grid.plan import Plan
     from specsolve.grid.store import ResponseGrid
     from specsolve.lines import LineList
@@ -35,7 +37,9 @@ def grid() -> None:
 @click.option("--mh", help="Nodes in dex.")
 @click.option("--vmic", help="Nodes in km/s. Default 0:3.5:0.5.")
 @click.option("--atmospheres", type=FOLDER, help="A store of your own; default the packaged one.")
-@click.option("--treatment", default="lte", show_default=True, help="Line formation.")
+@click.option("--treatment", type=click.Choice(["lte", "nlte", "both"]), default="lte", show_default=True,
+              help="Line formation.")  # fmt: skip
+@click.option("--departures", type=FOLDER, help="Departures of your own, for nlte; default the packaged ones.")
 @click.option("--reuse", "others", multiple=True, type=FOLDER, help="Take lines over from this grid too.")
 @click.option("--from-scratch", is_flag=True, help="Take no lines over, not even from the packaged grid.")
 @click.option("--workers", type=click.IntRange(1), default=1, show_default=True, help="Processes.")
@@ -54,6 +58,7 @@ def build(
     vmic: str | None,
     atmospheres: Path | None,
     treatment: str,
+    departures: Path | None,
     others: tuple[Path, ...],
     from_scratch: bool,
     workers: int,
@@ -69,6 +74,7 @@ def build(
       specsolve grid build my_lines.ecsv --output my_grid
       specsolve grid build widths.ecsv --output my_grid --workers 4
       specsolve grid build my_lines.ecsv --output small --teff 5000:6000:250 --logg 4:5:0.5 --mh 0
+      specsolve grid build my_lines.ecsv --output my_grid --treatment both
 
     Lines that the packaged grid or the grid in the output folder has are not computed again. An interrupted build goes
     on when the same command is given again.
@@ -84,24 +90,42 @@ def build(
     store = AtmosphereStore.packaged() if atmospheres is None else AtmosphereStore.open(atmospheres)
     lines = read_lines(linelist, columns, ions, units)
     sources = [] if from_scratch else other_grids(others)
+    treatments = ("lte", "nlte") if treatment == "both" else (treatment,)
+    if departures is not None and "nlte" not in treatments:
+        raise UsageError("--departures is for --treatment nlte or both")
     if dry_run:
-        plan = plan_build(lines, directory, store, axes, treatment, sources)
-        for remark in plan.remarks:
-            settings.say(remark)
-        report(settings, plan_content(plan, workers), plan_words(plan, workers))
+        contents, words = [], []
+        for name in treatments:
+            plan = plan_build(lines, directory, store, axes, name, sources, engine_of(name, departures))
+            for remark in plan.remarks:
+                settings.say(remark)
+            contents.append({"treatment": name, **plan_content(plan, workers)})
+            words.append(f"{name}: {plan_words(plan, workers)}")
+        report(settings, contents[0] if len(contents) == 1 else {"treatments": contents}, "\n".join(words))
         return
 
     def announce(plan: Plan) -> None:
         for remark in plan.remarks:
             settings.say(remark)
-        settings.say(plan_words(plan, workers))
+        settings.say(f"{plan.treatment}: {plan_words(plan, workers)}")
 
-    with counting("nodes", quiet=settings.verbosity < 0) as progress:
-        made = build_grid(
-            lines, directory, atmospheres=store, **axes, treatment=treatment, others=sources, workers=workers,
-            progress=progress, announce=announce,
-        )  # fmt: skip
+    for name in treatments:
+        with counting("nodes", quiet=settings.verbosity < 0) as progress:
+            made = build_grid(
+                lines, directory, atmospheres=store, **axes, treatment=name, others=sources, workers=workers,
+                engine=engine_of(name, departures), progress=progress, announce=announce,
+            )  # fmt: skip
     report(settings, content_of(made), f"{made.directory}: {len(made.lines)} lines, identity {made.identity[:12]}")
+
+
+def engine_of(treatment: str, departures: Path | None) -> Engine:
+    """What computes the widths of a treatment; with departures of one's own if given."""
+    from specsolve.grid.engine import ENGINES, nlte_engine
+    from specsolve.nlte.departures import DepartureStore
+
+    if treatment == "nlte" and departures is not None:
+        return nlte_engine(DepartureStore.open(departures))
+    return ENGINES[treatment]()
 
 
 @grid.command()
@@ -160,7 +184,7 @@ def check(
     from specsolve.cli.progress import counting
     from specsolve.errors import InputError
     from specsolve.grid.check import check_points, converged_atmosphere, random_points
-    from specsolve.grid.engine import ENGINES
+    from specsolve.grid.engine import POINT_ENGINES
 
     opened = open_grid(directory)
     store = AtmosphereStore.packaged() if atmospheres is None else AtmosphereStore.open(atmospheres)
@@ -170,7 +194,12 @@ def check(
     points = points[np.argsort(points[:, 2], kind="stable")]  # one opacity table after the other
     with counting("points", quiet=settings.verbosity < 0) as progress:
         result = check_points(
-            opened, points, partial(converged_atmosphere, store), ENGINES[treatment](), treatment, progress=progress
+            opened,
+            points,
+            partial(converged_atmosphere, store),
+            POINT_ENGINES[treatment](),
+            treatment,
+            progress=progress,
         )
     content: dict[str, Any] = {"grid": opened.identity, "seed": seed, "abundance_error": result.summary()}
     words = check_words(result.summary())

@@ -233,7 +233,8 @@ def merge(plan: Plan, parts: Parts, directory: Path) -> None:
         blocks=[*old_blocks, *blocks],
         missing={**missing, plan.treatment: plan.missing},
         atmospheres_identity=plan.atmospheres.identity,
-        description=f"Equivalent widths of {len(plan.lines)} Fe I and Fe II lines, {plan.treatment}",
+        description=f"Equivalent widths of {len(plan.lines)} Fe I and Fe II lines, "
+        + " and ".join(sorted({*missing, plan.treatment})),
         builds=[*([] if plan.old is None else plan.old.header["builds"]), build],
     )
     write_header(directory, header)

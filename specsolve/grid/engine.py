@@ -7,7 +7,8 @@ import threading
 import time
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any
+from functools import lru_cache, partial
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -15,6 +16,9 @@ from specsolve.constants import SOLAR_IRON
 from specsolve.errors import SpecsolveError
 from specsolve.grid.codes import encode
 from specsolve.lines import LineList
+
+if TYPE_CHECKING:
+    from specsolve.nlte.departures import DepartureStore
 
 FORMATION_SOURCES = ("formation", "matter", "radiation", "lines/wavelengths.py", "constants.py", "data/matter")
 """Program text and tables that decide a width."""
@@ -40,10 +44,17 @@ class Engine:
         function, so that worker processes find it.
     version : mapping
         Names and hashes; equal versions give equal numbers.
+    unavailable : callable, optional
+        ``unavailable(teff, logg, mh)`` -> why there are no widths at a node although it has an atmosphere; empty if
+        there are. Without it there are widths wherever there is an atmosphere.
+    atmospheres_identity : str
+        Of the only store of atmospheres that it may be used with; empty for any.
     """
 
     widths: Callable[[Any, LineList, np.ndarray, np.ndarray], np.ndarray]
     version: Mapping[str, str]
+    unavailable: Callable[[float, float, float], str] | None = None
+    atmospheres_identity: str = ""
 
 
 def lte_widths(atmosphere, lines: LineList, vmic: np.ndarray, dA: np.ndarray) -> np.ndarray:
@@ -75,8 +86,91 @@ def lte_engine() -> Engine:
     )
 
 
-ENGINES = {"lte": lte_engine}
+def nlte_widths(directory: str, identity: str, atmosphere, lines: LineList, vmic: np.ndarray, dA: np.ndarray):
+    """As `lte_widths`, with the departures that a store has at the atmosphere's node.
+
+    Parameters
+    ----------
+    directory, identity : str
+        Of a store of departures.
+    """
+    from specsolve.formation.equivalent_width import reduced_widths
+    from specsolve.matter.composition import composition_for
+
+    composition = composition_for(atmosphere.mh, atmosphere.alpha)
+    departures = opened_departures(directory, identity).of_lines(lines, atmosphere.teff, atmosphere.logg, atmosphere.mh)
+    abundances = SOLAR_IRON + atmosphere.mh + dA
+    return reduced_widths(atmosphere, composition, lines, vmic, abundances, departures=departures)
+
+
+@lru_cache(maxsize=4)
+def opened_departures(directory: str, identity: str) -> DepartureStore:
+    """A store of departures, opened once a process.
+
+    Raises
+    ------
+    StoreError
+        It is not the one of that identity.
+    """
+    from specsolve.errors import StoreError
+    from specsolve.nlte.departures import DepartureStore
+
+    store = DepartureStore.open(directory)
+    if store.identity != identity:
+        raise StoreError(f"{directory} has changed while it was in use; start again", path=directory)
+    return store
+
+
+def nlte_engine(departures: DepartureStore | None = None) -> Engine:
+    """The engine of the treatment "nlte".
+
+    Parameters
+    ----------
+    departures : DepartureStore, optional
+        The packaged ones by default.
+    """
+    from specsolve import __version__
+    from specsolve.atmosphere.build import sources_hash
+    from specsolve.nlte.departures import DepartureStore
+
+    store = DepartureStore.packaged() if departures is None else departures
+    return Engine(
+        partial(nlte_widths, str(store.directory), store.identity),
+        {
+            "name": "nlte",
+            "specsolve": __version__,
+            "sources_sha256": sources_hash(FORMATION_SOURCES),
+            "departures": store.identity,
+        },
+        store.unavailable,
+        store.atmospheres_identity,
+    )
+
+
+def solved_widths(atmosphere, lines: LineList, vmic: np.ndarray, dA: np.ndarray) -> np.ndarray:
+    """As `nlte_widths`, with departures solved for this very atmosphere (some seconds)."""
+    from specsolve.formation.equivalent_width import reduced_widths
+    from specsolve.matter.composition import composition_for
+    from specsolve.nlte.corrections import departures_of
+
+    composition = composition_for(atmosphere.mh, atmosphere.alpha)
+    abundances = SOLAR_IRON + atmosphere.mh + dA
+    departures = departures_of(atmosphere, lines)
+    return reduced_widths(atmosphere, composition, lines, vmic, abundances, departures=departures)
+
+
+def solved_engine() -> Engine:
+    """An engine of the treatment "nlte" for atmospheres that are no nodes."""
+    from specsolve import __version__
+
+    return Engine(solved_widths, {"name": "nlte, solved at the point", "specsolve": __version__})
+
+
+ENGINES = {"lte": lte_engine, "nlte": nlte_engine}
 """Engine of each treatment that can be built."""
+
+POINT_ENGINES = {"lte": lte_engine, "nlte": solved_engine}
+"""Engine of each treatment for atmospheres that are no nodes."""
 
 
 def codes_of_nodes(

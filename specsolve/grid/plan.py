@@ -127,7 +127,9 @@ def plan_build(
         atmospheres = AtmosphereStore.packaged()
     old = ResponseGrid.open(directory) if (directory / HEADER_NAME).exists() else None
     node_axes, line_axes = _axes(axes or {}, atmospheres, old)
-    nodes, missing = available_nodes(node_axes, atmospheres)
+    if engine.atmospheres_identity not in ("", atmospheres.identity):
+        raise StoreError("the departures belong to other atmospheres; build them on these, or name the right ones")
+    nodes, missing = available_nodes(node_axes, atmospheres, engine)
     if old is not None:
         _check_same(old, node_axes, line_axes, atmospheres)
     wanted, remarks = _all_lines(lines.sorted(), old)
@@ -194,9 +196,9 @@ def _given(axes, name, default):
 
 
 def available_nodes(
-    node_axes: Sequence[Axis], atmospheres
+    node_axes: Sequence[Axis], atmospheres, engine: Engine | None = None
 ) -> tuple[tuple[tuple[int, ...], ...], dict[tuple[int, ...], str]]:
-    """Node indices that have an atmosphere, and the reason of each that has none.
+    """Node indices that have what the engine needs, and the reason of each that has not.
 
     Raises
     ------
@@ -207,9 +209,16 @@ def available_nodes(
     for node in np.ndindex(*(len(axis) for axis in node_axes)):
         try:
             atmosphere_at(atmospheres, node_axes, node)
-            nodes.append(node)
         except MissingNodeError as error:
             missing[node] = error.reason
+            continue
+        reason = ""
+        if engine is not None and engine.unavailable is not None:
+            reason = engine.unavailable(*(float(axis.values[i]) for axis, i in zip(node_axes, node, strict=True)))
+        if reason:
+            missing[node] = reason
+        else:
+            nodes.append(node)
     if not nodes:
         raise InputError("none of the chosen nodes has an atmosphere")
     return tuple(nodes), missing

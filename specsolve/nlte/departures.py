@@ -157,6 +157,16 @@ class DepartureStore:
             total = total + weight * (self._codes[index] * STEP)
         return total
 
+    def unavailable(self, teff: float, logg: float, mh: float) -> str:
+        """Why there are no departures at a point; empty if there are."""
+        try:
+            self.log_b(teff, logg, mh)
+        except MissingNodeError as error:
+            return error.reason
+        except InputError as error:
+            return str(error)
+        return ""
+
     def of_lines(self, lines: LineList, teff: float, logg: float, mh: float) -> LineDepartures:
         """Departures of the levels of lines, for `formation.reduced_widths`."""
         found = line_levels(lines, self.size)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import OrderedDict
 from dataclasses import dataclass
 
 import numpy as np
@@ -35,7 +36,28 @@ class LineLevels:
     approximate: np.ndarray
 
 
+_FOUND: OrderedDict[tuple[str, int], LineLevels] = OrderedDict()
+KEPT = 8  # line lists whose levels are remembered
+
+
 def line_levels(lines: LineList, size: int = DEFAULT_SIZE) -> LineLevels:
+    """The levels of lines; those of the last few lists are remembered. See `find_line_levels`.
+
+    Examples
+    --------
+    >>> found = line_levels(LineList.from_arrays([6301.50], ["Fe I"], [3.654], [-0.718]))
+    >>> [str(packaged_atom().name[i]) for i in (found.lower[0], found.upper[0])]
+    ['Fe I z 5P*', 'Fe I e 5D']
+    """
+    key = (lines.identity, size)
+    if key not in _FOUND:
+        _FOUND[key] = find_line_levels(lines, size)
+        while len(_FOUND) > KEPT:
+            _FOUND.popitem(last=False)
+    return _FOUND[key]
+
+
+def find_line_levels(lines: LineList, size: int = DEFAULT_SIZE) -> LineLevels:
     """Find the levels of lines: by the identified transition, else by energy and parity.
 
     Parameters
@@ -44,12 +66,6 @@ def line_levels(lines: LineList, size: int = DEFAULT_SIZE) -> LineLevels:
         Of Fe I and Fe II.
     size : int
         Of the packaged atom.
-
-    Examples
-    --------
-    >>> found = line_levels(LineList.from_arrays([6301.50], ["Fe I"], [3.654], [-0.718]))
-    >>> [str(packaged_atom().name[i]) for i in (found.lower[0], found.upper[0])]
-    ['Fe I z 5P*', 'Fe I e 5D']
     """
     atom, members = packaged_atom(size), packaged_members(size)
     table, levels = load_transitions(), load_levels()

@@ -101,7 +101,8 @@ def test_a_star_table_is_a_line_list_too(doubles, tmp_path, capsys):
     [
         (["--teff", "5000:6000"], EXIT_USAGE, "is not an axis subset"),
         (["--teff", "4800"], EXIT_NO_INPUT, "no atmospheres at"),
-        (["--treatment", "best"], EXIT_NO_INPUT, "treatment 'best' is unknown"),
+        (["--treatment", "best"], EXIT_USAGE, "is not one of"),
+        (["--departures", "nowhere"], EXIT_USAGE, "--departures is for"),
         (["--workers", "0"], EXIT_USAGE, "--workers"),
         (["--reuse", "nowhere"], EXIT_NO_INPUT, "holds no finished grid"),
     ],
