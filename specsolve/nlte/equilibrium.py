@@ -30,7 +30,7 @@ from specsolve.radiation.transfer import ANGLE_COSINES, ANGLE_WEIGHTS
 CONVERGED = 1e-4
 MOST_ITERATIONS = 120
 #: A line whose opacity stays below this fraction of the background everywhere does not change the radiation field.
-THIN = 3e-3
+THIN = 3e-2
 #: Displacements [Doppler widths] of the wavelengths at which the background of a line is sampled: outside its own core.
 BACKGROUND_OFFSETS = (-9.0, 9.0)
 #: Lines outside [cm] count as in detailed balance: below, optically thick lines of Fe II; above, between near-equal levels.
