@@ -7,6 +7,8 @@ darkening; macroturbulence: Gaussian, or radial-tangential with equal parts (Gra
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
 LIGHT_SPEED_KM_S = 299792.458
@@ -44,50 +46,75 @@ def rotation(velocity, vsini: float, limb_darkening: float = LIMB_DARKENING) -> 
     return top / (np.pi * vsini * (1.0 - limb_darkening / 3.0))
 
 
-def radial_tangential(velocity, dispersion: float, n_rings: int = 16) -> np.ndarray:
+def radial_tangential(velocity, dispersion: float) -> np.ndarray:
     """Radial-tangential macroturbulence of unit area, equal parts, averaged over the disc with limb darkening.
 
-    The velocity field is Gaussian exp(-(v / dispersion)^2) along the radius and along the tangent; Gray 2008, ch. 17.
+    The velocity field is Gaussian, exp(-(v / dispersion)^2), along the radius and along the tangent; Gray 2008, ch. 17.
     """
-    mu2 = (np.arange(n_rings) + 0.5) / n_rings  # equal areas of the disc
-    mu = np.sqrt(mu2)
-    light = 1.0 - LIMB_DARKENING + LIMB_DARKENING * mu
-    light /= light.sum()
-    result = np.zeros(np.shape(velocity))
-    for width in (dispersion * mu, dispersion * np.sqrt(1.0 - mu2)):
-        for part, w in zip(light, width, strict=True):
-            result += 0.5 * part * gaussian(velocity, FWHM_PER_SIGMA * w / np.sqrt(2.0))
-    return result
+    light, widths = _rings(dispersion)
+    return sum(
+        part * gaussian(velocity, FWHM_PER_SIGMA * w / np.sqrt(2.0)) for part, w in zip(light, widths, strict=True)
+    )
 
 
-def transform(n: int, step: float, *, fwhm: float = 0.0, vsini: float = 0.0, macroturbulence: float = 0.0):
-    """Fourier transform of the common broadening on a periodic grid of n velocities, for `numpy.fft.rfft`.
+@dataclass(frozen=True, kw_only=True)
+class Kernel:
+    """Common broadening of all lines.
 
-    Parameters
+    Attributes
     ----------
-    n : int
-    step : float
-        [km/s].
     fwhm : float
-        Of a Gaussian: the instrument, and a Gaussian macroturbulence in quadrature [km/s].
+        Of a Gaussian, the instrument [km/s].
     vsini : float
-        [km/s]; 0 for none.
+        Rotation [km/s]; 0 for none.
     macroturbulence : float
         Radial-tangential dispersion [km/s]; 0 for none.
 
-    Returns
-    -------
-    ndarray, shape (n // 2 + 1,)
-        Real, 1 at frequency 0.
+    Examples
+    --------
+    >>> Kernel(fwhm=3.0).total
+    3.0
     """
-    frequency = np.fft.rfftfreq(n, step)
-    result = np.exp(-2.0 * (np.pi * frequency * fwhm / FWHM_PER_SIGMA) ** 2)
-    if vsini > 0.0:
-        result = result * _rotation_transform(2.0 * np.pi * frequency * vsini)
-    if macroturbulence > 0.0:
-        velocity = np.fft.fftfreq(n, 1.0 / n) * step
-        result = result * np.fft.rfft(radial_tangential(velocity, macroturbulence) * step).real
-    return result
+
+    fwhm: float
+    vsini: float = 0.0
+    macroturbulence: float = 0.0
+
+    @property
+    def total(self) -> float:
+        """Full width at half maximum of a Gaussian with the variance of all parts [km/s]."""
+        sigma2 = (ROTATION_TO_SIGMA * self.vsini) ** 2 + (0.5 * self.macroturbulence) ** 2
+        return float(np.sqrt(self.fwhm**2 + FWHM_PER_SIGMA**2 * sigma2))
+
+    def transform(self, n: int, step: float) -> np.ndarray:
+        """Fourier transform on a periodic grid of n velocities, for `numpy.fft.rfft`: real, 1 at frequency 0.
+
+        Parameters
+        ----------
+        n : int
+        step : float
+            [km/s].
+
+        Returns
+        -------
+        ndarray, shape (n // 2 + 1,)
+        """
+        frequency = np.fft.rfftfreq(n, step)
+        result = np.exp(-2.0 * (np.pi * frequency * self.fwhm / FWHM_PER_SIGMA) ** 2)
+        if self.vsini > 0.0:
+            result = result * _rotation_transform(2.0 * np.pi * frequency * self.vsini)
+        if self.macroturbulence > 0.0:
+            light, widths = _rings(self.macroturbulence)
+            result = result * (light @ np.exp(-((np.pi * frequency * widths[:, None]) ** 2)))
+        return result
+
+
+def _rings(dispersion: float, n_rings: int = 16) -> tuple[np.ndarray, np.ndarray]:
+    """Light and Gaussian dispersions of rings of equal area, along the radius and along the tangent."""
+    mu2 = (np.arange(n_rings) + 0.5) / n_rings
+    light = 1.0 - LIMB_DARKENING + LIMB_DARKENING * np.sqrt(mu2)
+    light *= 0.5 / light.sum()
+    return np.concatenate([light, light]), dispersion * np.sqrt(np.concatenate([mu2, 1.0 - mu2]))
 
 
 def _rotation_transform(u: np.ndarray) -> np.ndarray:
@@ -101,7 +128,7 @@ def _rotation_transform(u: np.ndarray) -> np.ndarray:
     return np.where(u < 1e-3, 1.0, weight * disc + (1.0 - weight) * parabola)
 
 
-def broaden(flux, step: float, **broadening: float) -> np.ndarray:
+def broaden(flux, step: float, kernel: Kernel) -> np.ndarray:
     """Convolve a relative flux on equal steps of ln(wavelength); beyond both ends it continues as 1.
 
     Parameters
@@ -109,16 +136,10 @@ def broaden(flux, step: float, **broadening: float) -> np.ndarray:
     flux : ndarray, shape (n,)
     step : float
         [km/s].
-    **broadening
-        As in `transform`.
+    kernel : Kernel
     """
     from scipy.fft import next_fast_len
 
     depth = 1.0 - np.asarray(flux, float)
     n = next_fast_len(depth.size + int(200.0 / step), real=True)
-    return 1.0 - np.fft.irfft(np.fft.rfft(depth, n) * transform(n, step, **broadening), n)[: depth.size]
-
-
-def total_fwhm(fwhm: float, vsini: float = 0.0) -> float:
-    """Full width at half maximum of a Gaussian that has the variance of Gaussian and rotation together [km/s]."""
-    return float(np.hypot(fwhm, FWHM_PER_SIGMA * ROTATION_TO_SIGMA * vsini))
+    return 1.0 - np.fft.irfft(np.fft.rfft(depth, n) * kernel.transform(n, step), n)[: depth.size]

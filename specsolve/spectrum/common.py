@@ -1,4 +1,9 @@
-"""The common broadening of a spectrum, fitted to its cleanest lines: a Gaussian, and rotation where it shows."""
+"""The common broadening of a spectrum, fitted to its cleanest lines.
+
+Where the resolving power is known: its Gaussian, radial-tangential macroturbulence, and rotation where it shows; a
+resolving power that is understated is told by lines narrower than the instrument. Where it is unknown: a Gaussian, and
+rotation where it shows.
+"""
 
 from __future__ import annotations
 
@@ -7,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from . import system as systems
-from .broadening import FWHM_PER_SIGMA, LIGHT_SPEED_KM_S, ROTATION_TO_SIGMA, total_fwhm, transform
+from .broadening import FWHM_PER_SIGMA, LIGHT_SPEED_KM_S, ROTATION_TO_SIGMA, Kernel
 from .fit import Fit, pixel_range
 from .predict import N_TABLE, TABLE_STEP, Prediction
 
@@ -17,7 +22,9 @@ DEPTHS = (0.04, 0.7)  # central depths of the lines that serve
 LARGEST_CONTAMINATION = 0.25
 ROTATION_GAIN = 16.0
 """Rotation is taken where it lowers chi square by this much (4 sigma), after scaling to the residuals."""
-LARGEST_FWHM = 45.0  # km/s
+USUAL_MACROTURBULENCE = (3.5, 3.0)
+"""Mean and 1-sigma beforehand [km/s], slow rotation and the pixels' own width included; common practice, no source."""
+LARGEST_STAR = 45.0  # km/s
 
 
 @dataclass(frozen=True)
@@ -26,16 +33,14 @@ class Broadening:
 
     Attributes
     ----------
-    fwhm, fwhm_error : float
-        Gaussian part [km/s]; the error is nan where too few lines served.
-    vsini : float
-        [km/s]; 0 where rotation does not show.
+    kernel : Kernel
+    error : float
+        Of its total full width [km/s]; nan where too few lines served.
     n_lines : int
     """
 
-    fwhm: float
-    fwhm_error: float
-    vsini: float
+    kernel: Kernel
+    error: float
     n_lines: int
 
 
@@ -53,7 +58,7 @@ def fit_broadening(fit: Fit, prediction: Prediction, instrument: float) -> Broad
 
     data = _pixels(fit)
     if data is None:
-        return Broadening(fit.fwhm, float("nan"), fit.vsini, 0)
+        return Broadening(fit.kernel, float("nan"), 0)
     rows, row_of, share, velocity, line, depth, weight = data
     transforms = prediction.shapes[rows][:, :: N_TABLE // N_SHORT]
     x = np.abs(velocity) / TABLE_STEP
@@ -61,9 +66,8 @@ def fit_broadening(fit: Fit, prediction: Prediction, instrument: float) -> Broad
     t = x - i
     n_lines = int(line.max()) + 1
 
-    def chi_square(fwhm: float, vsini: float) -> float:
-        kernel = transform(2 * N_SHORT, TABLE_STEP, fwhm=max(fwhm, 0.3), vsini=vsini)
-        table = np.fft.irfft(transforms * kernel, axis=1)[:, :N_SHORT]
+    def chi_square(kernel: Kernel) -> float:
+        table = np.fft.irfft(transforms * kernel.transform(2 * N_SHORT, TABLE_STEP), axis=1)[:, :N_SHORT]
         phi = (1.0 - share) * ((1.0 - t) * table[row_of, i] + t * table[row_of, i + 1])
         phi += share * ((1.0 - t) * table[row_of + 1, i] + t * table[row_of + 1, i + 1])
         own = np.bincount(line, weight * phi * phi, n_lines)
@@ -72,27 +76,52 @@ def fit_broadening(fit: Fit, prediction: Prediction, instrument: float) -> Broad
         difference = depth - level[line] * phi
         return float(np.sum(2.0 * (np.sqrt(1.0 + weight * difference**2) - 1.0)))  # soft: a blend counts linearly
 
-    low = 0.5 if not np.isfinite(instrument) else 0.8 * instrument
+    def of(star: float, vsini: float) -> Kernel:
+        """Kernel for a part of the star: macroturbulence, or with an unknown instrument a Gaussian."""
+        if known:
+            if star >= 0.0:
+                return Kernel(fwhm=instrument, macroturbulence=star, vsini=abs(vsini))
+            return Kernel(fwhm=max(instrument + star, 0.3 * instrument), vsini=abs(vsini))
+        return Kernel(fwhm=max(star, 0.3), vsini=abs(vsini))
+
+    known = bool(np.isfinite(instrument))
+    low = -0.4 * instrument if known else 0.5
+    usual, spread = USUAL_MACROTURBULENCE
+
+    def objective(star: float, vsini: float) -> float:
+        beforehand = ((star - usual) / spread) ** 2 if known else 0.0
+        return chi_square(of(star, vsini)) + beforehand
+
     best = minimize_scalar(
-        chi_square, bounds=(low, LARGEST_FWHM), args=(0.0,), method="bounded", options={"xatol": 0.02}
+        lambda star: objective(star, 0.0),
+        bounds=(low, LARGEST_STAR),
+        method="bounded",
+        options={"xatol": 0.02},
     )
-    fwhm, vsini, chi2 = float(best.x), 0.0, float(best.fun)
+    kernel, chi2, star = of(best.x, 0.0), float(best.fun), float(best.x)
     scale = max(1.0, chi2 / max(1, depth.size - n_lines))
-    floor = instrument if np.isfinite(instrument) else 2.0
-    excess = np.sqrt(max(fwhm**2 - floor**2, 0.0)) / (FWHM_PER_SIGMA * ROTATION_TO_SIGMA)
+    floor = instrument if known else 2.0
+    excess = np.sqrt(max(kernel.total**2 - floor**2, 0.0)) / (FWHM_PER_SIGMA * ROTATION_TO_SIGMA)
     if excess > 0.5 * floor:
         two = minimize(
-            lambda p: chi_square(np.hypot(low, p[0]), abs(p[1])),
-            [0.3 * floor, excess],
+            lambda p: objective(p[0], p[1]),
+            [0.4 * star if known else floor, 0.8 * excess],
             method="Nelder-Mead",
             options={"xatol": 0.1, "fatol": 1.0, "maxfev": 40},
         )
         if (chi2 - two.fun) / scale > ROTATION_GAIN:
-            fwhm, vsini, chi2 = float(np.hypot(low, two.x[0])), float(abs(two.x[1])), float(two.fun)
-    h = 0.03 * fwhm
-    curvature = (chi_square(fwhm + h, vsini) - 2.0 * chi_square(fwhm, vsini) + chi_square(fwhm - h, vsini)) / h**2
-    error = float(np.sqrt(2.0 * scale / curvature)) if curvature > 0.0 else float("nan")
-    return Broadening(fwhm, error, vsini, n_lines)
+            kernel, chi2, star = of(*two.x), float(two.fun), float(two.x[0])
+    h = 0.05 * kernel.total
+    low_star, high_star = max(star - h, low), star + h
+    ends = [chi_square(of(s, kernel.vsini)) for s in (low_star, high_star)]
+    width = high_star - low_star
+    middle = 0.5 * (low_star + high_star)
+    curvature = 4.0 * (sum(ends) - 2.0 * chi_square(of(middle, kernel.vsini))) / width**2
+    error = float("nan")
+    if curvature > 0.0:
+        slope = (of(high_star, kernel.vsini).total - of(low_star, kernel.vsini).total) / width
+        error = float(np.sqrt(2.0 * scale / curvature) * abs(slope))
+    return Broadening(kernel, error, n_lines)
 
 
 def _pixels(fit: Fit):
@@ -100,7 +129,7 @@ def _pixels(fit: Fit):
     lines, own = fit.lines, fit.targets
     own = own[lines.own[own] >= 0]
     peak = lines.width[own] * fit.shapes[lines.row[own], 0]
-    total = total_fwhm(fit.fwhm, fit.vsini)
+    total = fit.kernel.total
     alone = systems.depth_of(fit.wavelength, fit.order, lines, fit.shapes, fit.reach, own)
     others = 1.0 - (1.0 - fit.depth) / (1.0 - alone)
     quality = np.full(own.size, -np.inf)

@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from . import system as systems
-from .broadening import FWHM_PER_SIGMA, LIGHT_SPEED_KM_S, total_fwhm
+from .broadening import FWHM_PER_SIGMA, LIGHT_SPEED_KM_S, Kernel
 from .continuum import (
     LEVEL_CHANGE,
     LEVEL_CHANGE_NORMALISED,
@@ -59,8 +59,8 @@ class Fit:
     knots : Knots
     levels : ndarray, shape (n_knots,)
         Corrected continuum at the knots.
-    fwhm, vsini : float
-        Common broadening [km/s].
+    kernel : Kernel
+        Common broadening.
     expected, unpredicted : Unpredicted
         Absorption that nobody predicted, beforehand and as found.
     probability : ndarray, shape (n_pixels,)
@@ -80,8 +80,7 @@ class Fit:
     shapes: np.ndarray
     knots: Knots
     levels: np.ndarray
-    fwhm: float
-    vsini: float
+    kernel: Kernel
     options: MeasureOptions
     priors: Priors
     expected: Unpredicted | None = None
@@ -93,7 +92,7 @@ class Fit:
     @property
     def reach(self) -> float:
         """Least distance to which lines are followed [km/s]."""
-        return 1.2 * total_fwhm(self.fwhm, self.vsini) + 4.0
+        return 1.2 * self.kernel.total + 4.0
 
     @property
     def targets(self) -> np.ndarray:
@@ -134,9 +133,7 @@ def pixel_range(fit: Fit, entry: int, distance: float) -> tuple[int, int]:
     )
 
 
-def start_fit(
-    spectrum: Spectrum, prediction: Prediction, fwhm: float, vsini: float, options: MeasureOptions
-) -> Fit | None:
+def start_fit(spectrum: Spectrum, prediction: Prediction, kernel: Kernel, options: MeasureOptions) -> Fit | None:
     """Choose pixels and entries, and make the first estimate of the continuum; None if no line is covered."""
     own = prediction.lines.wavelength_air[prediction.lines.own >= 0]
     w = spectrum.wavelength_air
@@ -151,10 +148,10 @@ def start_fit(
     flux = np.where(good, spectrum.flux[near][keep], 1.0)
     sigma = np.where(good, spectrum.sigma[near][keep], np.inf)
     lines = entries(prediction, wavelength, order)
-    shapes = prediction.broadened(fwhm=fwhm, vsini=vsini)
+    shapes = prediction.broadened(kernel)
     assign_shapes(lines, prediction)
     knots = make_knots(wavelength, order, options.knot_spacing)
-    reach = 1.2 * total_fwhm(fwhm, vsini) + 4.0
+    reach = 1.2 * kernel.total + 4.0
     depth = systems.depth_of(wavelength, order, lines, shapes, reach)
     scale = first_estimate(knots, flux, sigma, good, 1.0 - np.clip(depth, 0.0, 0.95))
     if not np.all(np.isfinite(scale) & (scale > 0.0)):
@@ -172,8 +169,7 @@ def start_fit(
         shapes=shapes,
         knots=knots,
         levels=np.ones(len(knots)),
-        fwhm=fwhm,
-        vsini=vsini,
+        kernel=kernel,
         options=options,
         priors=Priors(
             shift=options.shift_error,
@@ -249,7 +245,7 @@ def own_entries(fit: Fit) -> np.ndarray:
     known = np.flatnonzero(fit.lines.own >= 0)
     covered = []
     for j in known:
-        low, high = pixel_range(fit, j, 0.4 * total_fwhm(fit.fwhm, fit.vsini) + 1.0)
+        low, high = pixel_range(fit, j, 0.4 * fit.kernel.total + 1.0)
         if high - low >= 2 and fit.good[low:high].mean() >= 0.5:
             covered.append(j)
     return np.array(covered, dtype=np.int64)
@@ -305,7 +301,7 @@ def weights(fit: Fit, residual: np.ndarray, *, weigh: bool) -> np.ndarray:
         if fit.expected is None:
             fit.expected = fit.unpredicted = expected_unpredicted(fit.depth, fit.options.unknown_part)
         probability = noise_probability(deviation, relative, fit.unpredicted)
-        core = fit.near_targets(0.6 * total_fwhm(fit.fwhm, fit.vsini))
+        core = fit.near_targets(0.6 * fit.kernel.total)
         among = fit.good & ~core & (fit.depth < 0.3)
         fit.unpredicted = corrected(fit.expected, probability[among], relative[among])
         fit.probability = np.where(core, 1.0, probability)
@@ -317,7 +313,7 @@ def weights(fit: Fit, residual: np.ndarray, *, weigh: bool) -> np.ndarray:
 
 def find_lines(fit: Fit) -> int:
     """Add lines where absorption is left that nobody predicted; returns how many."""
-    width = total_fwhm(fit.fwhm, fit.vsini) + 1.5  # an unbroadened weak line's own width adds little
+    width = fit.kernel.total + 1.5  # an unbroadened weak line's own width adds little
     residual = fit.flux - fit.continuum * (1.0 - fit.depth)
     inverse = np.where(fit.good & ~fit.cosmic, 1.0 / np.where(fit.good, fit.model_error(), 1.0) ** 2, 0.0)
     centres, numbers, widths = [], [], []

@@ -11,7 +11,7 @@ from specsolve.formation.spectral_lines import SpectralLines
 from specsolve.lines import LineList
 
 from . import types as t
-from .broadening import LIGHT_SPEED_KM_S, total_fwhm
+from .broadening import LIGHT_SPEED_KM_S, Kernel
 from .common import Broadening, fit_broadening
 from .fit import Fit, assign_shapes, choose_kinds, find_lines, iterate, pixel_range, start_fit
 from .flags import SPOILING, flags_of, telluric
@@ -29,8 +29,8 @@ from .results import (
 )
 from .types import Measurements, Spectrum
 
-FIRST_BROADENING = 4.0
-"""Star's part of the broadening before it is fitted [km/s]; macroturbulence and slow rotation, common practice."""
+FIRST_MACROTURBULENCE = 3.5
+"""Before it is fitted, slow rotation included [km/s]; common practice, no source."""
 UNKNOWN_INSTRUMENT = 8.0  # km/s, before the fit
 
 
@@ -83,8 +83,8 @@ def fit_spectrum(spectrum: Spectrum, prediction: Prediction, options: MeasureOpt
     """The finished fit, the common broadening, and the change of the neighbours' strength [dex]."""
     instrument = LIGHT_SPEED_KM_S / spectrum.resolving_power
     known = np.isfinite(instrument)
-    first = np.hypot(instrument, FIRST_BROADENING) if known else UNKNOWN_INSTRUMENT
-    fit = start_fit(spectrum, prediction, float(first), 0.0, options)
+    first = Kernel(fwhm=instrument, macroturbulence=FIRST_MACROTURBULENCE) if known else Kernel(fwhm=UNKNOWN_INSTRUMENT)
+    fit = start_fit(spectrum, prediction, first, options)
     if fit is None or fit.targets.size == 0:
         raise SpectrumError(
             f"{spectrum.star}: the spectrum covers none of the lines of the list.", path=spectrum.path or spectrum.star
@@ -109,8 +109,8 @@ def fit_spectrum(spectrum: Spectrum, prediction: Prediction, options: MeasureOpt
 def _apply(fit: Fit, prediction: Prediction, instrument: float) -> Broadening:
     """Fit the common broadening and take it over."""
     broadening = fit_broadening(fit, prediction, instrument)
-    fit.fwhm, fit.vsini = broadening.fwhm, broadening.vsini
-    fit.shapes = prediction.broadened(fwhm=fit.fwhm, vsini=fit.vsini)
+    fit.kernel = broadening.kernel
+    fit.shapes = prediction.broadened(fit.kernel)
     fit.lines.stretch[fit.targets] = 1.0
     fit.update_depth()
     return broadening
@@ -162,7 +162,7 @@ def collect(
     errors = errors_of(fit)
     to_ma = 1e3 * fit.lines.centre[entries] / LIGHT_SPEED_KM_S
     total_before = errors["noise"] + errors["continuum"]
-    at_edge = np.array([edge_of_order(fit, j, total_fwhm(fit.fwhm, fit.vsini)) for j in entries], bool)
+    at_edge = np.array([edge_of_order(fit, j, fit.kernel.total) for j in entries], bool)
     best = np.full(n, -1)
     for k in np.lexsort((total_before, at_edge))[::-1]:
         best[fit.lines.own[entries[k]]] = k
@@ -261,9 +261,9 @@ def collect(
         flags=flags,
         use=(flags & SPOILING) == 0,
         windows=tuple(kept) if windows else (),
-        broadening=total_fwhm(fit.fwhm, fit.vsini),
-        broadening_error=broadening.fwhm_error,
-        rotation=fit.vsini if fit.vsini > 0.0 else float("nan"),
+        broadening=fit.kernel.total,
+        broadening_error=broadening.error,
+        rotation=fit.kernel.vsini if fit.kernel.vsini > 0.0 else float("nan"),
         notes=notes_of(spectrum, fit, broadening, offset),
         **columns,
     )
@@ -294,14 +294,14 @@ def _level_errors(fit: Fit, entries: np.ndarray) -> np.ndarray:
 def notes_of(spectrum: Spectrum, fit: Fit, broadening: Broadening, offset: float) -> tuple[str, ...]:
     """What a person should know of the fit, one sentence each."""
     notes = []
-    rotating = fit.vsini > 0.0
-    words = f"common broadening {total_fwhm(fit.fwhm, fit.vsini):.2f} km/s"
+    rotating = fit.kernel.vsini > 0.0
+    words = f"common broadening {fit.kernel.total:.2f} km/s"
     if rotating:
-        words += f" with v sin i {fit.vsini:.1f} km/s"
+        words += f" with v sin i {fit.kernel.vsini:.1f} km/s"
     notes.append(f"{words}, from {broadening.n_lines} lines.")
-    if fit.vsini > fit.options.vsini_limit:
+    if fit.kernel.vsini > fit.options.vsini_limit:
         notes.append(
-            f"rotation of {fit.vsini:.0f} km/s: widths are validated up to v sin i {fit.options.vsini_limit:.0f} km/s."
+            f"rotation of {fit.kernel.vsini:.0f} km/s: widths are validated up to v sin i {fit.options.vsini_limit:.0f} km/s."
         )
     level = fit.scale * fit.continuum
     if spectrum.normalised:

@@ -6,7 +6,7 @@ from collections.abc import Callable
 
 import numpy as np
 
-from .broadening import LIGHT_SPEED_KM_S, broaden
+from .broadening import LIGHT_SPEED_KM_S, Kernel, broaden
 from .types import Spectrum
 
 STEP_KM_S = 0.6
@@ -62,7 +62,7 @@ def observe(
 
     step = LIGHT_SPEED_KM_S * np.log(wavelength_air[1] / wavelength_air[0])
     fwhm = LIGHT_SPEED_KM_S / resolving_power
-    flux = broaden(relative_flux, step, fwhm=fwhm, vsini=vsini, macroturbulence=macroturbulence)
+    flux = broaden(relative_flux, step, Kernel(fwhm=fwhm, vsini=vsini, macroturbulence=macroturbulence))
     margin = 100.0 / LIGHT_SPEED_KM_S  # edges of the convolution are left out
     low, high = wavelength_air[0] * (1.0 + margin), wavelength_air[-1] * (1.0 - margin)
     pixel = fwhm / pixels_per_fwhm

@@ -28,7 +28,7 @@ from specsolve.formation.synthesis import (
 from specsolve.lines import LineList
 from specsolve.matter.composition import composition_for
 
-from .broadening import LIGHT_SPEED_KM_S, transform
+from .broadening import LIGHT_SPEED_KM_S, Kernel
 
 OWN_STEP = 0.4  # dex
 OWN_DA = np.arange(-4, 5) * OWN_STEP
@@ -94,10 +94,9 @@ class Prediction:
     shapes: np.ndarray
     family: slice
 
-    def broadened(self, rows=slice(None), *, fwhm: float, vsini: float = 0.0) -> np.ndarray:
+    def broadened(self, kernel: Kernel) -> np.ndarray:
         """Shapes after the common broadening at velocities 0, 1, 2 ... times `TABLE_STEP`, shape (n_rows, n)."""
-        kernel = transform(2 * N_TABLE, TABLE_STEP, fwhm=fwhm, vsini=vsini)
-        return np.fft.irfft(self.shapes[rows] * kernel, axis=1)[:, :N_TABLE]
+        return np.fft.irfft(self.shapes * kernel.transform(2 * N_TABLE, TABLE_STEP), axis=1)[:, :N_TABLE]
 
     def rows_for(self, source: np.ndarray, relative_width: np.ndarray, wing: np.ndarray):
         """Row below, and the share of the row above, for own lines of a width, `wing` steps further along the shapes."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from . import system as systems
-from .broadening import LIGHT_SPEED_KM_S, total_fwhm
+from .broadening import LIGHT_SPEED_KM_S
 from .fit import Fit, pixel_range, weights
 from .predict import TABLE_STEP, Prediction
 from .system import NEIGHBOUR
@@ -77,7 +77,7 @@ def unknown_variance(fit: Fit, prediction: Prediction, entry: int, part: float) 
     widths = prediction.relative_width[low:high] * LIGHT_SPEED_KM_S
     most = UNSEEN_PART * max(fit.lines.width[entry], 0.0)
     widths = np.minimum(widths[lines.own[low:high] < 0], most)
-    core = total_fwhm(fit.fwhm, fit.vsini) + 3.0
+    core = fit.kernel.total + 3.0
     chance = core / LIGHT_SPEED_KM_S * centre / (2.0 * NEIGHBOURHOOD)
     return float(part / (1.0 - part) * min(chance, 1.0) * np.sum(widths**2))
 
