@@ -31,6 +31,7 @@ PACKAGED = Path(__file__).resolve().parent.parent / "data" / "perturbations" / F
 STEP = 1e-4  # of the stored integers [dex per unit of p]
 MISSING = np.iinfo(np.int16).min  # the integer of a response that could not be computed
 NODE_SCALE = np.array([500.0, 1.0, 0.7])  # K, dex, dex: one unit of distance between nodes
+KEPT_GRIDS = 8  # whose store is remembered
 HULL_TOLERANCE = 1e-6
 ALPHA, MISSING_OPACITY = "alpha", "missing_opacity"
 # How far the response was computed for, and compared with the full engine: beyond, first order is not tested.
@@ -72,18 +73,11 @@ class Perturbations:
         UsageError
             If none fit its lines and atmospheres; the text says how to make them.
         """
-        own = Path(grid.directory) / FILE_NAME
-        found = _read_once(str(own)) if own.exists() else cls.packaged()
-        if found.header["atmospheres_identity"] != grid.atmospheres_identity:
-            raise UsageError(
-                f"the stored responses to [alpha/Fe] are of other atmospheres than this grid; run {REMAKE}"
-            )
-        absent = int(np.count_nonzero(found.line_places(grid.lines.key) < 0))
-        if absent:
-            raise UsageError(
-                f"{absent} of {len(grid.lines)} lines of this grid have no stored response to [alpha/Fe]; run {REMAKE}"
-            )
-        return found
+        if grid.identity not in _OF_GRID:
+            if len(_OF_GRID) > KEPT_GRIDS:
+                _OF_GRID.clear()
+            _OF_GRID[grid.identity] = _fitting(grid)
+        return _OF_GRID[grid.identity]
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -102,8 +96,12 @@ class Perturbations:
 
     def line_places(self, keys) -> np.ndarray:
         """Position of each line key, -1 where there is none."""
-        place = {key: i for i, key in enumerate(self.keys)}
-        return np.array([place.get(str(key), -1) for key in keys], dtype=np.int64)
+        place = self._place
+        return np.array([place.get(key, -1) for key in np.asarray(keys).tolist()], dtype=np.int64)
+
+    @cached_property
+    def _place(self) -> dict[str, int]:
+        return {key: i for i, key in enumerate(self.keys)}
 
     @cached_property
     def _flat(self) -> dict[str, np.ndarray]:
@@ -162,6 +160,22 @@ class Perturbations:
         at_nodes = (operator @ stored.reshape(n_nodes, -1)).reshape(len(points) * n_lines, *stored.shape[2:])
         full = np.matmul(np.matmul(vmic, at_nodes), dA.T)
         return full.reshape(len(points), n_lines, *full.shape[1:])
+
+
+_OF_GRID: dict[str, Perturbations] = {}
+
+
+def _fitting(grid: Any) -> Perturbations:
+    own = Path(grid.directory) / FILE_NAME
+    found = _read_once(str(own)) if own.exists() else Perturbations.packaged()
+    if found.header["atmospheres_identity"] != grid.atmospheres_identity:
+        raise UsageError(f"the stored responses to [alpha/Fe] are of other atmospheres than this grid; run {REMAKE}")
+    absent = int(np.count_nonzero(found.line_places(grid.lines.key) < 0))
+    if absent:
+        raise UsageError(
+            f"{absent} of {len(grid.lines)} lines of this grid have no stored response to [alpha/Fe]; run {REMAKE}"
+        )
+    return found
 
 
 class NodeSpline:

@@ -139,3 +139,64 @@ def test_own_sun_is_the_weighted_mean_on_the_stars_log_gf():
     assert fe2 == pytest.approx(7.465 - 0.05)
     (few, _), _ = sun.means(keys[:4], np.zeros(4), is_fe2[:4], weights[:4])
     assert np.isnan(few)
+
+
+def shared_errors(star, reference, grid, **errors):
+    solution = solve(
+        star, grid, reference=reference, reference_parameters=REFERENCE, reference_errors=errors, options=WIDE
+    )
+    return solution
+
+
+def test_errors_of_the_reference_parameters_are_carried(interpolator, pair):
+    """Cov_list by propagation equals what happens when the reference's parameters are really wrong by their errors."""
+    star, reference, _ = pair
+    grid = interpolator.grid
+    exact = shared_errors(star, reference, grid)
+    for name, error in (("teff", 40.0), ("logg", 0.08), ("feh", 0.05)):
+        carried = shared_errors(star, reference, grid, **{name: error})
+        np.testing.assert_allclose(carried.parameters, exact.parameters)
+        moved = solve(
+            star,
+            grid,
+            reference=reference,
+            reference_parameters={**REFERENCE, name: REFERENCE[name] + error},
+            options=WIDE,
+        )
+        shift = (moved.parameters - exact.parameters) / SCALE
+        added = (carried.cov_list - exact.cov_list) / np.outer(SCALE, SCALE)
+        # first order against a step of finite size: a tenth, and a floor of 0.5 K or 1e-3 dex
+        np.testing.assert_allclose(added, np.outer(shift, shift), rtol=0.1, atol=0.1 * np.abs(shift).max() ** 2 + 4e-6)
+        np.testing.assert_allclose(carried.cov_star, exact.cov_star, rtol=1e-9)
+
+
+def test_noise_of_the_reference_is_carried(interpolator, rng):
+    """Reference stars with noise: the scatter of the target's parameters is the stated shared error."""
+    truth, grid = np.array([5850.0, 4.30, 0.1, 1.15]), interpolator.grid
+    star = make_star(interpolator, truth, name="target")
+    found, stated = [], []
+    for _ in range(25):
+        reference = make_star(interpolator, (5772.0, 4.438, 0.0, 1.0), name="reference", rng=rng, width_error=0.02)
+        solution = solve(star, grid, reference=reference, reference_parameters=REFERENCE, options=WIDE)
+        found.append(solution.parameters)
+        stated.append(solution.errors_list)
+    scatter = np.std((np.array(found) - truth) / SCALE, axis=0)
+    # 25 draws know a standard deviation to 14 %; three of these, and the stated one is a mean itself
+    np.testing.assert_allclose(scatter, np.mean(np.array(stated) / SCALE, axis=0), rtol=0.45)
+
+
+def test_reference_note_and_covariance(interpolator, pair):
+    _, reference, _ = pair
+    found = reference_star(
+        reference, interpolator.grid, parameters=REFERENCE, options=WIDE, parameter_errors={"teff": 30.0}
+    )
+    assert found.covariance[0, 0] == pytest.approx(900.0)
+    assert found.covariance[3, 3] > 0.0
+    assert found.covariance[0, 3] != 0.0  # the vmic follows the temperature
+    assert "errors 30 K" in found.note
+    with pytest.raises(InputError, match="no value"):
+        reference_star(reference, interpolator.grid, parameters=REFERENCE, options=WIDE, parameter_errors={"vmic": 0.1})
+    with pytest.raises(InputError, match="must not be negative"):
+        reference_star(
+            reference, interpolator.grid, parameters=REFERENCE, options=WIDE, parameter_errors={"teff": -1.0}
+        )
