@@ -215,7 +215,7 @@ def measure_safely(task: Task) -> Measured:
         import logging
 
         logging.getLogger(__name__).info("%s", task.path, exc_info=True)
-        words = f"{task.path}: unexpected {type(error).__name__}: {error}"
+        words = f"{task.path}: unexpected {type(error).__name__}: {' '.join(str(error).split())}"
         return Measured(path=task.path, star=name, error=SpectrumError(words, path=task.path))
 
 

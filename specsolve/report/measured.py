@@ -11,7 +11,7 @@ import numpy as np
 
 from specsolve.report.tables import make_table, plain, write_table
 from specsolve.schema import SCHEMA, columns_of
-from specsolve.spectrum.types import FLAG_UPPER_LIMIT, FLAG_WORDS, words_of_flags
+from specsolve.spectrum.types import FLAG_NOT_COVERED, FLAG_UPPER_LIMIT, FLAG_WORDS, words_of_flags
 
 if TYPE_CHECKING:
     from astropy.table import Table
@@ -23,7 +23,7 @@ MEASURED, FAILED = "measured", "failed"
 
 
 def line_rows(one: Measured) -> dict[str, np.ndarray]:
-    """The rows of one spectrum in the table of widths, as columns; empty if it failed."""
+    """The rows of one spectrum in the table of widths, as columns: the lines that it covers; empty if it failed."""
     found = one.measurements
     names = [column.name for column in columns_of("measurements")]
     if found is None:
@@ -33,7 +33,8 @@ def line_rows(one: Measured) -> dict[str, np.ndarray]:
         "flags": np.array([words_of_flags(bits) for bits in found.flags.tolist()], dtype=str),
         "reduced_chi2": found.chi2,
     }
-    return {name: special[name] if name in special else np.asarray(getattr(found, name)) for name in names}
+    covered = (found.flags & FLAG_NOT_COVERED) == 0
+    return {name: (special[name] if name in special else np.asarray(getattr(found, name)))[covered] for name in names}
 
 
 def spectrum_row(one: Measured) -> dict[str, Any]:

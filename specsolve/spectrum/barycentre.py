@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import warnings
 from collections.abc import Mapping
+from contextlib import ExitStack
 from typing import Any
 
 LATITUDE_KEYS = ("OBS-LAT", "LAT-OBS", "ESO TEL GEOLAT", "GEOLAT", "SITELAT")
@@ -42,19 +43,24 @@ def correction(header: Mapping[str, Any]) -> tuple[float, str]:
     from astropy.utils import iers
 
     nan = float("nan")
-    try:
-        place, time, star = _place(upper), _time(upper), _coordinates(upper)
-    except (ValueError, TypeError) as error:
-        return nan, f"no barycentric correction: the header cannot be understood ({error})"
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")  # dates to come are "dubious" to the library
+        try:
+            place, time, star = _place(upper), _time(upper), _coordinates(upper)
+        except (ValueError, TypeError) as error:
+            words = " ".join(str(error).split())
+            return nan, f"no barycentric correction: the header cannot be understood ({words})"
     missing = [name for name, value in (("place", place), ("time", time), ("RA and DEC", star)) if value is None]
     if missing:
         return nan, f"no barycentric correction: the header lacks {', '.join(missing)}"
     exposure = upper.get("EXPTIME", 0.0)
-    with warnings.catch_warnings(), iers.conf.set_temp("auto_download", False):
+    offline = {"auto_download": False, "auto_max_age": None, "iers_degraded_accuracy": "ignore"}
+    with warnings.catch_warnings(), ExitStack() as settings:
         warnings.simplefilter("ignore")  # rotation of the Earth to 1 s is good to 1 cm/s
-        with iers.conf.set_temp("iers_degraded_accuracy", "ignore"):
-            middle = time + TimeDelta(0.5 * float(exposure or 0.0) * u.s)
-            value = SkyCoord(*star, unit="deg").radial_velocity_correction(obstime=middle, location=place)
+        for name, value in offline.items():
+            settings.enter_context(iers.conf.set_temp(name, value))
+        middle = time + TimeDelta(0.5 * float(exposure or 0.0) * u.s)
+        value = SkyCoord(*star, unit="deg").radial_velocity_correction(obstime=middle, location=place)
     said = "" if system == "TOPOCENT" else "; the header does not say so, but observed wavelengths are taken"
     return float(value.to_value("km/s")), f"from place, middle of the exposure and coordinates in the header{said}"
 

@@ -139,8 +139,9 @@ def assemble(raw: Raw, path: str | Path, options: ReadOptions) -> Spectrum:
     if options.normalised and not is_normalised(flux, mask, order):
         notes.append("said to be normalised, but its upper envelope is not near 1: the continuum is fitted freely")
         normalised = False
-    sigma, mask, sigma_source, correlation = _errors(pieces, flux, mask, order, path, options, notes)
     power = options.resolving_power if options.resolving_power else resolving_power(raw.header)
+    per_fwhm = [pixels_per_fwhm(piece.wavelength, power) for piece in pieces]
+    sigma, mask, sigma_source, correlation = _errors(pieces, flux, mask, order, per_fwhm, path, options, notes)
     spectrum = Spectrum(
         star=options.star or star_of(path),
         wavelength_air=wavelength,
@@ -196,6 +197,17 @@ def resolving_power(header: Mapping[str, Any]) -> float:
         if RESOLVING_LIMITS[0] <= number <= RESOLVING_LIMITS[1]:
             return number
     return float("nan")
+
+
+def pixels_per_fwhm(wavelength: np.ndarray, power: float) -> float:
+    """Pixels in the width of the instrument's profile at the middle of an order; nan if the resolving power is.
+
+    Examples
+    --------
+    >>> round(pixels_per_fwhm(np.arange(5000.0, 5100.0, 0.02), 50000.0), 2)
+    5.05
+    """
+    return float(np.median(wavelength) / power / np.median(np.diff(wavelength)))
 
 
 def is_normalised(flux: np.ndarray, mask: np.ndarray, order: np.ndarray) -> bool:
@@ -353,6 +365,7 @@ def _errors(
     flux: np.ndarray,
     mask: np.ndarray,
     order: np.ndarray,
+    per_fwhm: list[float],
     path: str | Path,
     options: ReadOptions,
     notes: list[str],
@@ -361,7 +374,7 @@ def _errors(
     estimates, factors = np.full(flux.size, np.nan), []
     for number in np.unique(order):
         of = order == number
-        estimates[of], factor = estimate_noise(flux[of], mask[of])
+        estimates[of], factor = estimate_noise(flux[of], mask[of], per_fwhm[number])
         factors.append(factor)
     correlation = float(np.median(factors))
     if correlation > 1.2:

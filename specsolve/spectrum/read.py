@@ -105,7 +105,7 @@ def _read_fits(path: Path, options: ReadOptions) -> Raw:
             shape = unit.data.shape
             header.update(plain_header(unit.header))
             sigma = _sigma_unit(units, max(shape))
-            row = _one_row(unit) if len(shape) > 1 else None
+            row = _one_row(unit)
     except SpectrumError:
         raise
     except Exception as error:  # a damaged file makes astropy raise whatever it meets
@@ -148,7 +148,7 @@ def _sigma_unit(units: Any, n_pixels: int) -> np.ndarray | None:
 
 
 def _one_row(unit: Any) -> Any:
-    """An image with axes of one pixel as one of one axis."""
+    """The image alone, axes of one pixel dropped: specutils stumbles over names of extensions that it does not know."""
     from astropy.io import fits
 
     header = unit.header.copy()
@@ -166,7 +166,10 @@ def _read_image(path: Path, header: dict[str, Any], n_pixels: int, row: Any, sig
     unit: str | None = str(found.spectral_axis.unit)
     stated = str(header.get("CUNIT1", "")).strip()
     if stated and stated != unit and not stated.lower().startswith("log"):
-        axis, unit = np.asarray(found.spectral_axis.to_value(stated), float).ravel(), stated
+        try:
+            axis, unit = np.asarray(found.spectral_axis.to_value(stated), float).ravel(), stated
+        except (ValueError, TypeError) as error:
+            raise SpectrumError(f"{path}: CUNIT1 = '{stated}' is not a unit of length.", path=path) from error
     flux = np.asarray(found.flux.value, float).ravel()
     if flux.size != n_pixels or axis.size != n_pixels:
         raise SpectrumError(f"{path}: {flux.size} flux values for {axis.size} wavelengths.", path=path)

@@ -93,6 +93,16 @@ def test_what_the_user_says_goes_before_the_header(tmp_path, truth):
     assert read_spectrum(path).resolving_power == 48000.0
 
 
+@pytest.mark.parametrize(("name", "power"), [("ERR", 1), ("SIGMA", 1), ("IVAR", -2)])
+def test_errors_in_an_extension(tmp_path, truth, name, power):
+    primary = fits.PrimaryHDU(truth[1])
+    primary.header.update(LINEAR)
+    fits.HDUList([primary, fits.ImageHDU(np.full(N, NOISE) ** power, name=name)]).writeto(tmp_path / "e.fits")
+    found = read_spectrum(tmp_path / "e.fits")
+    assert np.allclose(found.sigma, NOISE)
+    assert found.sigma_source == "file"
+
+
 def table_of(truth, **columns):
     wave, flux = truth
     return Table({"wavelength": wave * u.AA, "flux": flux, "uncertainty": np.full(N, NOISE), **columns})
@@ -217,9 +227,19 @@ def test_noise_of_independent_and_of_interpolated_pixels(rng):
     assert np.median(sigma) == pytest.approx(NOISE, rel=0.05)
     assert correlation == 1.0
     fine = np.interp(np.arange(0.0, 7999.0, 0.4), np.arange(8000), coarse)
-    sigma, correlation = estimate_noise(fine, np.zeros(fine.size, bool))
+    sigma, correlation = estimate_noise(fine, np.zeros(fine.size, bool), 15.0)
     assert np.median(sigma) == pytest.approx(0.82 * NOISE, rel=0.1)
     assert correlation == pytest.approx(3.7, rel=0.25)
+
+
+def test_lines_are_not_taken_for_correlation(rng):
+    """Three pixels a resolution element, dense lines, independent noise."""
+    from tests.spectrum.made_up_spectra import made_up
+
+    one = made_up(rng, low=5000.0, high=5400.0, n_unlisted=400, signal_to_noise=150.0)
+    sigma, correlation = estimate_noise(one.flux, one.mask, 3.0)
+    assert correlation == 1.0
+    assert np.median(sigma) == pytest.approx(1.0 / 150.0, rel=0.1)
 
 
 def test_nothing_of_specutils_is_imported_by_the_package():
