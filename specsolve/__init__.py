@@ -25,6 +25,9 @@ _HOMES = {
     "LineList": "specsolve.lines",
     "AtmosphereStore": "specsolve.atmosphere.store",
     "ResponseGrid": "specsolve.grid.store",
+    "crosscheck": "specsolve.uses.crosscheck",
+    "cluster": "specsolve.uses.cluster",
+    "rehearse": "specsolve.uses.rehearsal",
     "SpecsolveError": "specsolve.errors",
 }
 

@@ -171,7 +171,7 @@ REHEARSAL = (
     Column("point", TEXT, "", "name of the point"),
     Column("truth_treatment", TEXT, "", "line formation that made the widths"),
     Column("treatment", TEXT, "", "line formation of the analysis"),
-    Column("status", TEXT, "", "rehearsed, outside_grid, missing_node or too_few_lines"),
+    Column("status", TEXT, "", "rehearsed, outside_grid, missing_node, no_vmic or too_few_lines"),
     Column("reason", TEXT, "", "why it could not be rehearsed"),
     *_each("{}", "true {}"),
     Column("signal_to_noise", REAL, "", "per pixel; nan for an error law"),

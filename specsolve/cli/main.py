@@ -20,10 +20,15 @@ COMMANDS = {
     "solve": ("specsolve.cli.solve", "Teff, log g, [Fe/H] and microturbulence from tables of equivalent widths."),
     "measure": ("specsolve.cli.measure", "Equivalent widths of a line list in spectra."),
     "run": ("specsolve.cli.run", "Measure spectra and solve their widths at once."),
+    "crosscheck": ("specsolve.cli.crosscheck", "Why published values differ from mine."),
+    "cluster": ("specsolve.cli.cluster", "Members of a cluster, ready for age fitting."),
+    "rehearse": ("specsolve.cli.rehearse", "What an observation would give."),
     "check": ("specsolve.cli.check", "Dry run: what of a table would be used, and what is wrong with it."),
     "again": ("specsolve.cli.again", "Repeat a solve from its own output files."),
     "columns": ("specsolve.cli.columns", "Explain the columns of the tables read and written."),
     "grid": ("specsolve.cli.grid", "Build, check and describe response grids."),
+    "correction": ("specsolve.cli.correction", "NLTE minus LTE abundance of lines."),
+    "departures": ("specsolve.cli.departures", "Build and describe departures from LTE."),
     "atmosphere": ("specsolve.cli.atmosphere", "Build, show and import model atmospheres."),
 }
 
