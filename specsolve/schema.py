@@ -189,6 +189,27 @@ DECISIONS = (
     Column("reason", TEXT, "", "one sentence"),
 )
 
+DIFFERENCES = (
+    Column("star", TEXT, "", "name of the star"),
+    Column("lte_status", TEXT, "", "status of the LTE row"),
+    Column("nlte_status", TEXT, "", "status of the NLTE row"),
+    *(
+        item
+        for name, unit, words in PARAMETERS
+        for item in (
+            Column(f"{name}_difference", REAL, unit, f"{words}: NLTE minus LTE"),
+            Column(f"{name}_difference_error", REAL, unit, "its error from the lines, which are the same in both"),
+        )
+    ),
+    *(
+        Column(f"{name}_difference", REAL, unit, f"{words}: NLTE minus LTE, each at its own parameters")
+        for name, unit, words in RESIDUALS
+    ),
+    Column("fe1_abundance_difference", REAL, "dex", "mean A(Fe) of Fe I: NLTE minus LTE, each at its own parameters"),
+    Column("fe2_abundance_difference", REAL, "dex", "mean A(Fe) of Fe II: NLTE minus LTE, each at its own parameters"),
+    Column("n_common_lines", COUNT, "", "lines with weight in both"),
+)
+
 INPUT = (
     Column("star", TEXT, "", "name of the star (optional; one star if absent)"),
     Column("wavelength_air", REAL, "Angstrom", "wavelength in air"),
@@ -297,20 +318,44 @@ SPECTRA = (
     Column("notes", TEXT, "", "what was decided on the way"),
 )
 
+SAMPLES = (
+    *STAR_KEY,
+    Column("sample", COUNT, "", "number of the sample"),
+    Column("candidate", COUNT, "", "the candidate that it belongs to, as in the candidates table"),
+    *(Column(name, REAL, unit, words) for name, unit, words in PARAMETERS),
+    Column("log_density", REAL, "", "ln of the density about the own candidate; 0 at the candidate"),
+)
+
+MAP = (
+    *STAR_KEY,
+    Column("teff", REAL, "K", "effective temperature of the point"),
+    Column("logg", REAL, "dex", "gravity of the point"),
+    Column("objective", REAL, "", "sum of squares of whitened residuals and outside terms, least over feh and vmic"),
+    Column("feh", REAL, "dex", "[Fe/H] where it is least"),
+    Column("vmic", REAL, "km / s", "microturbulence where it is least"),
+    Column("excitation_slope", REAL, "dex / eV", "slope of A(Fe I) against excitation potential that stays there"),
+    Column("ionization_offset", REAL, "dex", "mean A(Fe I) - mean A(Fe II) that stays there"),
+)
+
 TABLES: dict[str, tuple[Column, ...]] = {
     "stars": STARS,
     "lines": LINES,
     "candidates": CANDIDATES,
     "decisions": DECISIONS,
+    "differences": DIFFERENCES,
     "input": INPUT,
     "outside": OUTSIDE,
     "truth": TRUTH,
     "measurements": MEASUREMENTS,
     "spectra": SPECTRA,
+    "samples": SAMPLES,
+    "map": MAP,
     **TABLES_OF_USES,
 }
 
 FILE_ENDINGS = {"stars": "", "lines": "_lines", "candidates": "_candidates", "decisions": "_decisions"}
+
+EXTRA_ENDINGS = {"samples": "_samples", "map": "_map"}  # written where they were asked for
 
 
 def columns_of(kind: str) -> tuple[Column, ...]:

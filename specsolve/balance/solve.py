@@ -23,7 +23,7 @@ from .problem import Problem
 from .solution import PARAMETER_NAMES, PARAMETER_UNITS, Solution
 from .star import Star
 from .systematics import systematic_shifts
-from .tiebreak import rank
+from .tiebreak import Ranking, rank
 from .zero_points import ZeroPoints
 
 if TYPE_CHECKING:
@@ -40,7 +40,7 @@ def solve(
     source: Star | Iterable[Star] | str | Path | Table,
     grid: ResponseGrid | str | Path | None = None,
     *,
-    treatment: str = "lte",
+    treatment: str | None = None,
     reference: str | Star | None = None,
     reference_parameters: Mapping[str, Any] | None = None,
     reference_errors: Mapping[str, Any] | None = None,
@@ -60,8 +60,8 @@ def solve(
         Measured lines. A path is read as ECSV, CSV, FITS or VOTable, with one star or many.
     grid : ResponseGrid or path, optional
         The packaged grid by default.
-    treatment : str
-        One of the grid's treatments.
+    treatment : str, optional
+        One of the grid's treatments; "nlte" where the grid has it by default.
     reference : str or Star, optional
         Reference star for differential work: a name in `source` (then left out of the result's list), "Sun" for the
         packaged solar
@@ -107,6 +107,7 @@ def solve(
     else:
         stars, single = _stars(source, columns, ions), False
     grid = open_grid(grid)
+    treatment = treatment or grid.default_treatment
     if treatment not in grid.treatments:
         raise UsageError(f"treatment '{treatment}' is not in the grid; it has {', '.join(grid.treatments)}.")
     options = options or Options()
@@ -159,7 +160,25 @@ def solve_problem(problem: Problem, sun: SolarLines | None = None) -> Solution:
     ranking = rank(problem, result)
     solution = solved(problem, result, ranking, sun)
     shifts, alternatives = systematic_shifts(problem, ranking.found[0], other_fe2_scale(problem, solution.parameters))
-    return dataclasses.replace(solution, systematics=shifts, alternative_parameters=alternatives)
+    solution = dataclasses.replace(solution, systematics=shifts, alternative_parameters=alternatives)
+    return with_extras(problem, ranking, solution)
+
+
+def with_extras(problem: Problem, ranking: Ranking, solution: Solution) -> Solution:
+    """Samples and map, where the options ask for them."""
+    options = problem.options
+    if options.samples:
+        from .samples import joint_samples
+
+        own_stream = np.random.default_rng([options.seed, int(problem.star.identity[:16], 16)])
+        samples = joint_samples(problem, ranking.candidates, ranking.found, options.samples, own_stream)
+        solution = dataclasses.replace(solution, samples=samples)
+    if options.objective_map and {0, 1} <= set(problem.free.tolist()):
+        from .objective_map import objective_map
+
+        chart = objective_map(problem, ranking.found[0], ranking.candidates)
+        solution = dataclasses.replace(solution, objective_map=chart)
+    return solution
 
 
 def other_fe2_scale(problem: Problem, start: np.ndarray) -> np.ndarray | None:

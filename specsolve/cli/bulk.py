@@ -111,16 +111,46 @@ def _cluster(address: str) -> Iterator[Executor]:
         client.close()
 
 
-def run_key(arguments: Mapping[str, Any], stars: Sequence[Star], setting: Setting, grid: Any) -> str:
+@dataclass(frozen=True)
+class Run:
+    """One treatment of all stars.
+
+    Attributes
+    ----------
+    setting : Setting
+    first : tuple of Solution
+        Rows before all others: the reference star.
+    """
+
+    setting: Setting
+    first: tuple[Solution, ...] = ()
+
+
+def stream(
+    stars: Sequence[Star], grid: Any, runs: Sequence[Run], *, executor: Executor | None,
+    places: Sequence[int] | None = None, then: Callable[[Solution], Any] | None = None,
+) -> Iterator[tuple[int, Any]]:  # fmt: skip
+    """(place, Solution) of all stars in all runs; the places of a star's runs follow each other."""
+    from specsolve.balance.batch import solve_stream
+
+    n = len(runs)
+    wanted = range(len(stars) * n) if places is None else places
+    for k, run in enumerate(runs):
+        own = [place // n for place in wanted if place % n == k]
+        for place, found in solve_stream(stars, grid, run.setting, executor=executor, places=own, then=then):
+            yield place * n + k, found
+
+
+def run_key(arguments: Mapping[str, Any], stars: Sequence[Star], runs: Sequence[Run], grid: Any) -> str:
     """What a journal is named by: configuration, input, zero points, grid and program."""
     from specsolve import __version__
     from specsolve.atmosphere.build import sources_hash
 
-    zero = setting.zero_points
+    zeros = [run.setting.zero_points for run in runs]
     parts = [
         arguments,
         [(star.name, star.identity) for star in stars],
-        [zero.keys, zero.values.tolist(), None if zero.covariance is None else zero.covariance.tolist()],
+        [[z.keys, z.values.tolist(), None if z.covariance is None else z.covariance.tolist()] for z in zeros],
         grid.identity,
         [__version__, sources_hash(DECIDING)],
     ]
@@ -131,8 +161,7 @@ def solve_to_files(
     settings: Settings,
     stars: Sequence[Star],
     grid: Any,
-    setting: Setting,
-    first: Sequence[Solution],
+    runs: Sequence[Run],
     request: Any,
     provenance: Mapping[str, Any],
 ) -> Outcome:
@@ -141,44 +170,46 @@ def solve_to_files(
     Parameters
     ----------
     settings : Settings
-    stars, grid, setting
+    stars, grid
         As for `specsolve.balance.batch.solve_stream`.
-    first : sequence of Solution
-        Rows before all others: the reference star.
+    runs : sequence of Run
     request : specsolve.cli.solve.Request
     provenance : mapping
     """
-    from specsolve.balance.batch import solve_stream
     from specsolve.cli.progress import counting
+    from specsolve.report.differences import write_differences
     from specsolve.report.journal import Journal
     from specsolve.report.rows import record_of
 
     interrupted = False
-    with Journal(request.output, run_key(request.arguments(), stars, setting, grid)) as journal:
-        left = [place for place in range(len(stars)) if place not in journal.status]
-        if len(left) < len(stars):
-            settings.say(f"{journal.path}: {len(stars) - len(left)} of {len(stars)} stars are finished, going on")
+    with Journal(request.output, run_key(request.arguments(), stars, runs, grid)) as journal:
+        total = len(stars) * len(runs)
+        left = [place for place in range(total) if place not in journal.status]
+        if len(left) < total:
+            settings.say(f"{journal.path}: {total - len(left)} of {total} stars are finished, going on")
         try:
             with (
                 executor_for(request.workers, request.scheduler) as executor,
-                counting("stars", quiet=settings.verbosity < 0, done=len(stars) - len(left)) as progress,
+                counting("stars", quiet=settings.verbosity < 0, done=total - len(left)) as progress,
             ):
-                stream = solve_stream(stars, grid, setting, executor=executor, places=left, then=record_of)
-                _keep(stream, journal, lambda: progress and progress(len(journal.status), len(stars)))
+                found = stream(stars, grid, runs, executor=executor, places=left, then=record_of)
+                _keep(found, journal, lambda: progress and progress(len(journal.status), total))
         except KeyboardInterrupt:
             interrupted = True
-        paths = journal.write_tables(provenance, [record_of(one) for one in first])
+        paths = journal.write_tables(provenance, [record_of(one) for run in runs for one in run.first])
+        if len(runs) > 1:
+            paths["differences"] = write_differences(request.output, provenance)
         settings.say("wrote " + ", ".join(str(path) for path in paths.values()))
         if not interrupted:
             journal.remove()
-        return Outcome(dict(journal.status), interrupted, len(stars))
+        return Outcome(dict(journal.status), interrupted, total)
 
 
-def _keep(stream: Iterator[tuple[int, Any]], journal: Any, told: Callable[[], Any]) -> None:
+def _keep(found: Iterator[tuple[int, Any]], journal: Any, told: Callable[[], Any]) -> None:
     """Append what the stream gives to the journal, at least every `FLUSH_S`; also what is at hand when it breaks."""
     waiting, since = [], time.monotonic()
     try:
-        for item in stream:
+        for item in found:
             waiting.append(item)
             if time.monotonic() - since > FLUSH_S:
                 journal.append(waiting)

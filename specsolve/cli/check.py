@@ -14,7 +14,7 @@ from specsolve.cli import parsing
 from specsolve.cli.inputs import coverage, coverage_message, read_inputs
 from specsolve.cli.settings import Settings, common_options
 from specsolve.cli.solve import input_options
-from specsolve.errors import EXIT_SOLVED, EXIT_UNSOLVED, UsageError
+from specsolve.errors import EXIT_SOLVED, EXIT_UNSOLVED
 from specsolve.schema import SCHEMA
 
 if TYPE_CHECKING:
@@ -31,7 +31,7 @@ def check(
     settings: Settings,
     tables: tuple[str, ...],
     grid_path: str | None,
-    treatment: str,
+    treatment: str | None,
     columns: Sequence[str],
     ions: Sequence[str],
     units: Sequence[str],
@@ -57,8 +57,7 @@ def check(
     from specsolve.balance.solve import open_grid
 
     grid = open_grid(grid_path)
-    if treatment not in grid.treatments:
-        raise UsageError(f"treatment '{treatment}' is not in the grid; it has {', '.join(grid.treatments)}")
+    treatment = grid.treatments_asked(treatment)[-1]  # the cuts of both hardly differ
     options = Options(**parsing.cuts(cuts))
     reports = []
     for name, stars in inputs.files:

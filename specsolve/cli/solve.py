@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import sys
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -27,7 +27,6 @@ from specsolve.cli.settings import Settings, common_options, wants_colour
 from specsolve.errors import EXIT_INTERRUPTED, EXIT_SOLVED, EXIT_UNSOLVED, InputError, UsageError
 
 if TYPE_CHECKING:
-    from specsolve.balance.batch import Setting
     from specsolve.balance.solution import Solution
     from specsolve.balance.star import Star
 
@@ -42,7 +41,9 @@ class Request:
 
     Attributes
     ----------
-    treatment, loss : str
+    treatment : str or None
+        lte, nlte or both; None for the grid's default.
+    loss : str
     columns, ions, units : dict
         Headings, spellings and units of the tables.
     limits : dict
@@ -65,11 +66,15 @@ class Request:
         Table of what is known of each star.
     wanted : tuple of str
         Names of stars; empty for all.
-    grid_path, output, plots, plot_format, sheets, workers, scheduler, seed
+    grid_path, output, plots, plot_format, sheets, workers, scheduler
         Where things come from and go to.
+    samples : int
+        Joint samples a star.
+    seed : int or None
+        Of the samples.
     """
 
-    treatment: str = "lte"
+    treatment: str | None = None
     loss: str = "huber"
     columns: Mapping[str, str] = field(default_factory=dict)
     ions: Mapping[str, str] = field(default_factory=dict)
@@ -92,6 +97,7 @@ class Request:
     sheets: bool | None = None
     workers: int = 1
     scheduler: str | None = None
+    samples: int = 0
     seed: int | None = None
 
     def arguments(self) -> dict[str, Any]:
@@ -112,6 +118,8 @@ class Request:
             "colour_scale": self.colour_scale,
             "alpha": self.alpha,
             "stars": list(self.wanted),
+            "samples": self.samples,
+            "seed": self.seed,
         }
 
     @classmethod
@@ -129,6 +137,8 @@ class Request:
             alpha=arguments["alpha"],
             fix=arguments["fix"],
             known={name: tuple(pair) for name, pair in arguments["known"].items()},
+            samples=arguments.get("samples", 0),
+            seed=arguments.get("seed"),
             **delivery,
         )
 
@@ -147,7 +157,11 @@ def input_options(function: Any) -> Any:
         click.option("--unit", "units", multiple=True, metavar="OURS=UNIT", help="Unit of a column without one."),
         click.option("--ion", "ions", multiple=True, metavar='THEIRS="Fe I"', help="Another spelling of an ion."),
         click.option("--column", "columns", multiple=True, metavar="OURS=THEIRS", help="Another column heading."),
-        click.option("--treatment", default="lte", show_default=True, help="Line formation; the grid must have it."),
+        click.option(
+            "--treatment",
+            type=click.Choice(["lte", "nlte", "both"]),
+            help="Line formation; both gives a row each and the differences. Default: nlte if the grid has it.",
+        ),
         click.option("--grid", "grid_path", metavar="DIR", help="A response grid of your own."),
     ):
         function = option(function)
@@ -196,7 +210,10 @@ def delivery_options(function: Any) -> Any:
 @click.option("--star", "wanted", multiple=True, metavar="STAR", help="Only this star (may be repeated).")
 @click.option("--workers", type=click.IntRange(1), default=1, show_default=True, help="Processes, for many stars.")
 @click.option("--scheduler", metavar="ADDRESS", help="Let the workers of a dask.distributed scheduler do it.")
-@click.option("--seed", type=int, hidden=True, help="Kept in the output; this analysis draws no random numbers.")
+@click.option(
+    "--samples", type=click.IntRange(0), default=0, metavar="N", help="Also N joint samples a star, FILE_samples.ecsv."
+)
+@click.option("--seed", type=click.IntRange(0), help="Of the samples; nothing else is random.")
 @common_options()
 def solve(settings: Settings, tables: tuple[str, ...], **chosen: Any) -> int:
     """Teff, log g, [Fe/H] and microturbulence of the stars in one or more tables of equivalent widths.
@@ -226,6 +243,8 @@ def solve(settings: Settings, tables: tuple[str, ...], **chosen: Any) -> int:
         **chosen,
     )
     parsing.disjoint(request.fix, request.known)
+    if request.samples and (settings.json or request.output in (None, STDOUT)):
+        raise UsageError("--samples needs --output: the samples are a table of their own")
     if request.at and request.reference is None:
         raise UsageError("--reference-parameters needs --reference")
     if request.scheduler is not None and request.workers != 1:
@@ -272,6 +291,8 @@ def carry_out(
         settings.warn(
             f"specsolve: this grid ({grid.identity[:12]}) is not that of the first run ({grid_identity[:12]})"
         )
+    treatments = grid.treatments_asked(request.treatment)
+    request = replace(request, treatment="both" if len(treatments) > 1 else treatments[0])
     settings.detail(f"grid {grid.directory}: {len(grid.lines)} lines, {grid.description}, identity {grid.identity}")
     for name, of_file in inputs.files:
         settings.say(f"{name}: {coverage_message(name, coverage(of_file, grid), grid)}")
@@ -287,15 +308,26 @@ def carry_out(
             "description": grid.description,
         },
     )
-    stars, setting, first = prepare(stars, grid, request, Options(loss=request.loss, **request.limits))
+    options = Options(
+        loss=request.loss,
+        samples=request.samples,
+        seed=request.seed or 0,
+        objective_map=request.plots is not None,
+        **request.limits,
+    )
+    runs = []
+    for name in treatments:
+        others, setting, first = prepare(stars, grid, replace(request, treatment=name), options)
+        runs.append(bulk.Run(setting, tuple(first)))
+    stars = others
     if any(star.known for star in stars):
         settings.say(said(stars))
     if streams(settings, request, len(stars)):
-        outcome = bulk.solve_to_files(settings, stars, grid, setting, first, request, provenance)
+        outcome = bulk.solve_to_files(settings, stars, grid, runs, request, provenance)
         click.echo(outcome.summary())
         status = list(outcome.status.values())
     else:
-        solutions, outcome = solve_all(settings, stars, grid, setting, first, request)
+        solutions, outcome = solve_all(settings, stars, grid, runs, request)
         solutions = [solution.with_provenance(provenance) for solution in solutions]
         deliver(settings, solutions, provenance, request)
         status = [(one.star, one.status, one.reason) for one in solutions]
@@ -316,7 +348,7 @@ def streams(settings: Settings, request: Request, n_stars: int) -> bool:
     return (
         request.output not in (None, STDOUT)
         and n_stars >= bulk.JOURNAL_FROM
-        and not (settings.json or request.plots is not None or request.sheets)
+        and not (settings.json or request.plots is not None or request.sheets or request.samples)
     )
 
 
@@ -333,36 +365,37 @@ def chosen_stars(inputs: Inputs, wanted: Sequence[str], reference: str | None) -
 
 
 def solve_all(
-    settings: Settings, stars: list[Star], grid: Any, setting: Setting, first: list[Solution], request: Request
+    settings: Settings, stars: list[Star], grid: Any, runs: Sequence[bulk.Run], request: Request
 ) -> tuple[list[Solution], bulk.Outcome]:
     """Solve the stars in memory; on Ctrl-C the finished ones are kept.
 
     Returns
     -------
     solutions : list of Solution
-        `first`, then those of the stars in the order of the input.
+        Those of reference stars, then those of the stars in the order of the input, treatments beside each other.
     outcome : Outcome
     """
-    from specsolve.balance.batch import solve_stream
     from specsolve.cli.progress import counting
 
     done: dict[int, Solution] = {}
     interrupted = False
+    total = len(stars) * len(runs)
     try:
         with (
             bulk.executor_for(request.workers, request.scheduler) as executor,
-            counting("stars", quiet=settings.verbosity < 0 or len(stars) < 3) as progress,
+            counting("stars", quiet=settings.verbosity < 0 or total < 3) as progress,
         ):
-            for place, solution in solve_stream(stars, grid, setting, executor=executor):
+            for place, solution in bulk.stream(stars, grid, runs, executor=executor):
                 done[place] = solution
                 settings.detail(f"{solution.star}: {solution.status}, {len(solution.candidates)} minima")
                 if progress:
-                    progress(len(done), len(stars))
+                    progress(len(done), total)
     except KeyboardInterrupt:
         interrupted = True
+    first = [one for run in runs for one in run.first]
     solutions = first + [done[place] for place in sorted(done)]
     status = {place: (one.star, one.status, one.reason) for place, one in enumerate(solutions)}
-    return solutions, bulk.Outcome(status, interrupted, len(first) + len(stars))
+    return solutions, bulk.Outcome(status, interrupted, len(first) + total)
 
 
 def prepare(stars: list[Star], grid: Any, request: Request, options: Any) -> tuple[list[Star], Any, list[Solution]]:
@@ -370,13 +403,9 @@ def prepare(stars: list[Star], grid: Any, request: Request, options: Any) -> tup
 
     Raises
     ------
-    UsageError
-        If the grid lacks the treatment.
     InputError
         If the reference star is not in the tables, or its parameters are not known.
     """
-    from dataclasses import replace
-
     from specsolve.balance.batch import Setting, solve_star
     from specsolve.balance.differential import reference_star
     from specsolve.balance.outside_known import ALPHA
@@ -384,8 +413,6 @@ def prepare(stars: list[Star], grid: Any, request: Request, options: Any) -> tup
     from specsolve.balance.solution import PARAMETER_NAMES
     from specsolve.balance.solve import fixed_outside
 
-    if request.treatment not in grid.treatments:
-        raise UsageError(f"treatment '{request.treatment}' is not in the grid; it has {', '.join(grid.treatments)}")
     shared = {"treatment": request.treatment, "options": options}
     setting = Setting(**shared, known=known_of_all(request), sun=solar_lines(grid, request.treatment, options))
     chosen = reference_of(stars, request)
@@ -430,22 +457,34 @@ def reference_of(stars: list[Star], request: Request) -> Star | None:
 
 def deliver(settings: Settings, solutions: Sequence[Solution], provenance: Mapping[str, Any], request: Request) -> None:
     """Write tables and figures, print sheets or JSON."""
-    from specsolve.report import tables
+    from specsolve.report import differences, tables
+    from specsolve.report.extras import write_extras
 
     if request.output == STDOUT:
         tables.tables_of(solutions, provenance)["stars"].write(sys.stdout, format="ascii.ecsv", delimiter=",")
     elif settings.json:
-        click.echo(json.dumps(tables.to_json(solutions, provenance), indent=1, allow_nan=False))
+        content = tables.to_json(solutions, provenance)
+        if request.treatment == "both":
+            content["differences"] = differences.rows_for_json(solutions)
+        click.echo(json.dumps(content, indent=1, allow_nan=False))
     else:
         print_sheets(solutions, True if request.sheets is None and settings.verbosity > 0 else request.sheets)
+        if request.treatment == "both":
+            click.echo("\n".join(differences.words(solutions)))
     if request.output not in (None, STDOUT) and solutions:
         paths = tables.write_solutions(solutions, request.output, provenance)
+        if request.treatment == "both":
+            paths["differences"] = differences.write_differences(request.output, provenance)
+        paths |= write_extras(solutions, request.output, provenance)
         settings.say("wrote " + ", ".join(str(path) for path in paths.values()))
     if request.plots is not None:
         from specsolve.report.figures import save_pages
+        from specsolve.report.objective_map import save_maps
 
         pages = save_pages(solutions, Path(request.plots), request.plot_format)
-        settings.say(f"drew {len(pages)} page{'s' if len(pages) != 1 else ''} into {request.plots}")
+        maps = save_maps(solutions, request.plots, [path.stem for path in pages], request.plot_format)
+        drawn = f"{len(pages)} page{'s' if len(pages) != 1 else ''} and {len(maps)} map{'s' if len(maps) != 1 else ''}"
+        settings.say(f"drew {drawn} into {request.plots}")
 
 
 def print_sheets(solutions: Sequence[Solution], sheets: bool | None) -> None:

@@ -19,7 +19,7 @@ from typing import Any
 
 import numpy as np
 
-from specsolve.errors import StoreError
+from specsolve.errors import StoreError, UsageError
 from specsolve.grid.axes import Axis
 from specsolve.grid.codes import CODE_TYPE, MISSING
 from specsolve.grid.stencil import NodeStencils
@@ -130,6 +130,25 @@ class ResponseGrid:
     def treatments(self) -> tuple[str, ...]:
         """Names of the treatments, for example ("lte",)."""
         return tuple(self.header["treatments"])
+
+    @property
+    def default_treatment(self) -> str:
+        """"nlte" where the grid has it, else its first treatment."""
+        return "nlte" if "nlte" in self.treatments else self.treatments[0]
+
+    def treatments_asked(self, asked: str | None) -> tuple[str, ...]:
+        """Treatments that a user's word stands for: one, "both", or the default for None.
+
+        Raises
+        ------
+        UsageError
+            If the grid lacks one.
+        """
+        names = ("lte", "nlte") if asked == "both" else (asked or self.default_treatment,)
+        for name in names:
+            if name not in self.treatments:
+                raise UsageError(f"treatment '{name}' is not in the grid; it has {', '.join(self.treatments)}")
+        return names
 
     @property
     def atmospheres_identity(self) -> str:
