@@ -29,41 +29,6 @@ SAME_AXIS_DETERMINANT = 1e-6
 
 
 @njit(cache=True, nogil=True)
-def widths_on_curves(curves, dA, matrices, offsets):
-    """As `specsolve.grid.inversion.values_on_curves`; nan outside a curve."""
-    n_lines, n_nodes = curves.shape
-    out = np.full(n_lines, np.nan)
-    for line in range(n_lines):
-        first, end, start = 0, 0, 0
-        for node in range(n_nodes):
-            if not np.isfinite(curves[line, node]):
-                start = node + 1
-            elif node + 1 - start > end - first:
-                first, end = start, node + 1
-        offset = offsets[line]
-        if end - first < 2 or not (dA[first] <= offset <= dA[end - 1]):
-            continue
-        lower = first
-        for node in range(first, end - 1):
-            if dA[node] <= offset:
-                lower = node
-        gap = dA[lower + 1] - dA[lower]
-        m0, m1 = 0.0, 0.0
-        for k in range(first, end):
-            m0 += matrices[first, end, lower, k] * curves[line, k]
-            m1 += matrices[first, end, lower + 1, k] * curves[line, k]
-        t = (offset - dA[lower]) / gap
-        v0, v1 = curves[line, lower], curves[line, lower + 1]
-        out[line] = (
-            (1 + 2 * t) * (1 - t) ** 2 * v0
-            + t * t * (3 - 2 * t) * v1
-            + gap * t * (1 - t) ** 2 * m0
-            - gap * t * t * (1 - t) * m1
-        )
-    return out
-
-
-@njit(cache=True, nogil=True)
 def _plane_rows(ion_mask, chi, x, weights, rows):
     """Rows mean, excitation slope, strength slope of the weighted plane over the lines of a mask; nan where
     undefined.

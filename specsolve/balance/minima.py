@@ -8,9 +8,10 @@ import numpy as np
 
 from specsolve.errors import NotEnoughLinesError
 
+from .certificate import Certificate
 from .newton import STEP_UNIT, Minimum, refine
 from .problem import Problem, common_abundances
-from .scan import Scan, scan_nodes, seeds_from_scan
+from .scan import Scan, scan_nodes, starts_from_scan
 
 PRELIMINARY_MARGIN_DEX = 0.15  # how much wider the first cut, on measured widths, is than the one on predicted widths
 SAME_MINIMUM = 0.02  # ends closer than this in STEP_UNIT are one minimum: 5 K, 0.01 dex, 0.01 km/s
@@ -52,6 +53,7 @@ class Search:
     n_nodes, n_seeds, n_refined : int
     failures : tuple of str
         Why starting points led nowhere.
+    certificate : Certificate
     """
 
     found: tuple[FoundMinimum, ...]
@@ -60,6 +62,7 @@ class Search:
     n_seeds: int
     n_refined: int
     failures: tuple[str, ...] = field(default=())
+    certificate: Certificate = field(default_factory=Certificate)
 
 
 def preliminary_lines(problem: Problem) -> np.ndarray:
@@ -126,31 +129,54 @@ def search(problem: Problem) -> Search:
         message, counts = shortage(problem, preliminary)
         raise NotEnoughLinesError(message, counts=counts)
     scan: Scan = scan_nodes(problem, preliminary)
-    seeds = seeds_from_scan(problem, scan)
+    starts = starts_from_scan(problem, scan)
+    seeds = starts.seeds
     found: list[FoundMinimum] = []
     failures: list[str] = []
-    refined = 0
+    refined = failed = same = 0
     reached: list[tuple[np.ndarray, int]] = []  # ends of first refinements, and the candidate that each led to
     for seed in seeds[: problem.options.max_seeds]:
         rough = refine(problem, seed.theta, preliminary, rough=True)
         refined += 1
         if rough.state is None:
             failures.append(rough.failure)
+            failed += 1
             continue
         known = next((place for theta, place in reached if _same(theta, rough.theta)), None)
         if known is not None:
             found[known] = replace(found[known], seeds=found[known].seeds + seed.count)
+            same += 1
             continue
         minimum, allowed = finish(problem, rough, preliminary)
         for i, other in enumerate(found):
             if _same(minimum.theta, other.minimum.theta):
                 found[i] = replace(other, seeds=other.seeds + seed.count)
                 reached.append((rough.theta, i))
+                same += 1
                 break
         else:
             reached.append((rough.theta, len(found)))
             found.append(FoundMinimum(minimum, allowed, seed.count, minimum_flags(problem, minimum, preliminary)))
+    flags = [set(item.flags) for item in found]
+    certificate = Certificate(
+        n_nodes=scan.n_nodes,
+        n_blank=starts.n_blank,
+        n_cells=starts.n_cells,
+        n_partial=starts.n_partial,
+        n_kept=starts.n_kept,
+        n_landed=starts.n_landed,
+        n_lattice=starts.n_lattice,
+        n_starts=len(seeds),
+        n_refined=refined,
+        n_failed=failed,
+        n_same=same,
+        n_distinct=len(found),
+        n_edge=sum("at_grid_edge" in item for item in flags),
+        n_beside_missing=sum("beside_missing_node" in item for item in flags),
+        n_stopped=sum(bool(item & {"outside_grid", "stopped_by_missing_node"}) for item in flags),
+    )
     return Search(
+        certificate=certificate,
         found=tuple(found),
         preliminary=preliminary,
         n_nodes=scan.n_nodes,

@@ -12,10 +12,10 @@ import numpy as np
 from numba import njit
 
 from specsolve.constants import SOLAR_IRON
-from specsolve.grid.kernels import curves_in_cell, invert, locate
+from specsolve.grid.kernels import N_OUT, lines_in_cell, locate, place_of, widths_in_cell
 from specsolve.grid.node_table import BESIDE, EDGE, WHOLE
 
-from .kernel import project, settle_kernel, widths_on_curves
+from .kernel import project, settle_kernel
 from .steps import (
     LEVENBERG_START,
     MAX_HALVINGS,
@@ -80,11 +80,17 @@ class Inputs(NamedTuple):
 
 
 class State(NamedTuple):
-    """The balance at one theta, as `state.BalanceState`; `known` is false where no line has an abundance."""
+    """The balance at one theta, as `state.BalanceState`; `known` is false where no line has an abundance.
+
+    `guess`, `made`, `coefficients`, `span`: what `grid.kernels.lines_in_cell` made of the curves of growth.
+    """
 
     known: bool
     theta: np.ndarray
-    curves: np.ndarray
+    guess: np.ndarray
+    made: np.ndarray
+    coefficients: np.ndarray
+    span: np.ndarray
     abundance: np.ndarray
     d_theta: np.ndarray
     d_width: np.ndarray
@@ -111,46 +117,54 @@ def nowhere(n, n_dA):
     """A state that is not known."""
     one, two, both = np.zeros(n), np.zeros((4, n)), np.zeros((4, 4))
     return State(
-        False, np.zeros(4), np.zeros((n, n_dA)), one, np.zeros((n, 4)), one, one, np.zeros(n, dtype=np.uint8),
+        False, np.zeros(4), np.full(n, n_dA // 2), np.zeros((n, n_dA), dtype=np.bool_), np.zeros((n, n_dA, N_OUT)),
+        np.zeros((n, 2), dtype=np.int64), one, np.zeros((n, 4)), one, one, np.zeros(n, dtype=np.uint8),
         np.zeros(n, dtype=np.bool_), one, np.zeros(2), one, one, one, one, False, two, two, np.zeros(4), both, both, both,
     )  # fmt: skip
 
 
 @njit(cache=True, nogil=True)
-def line_abundances(table, inputs, theta):
-    """Curves of growth and line abundances at theta; nan in a cell with a missing corner."""
+def line_abundances(table, inputs, theta, cell, bits, guess, made, coefficients, span):
+    """Line abundances at theta in its cell, and their derivatives; what the curves needed is filled in."""
     n = inputs.lines.size
-    curves = np.full((n, table.dA.size), np.nan)
-    cell = np.empty(4, dtype=np.int64)
-    bits = locate(table, theta, cell)
-    flag = (1 if bits & EDGE else 0) | (2 if bits & BESIDE else 0)
-    if not bits & WHOLE:
-        blank = np.full(n, np.nan)
-        flags = np.full(n, flag | MISSING_WIDTHS, dtype=np.uint8)
-        return curves, blank, np.full((n, 4), np.nan), blank.copy(), flags
-    derivatives = np.empty((n, 4, table.dA.size))
-    curves_in_cell(table, theta, cell, inputs.lines, curves, derivatives)
-    turned = derivatives.transpose(1, 0, 2)
-    offset, d_theta, d_width, flags = invert(curves, turned, table.dA, table.dA_slopes, inputs.width)
-    flat = np.array([table.x0.size == 1, table.x1.size == 1, table.x2.size == 1, table.vmic.size == 1])
+    abundance, d_theta, d_width = np.full(n, np.nan), np.full((n, 4), np.nan), np.full(n, np.nan)
+    flags = np.full(n, MISSING_WIDTHS, dtype=np.uint8)
+    if bits & WHOLE:
+        place = place_of(table, theta, cell)
+        lines_in_cell(
+            table, place, inputs.lines, inputs.width, guess, made, coefficients, span, abundance, d_theta, d_width,
+            flags,
+        )  # fmt: skip
+    flag = np.uint8((1 if bits & EDGE else 0) | (2 if bits & BESIDE else 0))
     for i in range(n):
-        offset[i] += SOLAR_IRON + theta[2] - inputs.shift[i]
-        d_theta[i, 2] += 1.0
-        for k in range(4):
-            if flat[k]:
-                d_theta[i, k] = np.nan
+        abundance[i] += SOLAR_IRON + theta[2] - inputs.shift[i]
         flags[i] |= flag
-    return curves, offset, d_theta, d_width, flags
+        if table.x0.size == 1:
+            d_theta[i, 0] = np.nan
+        if table.x1.size == 1:
+            d_theta[i, 1] = np.nan
+        d_theta[i, 2] = d_theta[i, 2] + 1.0 if table.x2.size > 1 else np.nan
+        if table.vmic.size == 1:
+            d_theta[i, 3] = np.nan
+    return abundance, d_theta, d_width, flags
 
 
 @njit(cache=True, nogil=True)
 def evaluate(table, inputs, theta, allowed, old, rough):
     """`Problem.balance` at theta, which lies inside the box; `old` is where weights begin, if it is known."""
     n = inputs.lines.size
+    n_dA = table.dA.size
+    cell = np.empty(4, dtype=np.int64)
+    bits = locate(table, theta, cell)
     if old.known and np.all(old.theta == theta):
-        curves, abundance, d_theta, d_width, flags = old.curves, old.abundance, old.d_theta, old.d_width, old.flags
+        guess, made, coefficients, span = old.guess, old.made, old.coefficients, old.span
+        abundance, d_theta, d_width, flags = old.abundance, old.d_theta, old.d_width, old.flags
     else:
-        curves, abundance, d_theta, d_width, flags = line_abundances(table, inputs, theta)
+        guess, made = old.guess.copy(), np.zeros((n, n_dA), dtype=np.bool_)
+        coefficients, span = np.empty((n, n_dA, N_OUT)), np.zeros((n, 2), dtype=np.int64)
+        abundance, d_theta, d_width, flags = line_abundances(
+            table, inputs, theta, cell, bits, guess, made, coefficients, span
+        )
     used = np.zeros(n, dtype=np.bool_)
     y, slope = np.zeros(n), np.ones(n)
     total, mean = np.zeros(2), np.zeros(2)
@@ -169,7 +183,7 @@ def evaluate(table, inputs, theta, allowed, old, rough):
             total[place] += weight
             mean[place] += weight * y[i]
     if count == 0:
-        return nowhere(n, table.dA.size)
+        return nowhere(n, n_dA)
     for place in range(2):
         mean[place] = mean[place] / total[place] if total[place] > 0.0 else np.nan
     if not np.isfinite(mean[0]):
@@ -186,7 +200,7 @@ def evaluate(table, inputs, theta, allowed, old, rough):
         for i in range(n):
             common = mean[1 if inputs.is_fe2[i] else 0] + inputs.zero[i] + inputs.shift[i]
             offsets[i] = common - SOLAR_IRON - theta[2]
-        predicted = widths_on_curves(curves, table.dA, table.dA_slopes, offsets)
+        widths_in_cell(table, place_of(table, theta, cell), inputs.lines, offsets, made, coefficients, span, predicted)
     robust, scatter = np.zeros(n), np.zeros(2)
     x = np.empty(n)
     for i in range(n):
@@ -208,7 +222,8 @@ def evaluate(table, inputs, theta, allowed, old, rough):
     if inputs.zero_covariance.shape[0] > 0:
         add_full(operator, inputs.zero_covariance, c_shared)
     return State(
-        True, theta.copy(), curves, abundance, d_theta, d_width, predicted, flags, used, robust, scatter,
+        True, theta.copy(), guess, made, coefficients, span, abundance, d_theta, d_width, predicted, flags, used,
+        robust, scatter,
         width_variance, gf_variance, strength, deviation, settled, operator, response, residuals, jacobian, c_star,
         c_shared,
     )  # fmt: skip

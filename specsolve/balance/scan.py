@@ -22,7 +22,7 @@ from .strength import line_variances
 
 SCAN_SCATTER_DEX = 0.08  # line-to-line term of the scan's weights; only scales chi2 there
 SCAN_D_WIDTH = 1.5  # dA/dlogW of the scan's weights: between a weak (1) and a saturated line (about 3)
-CURVATURE_MARGIN = 0.25  # share of a residual's range over a cell by which it may miss zero at the corners
+CURVATURE_MARGIN = 0.25  # least share of a residual's range over a cell by which it may miss zero at the corners
 LANDING_MARGIN = 1.0  # in cells: how far outside a cell the linear prediction may land
 MERGE_CELLS = 0.5  # predictions closer than this in every axis are one starting point
 
@@ -152,36 +152,90 @@ def scan_nodes(problem: Problem, allowed: np.ndarray) -> Scan:
     return Scan(tuple(positions), full, np.linalg.inv(covariance), active)
 
 
-def seeds_from_scan(problem: Problem, scan: Scan) -> list[Seed]:
-    """Starting points: cells in which all residuals can vanish, and local minima of chi2 over the nodes; best
-    first.
-    """
-    seeds = _cells_with_roots(scan) + _lattice_minima(problem, scan)
+@dataclass(frozen=True, eq=False)
+class Starts:
+    """Starting points, best first, and what the scan says of the grid; see `certificate.Certificate`."""
+
+    seeds: tuple[Seed, ...]
+    n_blank: int
+    n_cells: int
+    n_partial: int
+    n_kept: int
+    n_landed: int
+    n_lattice: int
+
+
+def starts_from_scan(problem: Problem, scan: Scan) -> Starts:
+    """Starting points: cells in which all residuals can vanish, and local minima of chi2 over the nodes."""
+    landed, n_kept, n_cells, n_partial = _cells_with_roots(scan)
+    lattice = _lattice_minima(problem, scan)
     step = np.array([np.median(np.diff(x)) if x.size > 1 else 1.0 for x in scan.positions])
     merged: list[Seed] = []
-    for seed in sorted(seeds, key=lambda s: (s.chi2, *s.theta.tolist())):
-        for i, other in enumerate(merged):
-            if np.all(np.abs(seed.theta - other.theta) < MERGE_CELLS * step):
-                merged[i] = Seed(other.theta, other.chi2, other.count + seed.count)
-                break
+    places = np.empty((len(landed) + len(lattice), 4))
+    for seed in sorted(landed + lattice, key=lambda s: (s.chi2, *s.theta.tolist())):
+        near = (np.abs(places[: len(merged)] - seed.theta) < MERGE_CELLS * step).all(axis=1)
+        if near.any():
+            i = int(np.argmax(near))
+            merged[i] = Seed(merged[i].theta, merged[i].chi2, merged[i].count + seed.count)
         else:
+            places[len(merged)] = seed.theta
             merged.append(seed)
-    return merged
+    return Starts(
+        seeds=tuple(merged),
+        n_blank=int(np.prod(scan.residuals.shape[:-1])) - scan.n_nodes,
+        n_cells=n_cells,
+        n_partial=n_partial,
+        n_kept=n_kept,
+        n_landed=len(landed),
+        n_lattice=len(lattice),
+    )
 
 
-def _cells_with_roots(scan: Scan) -> list[Seed]:
+def seeds_from_scan(problem: Problem, scan: Scan) -> list[Seed]:
+    """The starting points of `starts_from_scan`, best first."""
+    return list(starts_from_scan(problem, scan).seeds)
+
+
+def _cells_with_roots(scan: Scan) -> tuple[list[Seed], int, int, int]:
+    """Gauss-Newton steps of kept cells that land near; cells kept, whole cells and cells with some corners."""
     values = scan.residuals[..., scan.active]
     axes = [axis for axis in range(4) if values.shape[axis] > 1]
+    whole = some = np.isfinite(values).all(axis=-1)
+    for axis in axes:
+        first, last = _halves(axis)
+        whole, some = whole[first[:-1]] & whole[last[:-1]], some[first[:-1]] | some[last[:-1]]
+    n_cells, n_partial = int(whole.sum()), int((some & ~whole).sum())
     if len(scan.active) != len(axes) or not axes:
-        return []
+        return [], 0, n_cells, n_partial
     low, high = values, values
     for axis in axes:
         first, last = _halves(axis)
         low = np.fmin(low[first], low[last])
         high = np.fmax(high[first], high[last])
-    margin = CURVATURE_MARGIN * (high - low)
+    margin = np.fmax(CURVATURE_MARGIN * (high - low), _curvature(values, axes))
     possible = ((low - margin <= 0.0) & (high + margin >= 0.0)).all(axis=-1)
-    return _linear_roots(scan, values, np.argwhere(possible), axes)
+    cells = np.argwhere(possible)
+    return _linear_roots(scan, values, cells, axes), len(cells), n_cells, n_partial
+
+
+def _curvature(values: np.ndarray, axes: list[int]) -> np.ndarray:
+    """How far residuals may leave the linear interpolation inside each cell: second differences / 8, summed over axes.
+
+    The larger one of the nodes at both ends of the cell counts, over all corners; nothing where there is none.
+    """
+    total = 0.0
+    for axis in axes:
+        bend = np.zeros(values.shape)
+        if values.shape[axis] > 2:
+            inner = [slice(None)] * values.ndim
+            inner[axis] = slice(1, -1)
+            second = np.abs(np.diff(values, n=2, axis=axis))
+            bend[tuple(inner)] = np.where(np.isfinite(second), second, 0.0)
+        for along in axes:
+            first, last = _halves(along)
+            bend = np.maximum(bend[first], bend[last])
+        total = total + bend / 8.0
+    return total
 
 
 def _halves(axis: int) -> tuple[tuple, tuple]:
@@ -224,16 +278,16 @@ def _lattice_minima(problem: Problem, scan: Scan) -> list[Seed]:
     chi2 = np.einsum("...i,ij,...j->...", values, scan.metric, values)
     points = np.stack(np.meshgrid(*scan.positions, indexing="ij"), -1)
     if problem.outside:
-        for index in np.ndindex(chi2.shape):
-            terms, _ = problem.outside_terms(points[index])
-            chi2[index] += terms @ terms
+        for index in np.argwhere(np.isfinite(chi2)):
+            terms, _ = problem.outside_terms(points[tuple(index)])
+            chi2[tuple(index)] += terms @ terms
     filled = np.where(np.isfinite(chi2), chi2, np.inf)
-    padded = np.pad(filled, 1, constant_values=np.inf)
-    least = np.ones(chi2.shape, dtype=bool)
-    for shift in product((0, 1, 2), repeat=4):
-        if shift == (1, 1, 1, 1):
-            continue
-        window = padded[tuple(slice(s, s + n) for s, n in zip(shift, chi2.shape, strict=True))]
-        least &= filled <= window
+    lowest = filled  # of all neighbours, axis by axis
+    for axis in range(4):
+        ends = [(1, 1) if k == axis else (0, 0) for k in range(4)]
+        padded = np.pad(lowest, ends, constant_values=np.inf)
+        lowest = np.minimum(padded.take(range(2, padded.shape[axis]), axis=axis), lowest)
+        lowest = np.minimum(padded.take(range(padded.shape[axis] - 2), axis=axis), lowest)
+    least = filled <= lowest
     least &= np.isfinite(filled)
     return [Seed(points[tuple(index)].astype(float), float(filled[tuple(index)]), 1) for index in np.argwhere(least)]

@@ -94,8 +94,7 @@ def rank(problem: Problem, search: Search) -> Ranking:
             float(search.n_refined),
             float(problem.options.max_seeds),
             f"{len(found)} found",
-            f"{search.n_nodes} nodes scanned, {search.n_seeds} starting points, {search.n_refined} refined"
-            + ("; more starting points than the limit" if search.n_seeds > search.n_refined else ""),
+            search.certificate.words(),
         )
     ]
     for i, row in enumerate(rows):

@@ -80,11 +80,9 @@ class CoarseInverse:
     """
 
     def __init__(self, grid: Any, treatment: str):
-        from specsolve.grid.node_table import node_table
-
-        self._table = node_table(grid, treatment)
+        self._grid, self._treatment = grid, treatment
         self._n_nodes, self._n_lines = int(np.prod(grid.node_shape)), len(grid.lines)
-        self._valid = np.flatnonzero(grid.node_valid(treatment).ravel())
+        self._valid = np.nonzero(grid.node_valid(treatment))
         self._n_vmic = len(grid.line_axes[0])
         self._clear()
 
@@ -104,13 +102,16 @@ class CoarseInverse:
         """
         from specsolve.grid.coarse_kernel import combine, fill
 
-        self._table.prepare(lines)
         lower, share = levels_of(log_reduced_widths)
         if np.count_nonzero(self._filled) * self._offsets[0, 0].nbytes > LIMIT_BYTES:
             self._clear()
-        arrays = self._table.arrays
-        fill(arrays.codes, self._valid, lines, lower, LEVEL_CODES, arrays.dA, MIN_SLOPE / STEP, self._offsets,
-             self._filled)  # fmt: skip
+        absent = ~(self._filled[lines, lower] & self._filled[lines, lower + 1])
+        if absent.any():
+            grid = self._grid
+            codes = grid.gather(self._treatment, self._valid, lines[absent])
+            flat = np.ravel_multi_index(self._valid, grid.node_shape)
+            fill(codes, flat, lines[absent], lower[absent], LEVEL_CODES, grid.axes["dA"], MIN_SLOPE / STEP,
+                 self._offsets, self._filled)  # fmt: skip
         total = combine(self._offsets, lines, lower, share, operator)
         return total.reshape(len(operator), self._n_nodes, self._n_vmic)
 

@@ -33,7 +33,10 @@ def invert_row(row, target, dA, least_slope):
 
 @njit(cache=True, nogil=True)
 def fill(codes, valid, lines, lower, level_codes, dA, least_slope, offsets, filled):
-    """Make the offsets of lines at their two levels where they are not there yet."""
+    """Make the offsets of lines at their two levels where they are not there yet.
+
+    `codes` (n_valid, n_lines, n_vmic, n_dA) are those of the lines at the flat nodes `valid`.
+    """
     n_vmic = codes.shape[2]
     for i in range(lines.size):
         line = lines[i]
@@ -45,7 +48,7 @@ def fill(codes, valid, lines, lower, level_codes, dA, least_slope, offsets, fill
             for k in range(valid.size):
                 node = valid[k]
                 for j in range(n_vmic):
-                    out[node * n_vmic + j] = invert_row(codes[node, line, j], level * level_codes, dA, least_slope)
+                    out[node * n_vmic + j] = invert_row(codes[k, i, j], level * level_codes, dA, least_slope)
             filled[line, level] = True
 
 

@@ -8,6 +8,7 @@ CODE_TYPE = np.dtype("<u2")
 FIRST_LOG_WIDTH = -9.0  # log10(W/lambda) of code 0
 STEP = 1e-4  # dex; rounding errs by at most half of it, rms 3e-5 dex
 MISSING = 65535  # the one code that is no width
+CENTRE = 40000.0  # code of log10(W/lambda) = -5; sums are kept relative to it
 LAST_LOG_WIDTH = FIRST_LOG_WIDTH + STEP * (MISSING - 1)
 
 

@@ -2,8 +2,8 @@
 
 Along every axis (teff, logg, mh, vmic, dA) the interpolant of log10(W/lambda) is a piecewise cubic with continuous
 first derivatives (`specsolve.grid.stencil`). The value and the slopes of a node, its Hermite numbers, serve all cells
-around it; they are kept in units of a code, the slopes rounded to single precision (3e-8 dex), here as in the shared
-table of the compiled path (`specsolve.grid.node_table`), so that both agree to 1e-9.
+around it. Along vmic and dA they are kept as coefficients of the spline (`specsolve.grid.line_spline`), in single
+precision (1e-7 dex), here as in the shared table of the compiled path (`specsolve.grid.node_table`): both agree to 1e-9.
 """
 
 from __future__ import annotations
@@ -16,8 +16,9 @@ import numpy as np
 
 from specsolve.constants import SOLAR_IRON
 from specsolve.errors import InputError, OutOfGridError
-from specsolve.grid.codes import FIRST_LOG_WIDTH, MISSING, STEP
-from specsolve.grid.inversion import dA_slope_matrices, invert_curves, values_on_curves
+from specsolve.grid.codes import CENTRE, FIRST_LOG_WIDTH, STEP
+from specsolve.grid.inversion import invert_curves, values_on_curves
+from specsolve.grid.line_spline import continued, line_spline
 from specsolve.grid.stencil import cell_of, hermite_basis, spline_slopes
 from specsolve.grid.store import ResponseGrid
 
@@ -94,11 +95,13 @@ class Interpolator:
         self.names = (*(axis.name for axis in grid.node_axes), grid.line_axes[0].name)
         self.mh_axis = self.names.index("mh")
         self.stencils = grid.stencils(treatment)
-        self.vmic_slopes = slopes_of(tuple(self.vmic))
-        self.dA_slopes = dA_slopes_of(tuple(self.dA))
+        self.vmic_spline = line_spline(tuple(self.vmic), even=True)
+        self.dA_spline = line_spline(tuple(self.dA))
+        self.dA_slopes = slopes_of(tuple(self.dA))
         self._cell: tuple[int, ...] | None = None
         self._numbers: np.ndarray | None = None
-        self._of_node: dict[tuple[int, ...], np.ndarray] = {}
+        self._of_node: dict[tuple[int, ...], tuple[np.ndarray, np.ndarray, np.ndarray]] = {}
+        self._range = np.empty(0, int), np.empty(0, int)
         self._cell_flags = 0
         self._latest: tuple[tuple[float, ...], tuple[np.ndarray, np.ndarray]] | None = None
         self._kernels = self._table = None
@@ -132,8 +135,12 @@ class Interpolator:
             return LineAbundances(
                 abundance=blank, d_theta=np.full((n_lines, len(self.names)), np.nan), d_width=blank.copy(), flags=flags
             )
-        invert = invert_curves if self._kernels is None else self._kernels.invert
-        dA, d_theta, d_width, flags = invert(*self._contract(theta), self.dA, self.dA_slopes, widths)
+        if self._kernels is None:
+            dA, d_theta, d_width, flags = invert_curves(
+                *self._contract(theta), self.dA, self.dA_slopes, widths, *self._range
+            )
+        else:
+            dA, d_theta, d_width, flags = self._kernels.offsets_at(*self._where(theta), widths)
         d_theta[:, self.mh_axis] += 1.0
         for axis in self._flat_axes():
             d_theta[:, axis] = np.nan
@@ -157,7 +164,15 @@ class Interpolator:
         if not self._enter(theta):
             shape = (self.line_indices.size, self.dA.size)
             return np.full(shape, np.nan), np.full((len(self.names), *shape), np.nan)
-        curves, derivatives = (array.copy() for array in self._contract(theta))
+        if self._kernels is None:
+            curves, derivatives = (array.copy() for array in self._contract(theta))
+            node = np.arange(self.dA.size)
+            first, end = (limit[:, None] for limit in self._range)
+            absent = (node < first) | (node >= end)
+            curves[absent] = np.nan
+            derivatives[:, absent] = np.nan
+        else:
+            curves, derivatives = self._kernels.curves_at(*self._where(theta))
         for axis in self._flat_axes():
             derivatives[axis] = np.nan
         return curves, derivatives
@@ -176,7 +191,9 @@ class Interpolator:
         )
         if not self._enter(theta):
             return np.full(self.line_indices.size, np.nan)
-        return values_on_curves(self._contract(theta)[0], self.dA, self.dA_slopes, dA)
+        if self._kernels is not None:
+            return self._kernels.widths_at(*self._where(theta), np.ascontiguousarray(dA))
+        return values_on_curves(self._contract(theta)[0], self.dA, self.dA_slopes, dA, *self._range)
 
     def flags(self, theta) -> int:
         """Flags of the cell that holds theta (bits 1, 2 and 8)."""
@@ -211,7 +228,6 @@ class Interpolator:
             return self._numbers is not None
         node_cell, vmic_cell = cell[:-1], cell[-1]
         self._cell, self._numbers, self._cell_flags, self._latest = cell, None, 0, None
-        positions = (*self.node_positions, self.vmic)
         vmic_edge = self.vmic.size > 1 and (vmic_cell == self.vmic.size - 2 or (vmic_cell == 0 and self.vmic[0] != 0.0))
         if self.stencils.at_edge(node_cell) or vmic_edge:
             self._cell_flags |= AT_EDGE
@@ -220,16 +236,20 @@ class Interpolator:
         if not self.stencils.cell_valid(node_cell):
             return False
         if self._kernels is None:
-            numbers = self._cell_numbers(node_cell)
-            self._numbers = np.tensordot(self._vmic_map(vmic_cell), numbers, axes=(1, 2)).swapaxes(0, 1)
+            self._numbers = self._cell_numbers(node_cell)
         else:
             self._numbers = np.empty(0)  # the shared table holds them
         return True
 
+    def _where(self, theta) -> tuple:
+        """First arguments of the kernels."""
+        return self._table.arrays, np.asarray(theta, dtype=np.float64), np.array(self._cell), self.line_indices
+
     def _cell_numbers(self, cell: tuple[int, ...]) -> np.ndarray:
         """Hermite numbers of a cell in units of a code, shape (n_numbers, n_lines, n_vmic, n_dA).
 
-        Numbers ordered as the outer product over axes of (value lo, value hi, slope lo, slope hi).
+        Numbers ordered as the outer product over axes of (value lo, value hi, slope lo, slope hi); coefficients of the
+        splines along vmic and dA. The range of dA that counts is where no node of the cell lacks a width.
         """
         active = self.stencils.active
         kinds = self.stencils.kinds
@@ -239,28 +259,22 @@ class Interpolator:
             for axis, kind in zip(active, choice, strict=True):
                 node[axis] += kind % 2
             slopes = tuple(axis for axis, kind in zip(active, choice, strict=True) if kind >= 2)
-            numbers.append(self._node_numbers(tuple(node))[kinds.index(slopes)])
+            numbers.append(self._node_numbers(tuple(node))[0][kinds.index(slopes)])
+        corners = [self._node_numbers(corner) for corner in self.stencils.corners(cell)]
+        first = np.max([corner[1] for corner in corners], axis=0)
+        self._range = first, np.maximum(np.min([corner[2] for corner in corners], axis=0), first)
         return np.stack(numbers).astype(np.float64)
 
-    def _node_numbers(self, node: tuple[int, ...]) -> np.ndarray:
-        """Value and slopes of a node in single precision, shape (2 ** n_active, n_lines, n_vmic, n_dA)."""
+    def _node_numbers(self, node: tuple[int, ...]) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Value and slopes of a node, shape (2 ** n_active, n_lines, n_vmic, n_dA), and the range of dA (n_lines,)."""
         if node not in self._of_node:
             nodes, matrix = self.stencils.node_map(node)
-            codes = self.grid.gather(self.treatment, tuple(nodes.T), self.line_indices)
-            numbers = (matrix @ codes.reshape(len(nodes), -1).astype(np.float64)).astype(np.float32)
-            numbers = numbers.reshape(len(matrix), *codes.shape[1:])
-            absent = codes == MISSING
-            for place in np.argwhere(absent.any(axis=0)):  # a number is nan only if a code that it needs is missing
-                needed = (matrix[:, absent[(slice(None), *place)]] != 0.0).any(axis=1)
-                numbers[(needed, *place)] = np.nan
-            self._of_node[node] = numbers
+            codes, first, end = continued(self.grid.gather(self.treatment, tuple(nodes.T), self.line_indices), self.dA)
+            at_nodes = (matrix @ (codes.reshape(len(nodes), -1) - CENTRE)).reshape(len(matrix), *codes.shape[1:])
+            along_dA = at_nodes @ self.dA_spline.coefficients.T
+            numbers = np.einsum("jv,klva->klja", self.vmic_spline.coefficients, along_dA).astype(np.float32)
+            self._of_node[node] = numbers, first.max(axis=0), end.min(axis=0)
         return self._of_node[node]
-
-    def _vmic_map(self, cell: int) -> np.ndarray:
-        if self.vmic.size == 1:
-            return np.ones((1, 1))
-        unit = np.eye(self.vmic.size)
-        return np.stack([unit[cell], unit[cell + 1], self.vmic_slopes[cell], self.vmic_slopes[cell + 1]])
 
     def _axis_basis(self, x: np.ndarray, cell: int, value: float) -> tuple[np.ndarray, np.ndarray]:
         if x.size == 1:
@@ -279,9 +293,6 @@ class Interpolator:
             products.append(total)
         return products[0], np.array(products[1:])
 
-    def _vmic_basis(self, theta) -> tuple[np.ndarray, np.ndarray]:
-        return self._axis_basis(self.vmic, self._cell[-1], theta[-1])
-
     def _contract(self, theta) -> tuple[np.ndarray, np.ndarray]:
         """Curves and derivatives in the current cell; those of the latest theta are kept, for widths after abundances."""
         here = tuple(map(float, theta))
@@ -290,12 +301,8 @@ class Interpolator:
         return self._latest[1]
 
     def _contracted(self, theta) -> tuple[np.ndarray, np.ndarray]:
-        if self._kernels is not None:
-            return self._kernels.curves_at(
-                self._table.arrays, np.asarray(theta, dtype=np.float64), np.array(self._cell), self.line_indices
-            )
         value, slopes = self._basis(theta)
-        vmic_value, vmic_slope = self._vmic_basis(theta)
+        vmic_value, vmic_slope = self.vmic_spline.weights(self._cell[-1], theta[-1])
         weights = np.concatenate(
             [
                 np.outer(value, vmic_value).reshape(1, -1),
@@ -304,18 +311,14 @@ class Interpolator:
             ]
         )
         shape = self._numbers.shape
-        curves = (weights @ self._numbers.reshape(shape[0] * shape[1], -1)).reshape(-1, *shape[2:]) * STEP
-        curves[0] += FIRST_LOG_WIDTH
+        numbers = np.swapaxes(self._numbers, 1, 2).reshape(shape[0] * shape[2], -1)
+        coefficients = (weights @ numbers).reshape(-1, shape[1], shape[3])
+        curves = coefficients @ self.dA_spline.basis.T * STEP
+        curves[0] += FIRST_LOG_WIDTH + CENTRE * STEP
         return curves[0], curves[1:]
 
 
 @lru_cache
-def slopes_of(vmic: tuple[float, ...]) -> np.ndarray:
-    """Slope matrix of the vmic axis; see `specsolve.grid.stencil.spline_slopes`."""
-    return spline_slopes(np.array(vmic), even=True)
-
-
-@lru_cache
-def dA_slopes_of(dA: tuple[float, ...]) -> np.ndarray:
-    """Slope matrices of the dA axis; see `specsolve.grid.inversion.dA_slope_matrices`."""
-    return dA_slope_matrices(np.array(dA))
+def slopes_of(dA: tuple[float, ...]) -> np.ndarray:
+    """Slope matrix of the dA axis; see `specsolve.grid.stencil.spline_slopes`."""
+    return spline_slopes(np.array(dA))

@@ -1,14 +1,12 @@
 """From a width to an abundance on curves of growth, and back: the cubic along the dA axis.
 
-A curve is given at the nodes of dA and continued between them by a cubic spline. Widths missing at an end of the axis
-shorten the curve; it is never continued beyond its last node.
+A curve is given at the nodes of dA, and a cubic spline between them. Widths missing at an end of the axis shorten the
+range in which it counts; what the spline does beyond never becomes a result.
 """
 
 from __future__ import annotations
 
 import numpy as np
-
-from specsolve.grid.stencil import spline_slopes
 
 OUTSIDE = 4
 """Flag of `invert_curves`: the width lies beyond the ends of the curve."""
@@ -22,43 +20,6 @@ CONVERGED = 1e-14
 """Step, in units of the interval, at which the search ends."""
 
 
-def dA_slope_matrices(dA: np.ndarray) -> np.ndarray:
-    """Slope matrix of every unbroken range of nodes; shape (n, n + 1, n, n), indexed by first node and end of range."""
-    n = dA.size
-    matrices = np.zeros((n, n + 1, n, n))
-    for first in range(n):
-        for end in range(first + 2, n + 1):
-            matrices[first, end, first:end, first:end] = spline_slopes(dA[first:end])
-    return matrices
-
-
-def valid_ranges(curves: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Longest unbroken range of finite values of each curve (the first of equally long ones).
-
-    Parameters
-    ----------
-    curves : ndarray, shape (n_curves, n_dA)
-
-    Returns
-    -------
-    first, end : ndarray of int, shape (n_curves,)
-        Half-open; equal where no value is finite.
-    """
-    finite = np.isfinite(curves)
-    n_curves, n = curves.shape
-    if finite.all():
-        return np.zeros(n_curves, dtype=np.int64), np.full(n_curves, n, dtype=np.int64)
-    first = np.zeros(n_curves, dtype=np.int64)
-    end = np.zeros(n_curves, dtype=np.int64)
-    start = np.zeros(n_curves, dtype=np.int64)
-    for node in range(n):
-        start = np.where(finite[:, node], start, node + 1)
-        longer = finite[:, node] & (node + 1 - start > end - first)
-        first = np.where(longer, start, first)
-        end = np.where(longer, node + 1, end)
-    return first, end
-
-
 def cubic(t, h):
     """The four Hermite basis values, derivatives with respect to t; see `specsolve.grid.stencil.hermite_basis`."""
     value = (1 + 2 * t) * (1 - t) ** 2, t * t * (3 - 2 * t), h * t * (1 - t) ** 2, -h * t * t * (1 - t)
@@ -66,34 +27,22 @@ def cubic(t, h):
     return value, slope
 
 
-def curve_slopes(curves: np.ndarray, matrices: np.ndarray, first: np.ndarray, end: np.ndarray) -> np.ndarray:
-    """Slopes of curves at their nodes, shape of `curves`."""
-    n = curves.shape[1]
-    whole = (first == 0) & (end == n)
-    if whole.all():
-        return curves @ matrices[0, n].T
-    slopes = np.zeros_like(curves)
-    filled = np.where(np.isfinite(curves), curves, 0.0)
-    for pair in {(int(f), int(e)) for f, e in zip(first, end, strict=True) if e - f >= 2}:
-        rows = (first == pair[0]) & (end == pair[1])
-        slopes[rows] = filled[rows] @ matrices[pair].T
-    return slopes
-
-
-def invert_curves(curves, derivatives, dA, matrices, widths):
+def invert_curves(curves, derivatives, dA, slopes, widths, first=None, end=None):
     """Abundance offset at which each curve reaches a width.
 
     Parameters
     ----------
     curves : ndarray, shape (n_curves, n_dA)
-        log10(W/lambda) at the nodes of dA, rising; nan where missing.
+        log10(W/lambda) at the nodes of dA, rising.
     derivatives : ndarray, shape (n_theta, n_curves, n_dA)
         Derivatives of the curves with respect to theta.
     dA : ndarray, shape (n_dA,)
-    matrices : ndarray
-        From `dA_slope_matrices`.
+    slopes : ndarray, shape (n_dA, n_dA)
+        Slope matrix of the axis, see `stencil.spline_slopes`.
     widths : ndarray, shape (n_curves,)
         log10(W/lambda).
+    first, end : ndarray of int, shape (n_curves,), optional
+        Half-open range of the nodes that count; all by default.
 
     Returns
     -------
@@ -106,12 +55,14 @@ def invert_curves(curves, derivatives, dA, matrices, widths):
     """
     n_curves = curves.shape[0]
     rows = np.arange(n_curves)
-    first, end = valid_ranges(curves)
-    slopes = curve_slopes(curves, matrices, first, end)
+    first = np.zeros(n_curves, dtype=np.int64) if first is None else first
+    end = np.full(n_curves, dA.size) if end is None else end
+    at_nodes = curves @ slopes.T
     flags = np.zeros(n_curves, dtype=np.uint8)
     flags[(end - first < 2) | ~np.isfinite(widths)] = MISSING
+    start = np.minimum(first, dA.size - 1)
     last = np.maximum(end - 1, 0)
-    inside = (flags == 0) & (curves[rows, first] <= widths) & (widths <= curves[rows, last])
+    inside = (flags == 0) & (curves[rows, start] <= widths) & (widths <= curves[rows, last])
     flags[(flags == 0) & ~inside] = OUTSIDE
     # interval: the last node of the range whose value does not exceed the width
     node = np.arange(dA.size)
@@ -119,7 +70,7 @@ def invert_curves(curves, derivatives, dA, matrices, widths):
     lower = np.where(inside, dA.size - 1 - np.argmax(below[:, ::-1], axis=1), 0)
     upper = np.minimum(lower + 1, dA.size - 1)
     h = np.where(inside, dA[upper] - dA[lower], 1.0)
-    v0, v1, m0, m1 = curves[rows, lower], curves[rows, upper], slopes[rows, lower], slopes[rows, upper]
+    v0, v1, m0, m1 = curves[rows, lower], curves[rows, upper], at_nodes[rows, lower], at_nodes[rows, upper]
     target = np.where(inside, widths, np.nan)
     with np.errstate(invalid="ignore"):
         t = solve_cubic(v0, v1, m0, m1, h, target)
@@ -130,7 +81,7 @@ def invert_curves(curves, derivatives, dA, matrices, widths):
     d_theta = np.empty((n_curves, n_theta))
     for k in range(n_theta):
         y = derivatives[k]
-        s = curve_slopes(y, matrices, first, end)
+        s = y @ slopes.T
         change = (
             value[0] * y[rows, lower]
             + value[1] * y[rows, upper]
@@ -162,21 +113,23 @@ def solve_cubic(v0, v1, m0, m1, h, target):
     return t
 
 
-def values_on_curves(curves, dA, matrices, offsets) -> np.ndarray:
-    """log10(W/lambda) of curves at abundance offsets, shape (n_curves,); nan outside the curve."""
-    rows = np.arange(curves.shape[0])
-    first, end = valid_ranges(curves)
-    slopes = curve_slopes(curves, matrices, first, end)
+def values_on_curves(curves, dA, slopes, offsets, first=None, end=None) -> np.ndarray:
+    """log10(W/lambda) of curves at abundance offsets, shape (n_curves,); nan outside the range that counts."""
+    n_curves = curves.shape[0]
+    rows = np.arange(n_curves)
+    first = np.zeros(n_curves, dtype=np.int64) if first is None else first
+    end = np.full(n_curves, dA.size) if end is None else end
+    at_nodes = curves @ slopes.T
     last = np.maximum(end - 1, 0)
-    inside = (end - first >= 2) & (dA[first] <= offsets) & (offsets <= dA[last])
-    lower = np.clip(np.searchsorted(dA, offsets, side="right") - 1, first, np.maximum(last - 1, first))
+    inside = (end - first >= 2) & (dA[np.minimum(first, dA.size - 1)] <= offsets) & (offsets <= dA[last])
+    lower = np.clip(np.searchsorted(dA, offsets, side="right") - 1, 0, max(dA.size - 2, 0))
     upper = np.minimum(lower + 1, dA.size - 1)
     h = np.where(upper > lower, dA[upper] - dA[lower], 1.0)
     value, _ = cubic((offsets - dA[lower]) / h, h)
     total = (
         value[0] * curves[rows, lower]
         + value[1] * curves[rows, upper]
-        + value[2] * slopes[rows, lower]
-        + value[3] * slopes[rows, upper]
+        + value[2] * at_nodes[rows, lower]
+        + value[3] * at_nodes[rows, upper]
     )
     return np.where(inside, total, np.nan)

@@ -14,7 +14,8 @@ from specsolve.atmosphere.structure import solve_structure
 from specsolve.constants import SOLAR_IRON
 from specsolve.formation.equivalent_width import reduced_widths
 from specsolve.grid import LineAbundances
-from specsolve.grid.inversion import dA_slope_matrices, invert_curves, values_on_curves
+from specsolve.grid.inversion import invert_curves, values_on_curves
+from specsolve.grid.stencil import spline_slopes
 from specsolve.lines import LineList
 from specsolve.matter.composition import composition_for
 
@@ -28,7 +29,7 @@ class DirectWay:
         self.lines, self.mh, self.start = lines, mh, start
         self.composition, self.blanketing = composition_for(mh), load_blanketing(mh)
         self.dA = np.array([-0.6, -0.3, 0.0, 0.3, 0.6])
-        self.slopes = dA_slope_matrices(self.dA)
+        self.slopes = spline_slopes(self.dA)
         self.atmospheres = 0
         self._known: dict[tuple[float, float], object] = {}
 
