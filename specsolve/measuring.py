@@ -58,7 +58,8 @@ class Task:
         At most so many rounds of measuring.
     grid : str or None
         Response grid for the rough solves; the packaged one if None.
-    treatment : str
+    treatment : str or None
+        Of the rough solves; the grid's default if None.
     """
 
     path: str
@@ -72,7 +73,7 @@ class Task:
     guess: Guess | None = None
     passes: int = 3
     grid: str | None = None
-    treatment: str = "lte"
+    treatment: str | None = None
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -163,7 +164,8 @@ def rough_star(measured: Measurements, task: Task) -> tuple[Guess | None, str]:
     from specsolve.balance.solve import open_grid
 
     grid = open_grid(task.grid)
-    solution = solve_star(star_of_widths(measured), grid, Setting(treatment=task.treatment))
+    treatment = grid.treatments_asked(task.treatment)[-1]
+    solution = solve_star(star_of_widths(measured), grid, Setting(treatment=treatment))
     teff, logg, feh, vmic = (float(value) for value in solution.parameters)
     if not np.all(np.isfinite([teff, logg, feh, vmic])):
         return None, solution.reason or solution.status

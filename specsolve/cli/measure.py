@@ -88,7 +88,7 @@ def spectrum_options(function: Any) -> Any:
 @spectrum_options
 @click.option("--plot-format", type=click.Choice(["pdf", "png", "svg"]), default="pdf", show_default=True)
 @click.option("--plots", metavar="DIR", help="Draw an overview and the lines, worst first, into this folder.")
-@click.option("--treatment", default="lte", show_default=True, help="Line formation of the rough solves.")
+@click.option("--treatment", type=click.Choice(["lte", "nlte"]), help="Line formation of the rough solves.")
 @click.option("--grid", "grid_path", metavar="DIR", help="A response grid of your own, for the rough solves.")
 @click.option("--workers", type=click.IntRange(1), default=1, show_default=True, help="Processes, for many spectra.")
 @click.option("--output", metavar="EWS", help="Write EWS.ecsv (for solve) and EWS_spectra.ecsv; - for stdout.")
@@ -136,7 +136,7 @@ def make_tasks(
     guesses: Sequence[str],
     passes: int,
     grid_path: str | None,
-    treatment: str,
+    treatment: str | None,
 ) -> list[Task]:
     """One task a spectrum; misunderstandings are usage errors."""
     if names and len(names) != len(spectra):
@@ -175,7 +175,7 @@ def make_tasks(
             guess=guess,
             passes=passes,
             grid=grid_path,
-            treatment="lte" if treatment == "both" else treatment,
+            treatment=treatment,
         )
         for place, path in enumerate(spectra)
     ]

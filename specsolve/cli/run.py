@@ -60,7 +60,7 @@ def run(settings: Settings, spectra: tuple[str, ...], **chosen: Any) -> int:
     names = {option.name for option in solve.params} - OF_THE_TABLE - OF_EVERY_COMMAND
     for_solve = {name: chosen[name] for name in names}
     # the rough solves on the way only choose windows: LTE does
-    shared = {"grid_path": for_solve["grid_path"], "treatment": "lte"}
+    shared = {name: for_solve[name] for name in ("grid_path", "treatment")}
     for_measure = {name: value for name, value in chosen.items() if name not in names} | shared
     output = for_solve["output"]
     if settings.json and output == STDOUT:

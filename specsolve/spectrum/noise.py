@@ -101,7 +101,11 @@ def independent_lag(flux: np.ndarray, mask: np.ndarray, per_fwhm: float = np.nan
     width = per_fwhm if np.isfinite(per_fwhm) else line_pixels(flux, mask)
     most = LAGS.size if not np.isfinite(width) else int(np.clip(width / LEAST_PER_FWHM, 1, LAGS.size))
     values = np.where(mask, np.nan, flux)
-    if most == 1 or not second_difference_noise(values, 1) > SMOOTHER * sixth_difference_noise(values):
+    if most == 1:
+        return 1, 1.0
+    # linear interpolation leaves pixels between two others without a second difference at lag 1, hence both lags
+    rough = max(second_difference_noise(values, 1), second_difference_noise(values, 2))
+    if not rough > SMOOTHER * sixth_difference_noise(values):
         return 1, 1.0
     lags = LAGS[: most + 1]
     by_lag = np.array([_quietest(flux, mask, int(lag)) for lag in lags])

@@ -22,7 +22,7 @@ VELOCITY = 25.0
 def spectrum_file(tmp_path_factory):
     """A spectrum of the default lines alone, Gaussian, with the widths predicted for a dwarf; R 60 000, S/N 150."""
     rng = np.random.default_rng(5)
-    lines = listed(LOW + 5.0, HIGH - 5.0)
+    lines = listed(LOW, HIGH)
     prediction = predict(lines, TRUTH)
     own = prediction.lines.own >= 0
     widths = np.empty(len(lines))
