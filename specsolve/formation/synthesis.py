@@ -159,8 +159,8 @@ def central_ratios(medium: Medium, lines: SpectralLines, vmic: float) -> np.ndar
     at = reference_layer(medium.layers)
     temperature = medium.layers.gas.temperature[at]
     names, inverse = np.unique(lines.ion, return_inverse=True)
-    masses = np.array([ATOMIC_WEIGHTS[str(ion).split()[0]] * ATOMIC_MASS_G for ion in names])
-    doppler = np.array([float(doppler_width(temperature, float(vmic), mass)) for mass in masses])[inverse]
+    masses = np.array([ATOMIC_WEIGHTS[str(ion).split()[0]] * ATOMIC_MASS_G for ion in names], dtype=float)
+    doppler = doppler_width(temperature, float(vmic), masses)[inverse]
     continuum = medium.factors.opacity[medium.block_of(lines.wavelength_air)]
     return strengths_at(medium, lines, slice(at, at + 1))[:, 0] / doppler / continuum
 
@@ -183,9 +183,9 @@ def opacities_of(medium: Medium, lines: SpectralLines, vmic: float, least: float
     row = {symbol: i for i, symbol in enumerate(elements)}
     doppler = np.array(
         [doppler_width(layers.gas.temperature, float(vmic), ATOMIC_WEIGHTS[s] * ATOMIC_MASS_G) for s in elements]
-    )
+    ).reshape(-1, layers.gas.temperature.size)
     names, inverse = np.unique(lines.ion, return_inverse=True)
-    element = np.array([row[str(ion).split()[0]] for ion in names])[inverse]
+    element = np.array([row[str(ion).split()[0]] for ion in names], dtype=np.int64)[inverse]
     block = medium.block_of(lines.wavelength_air)
     ratio = central_ratios(medium, lines, vmic)
     keep = np.flatnonzero(ratio > least)

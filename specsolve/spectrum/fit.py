@@ -297,7 +297,7 @@ def weights(fit: Fit, residual: np.ndarray, *, weigh: bool) -> np.ndarray:
     error = fit.model_error()
     deviation = np.where(fit.good, residual / error, 0.0)
     if weigh:
-        relative = error / fit.continuum
+        relative = np.where(fit.good, error / fit.continuum, 1.0)
         if fit.expected is None:
             fit.expected = fit.unpredicted = expected_unpredicted(fit.depth, fit.options.unknown_part)
         probability = noise_probability(deviation, relative, fit.unpredicted)
