@@ -177,9 +177,9 @@ def solve_to_files(
     provenance : mapping
     """
     from specsolve.cli.progress import counting
-    from specsolve.report.differences import write_differences
     from specsolve.report.journal import Journal
     from specsolve.report.rows import record_of
+    from specsolve.report.treatments import write_differences
 
     interrupted = False
     with Journal(request.output, run_key(request.arguments(), stars, runs, grid)) as journal:

@@ -184,12 +184,13 @@ def check(
     from specsolve.cli.progress import counting
     from specsolve.errors import InputError
     from specsolve.grid.check import check_points, converged_atmosphere, random_points
-    from specsolve.grid.engine import POINT_ENGINES
+    from specsolve.grid.engine import ENGINES, solved_engine
 
     opened = open_grid(directory)
     store = AtmosphereStore.packaged() if atmospheres is None else AtmosphereStore.open(atmospheres)
     if store.identity != opened.atmospheres_identity:
         raise InputError("the grid was built on other atmospheres; name their folder with --atmospheres")
+    engine = solved_engine() if treatment == "nlte" else ENGINES[treatment]()
     points = random_points(opened, treatment, n_points, np.random.default_rng(seed), metallicities)
     points = points[np.argsort(points[:, 2], kind="stable")]  # one opacity table after the other
     with counting("points", quiet=settings.verbosity < 0) as progress:

@@ -457,7 +457,7 @@ def reference_of(stars: list[Star], request: Request) -> Star | None:
 
 def deliver(settings: Settings, solutions: Sequence[Solution], provenance: Mapping[str, Any], request: Request) -> None:
     """Write tables and figures, print sheets or JSON."""
-    from specsolve.report import differences, tables
+    from specsolve.report import tables, treatments
     from specsolve.report.extras import write_extras
 
     if request.output == STDOUT:
@@ -465,16 +465,16 @@ def deliver(settings: Settings, solutions: Sequence[Solution], provenance: Mappi
     elif settings.json:
         content = tables.to_json(solutions, provenance)
         if request.treatment == "both":
-            content["differences"] = differences.rows_for_json(solutions)
+            content["differences"] = treatments.rows_for_json(solutions)
         click.echo(json.dumps(content, indent=1, allow_nan=False))
     else:
         print_sheets(solutions, True if request.sheets is None and settings.verbosity > 0 else request.sheets)
         if request.treatment == "both":
-            click.echo("\n".join(differences.words(solutions)))
+            click.echo("\n".join(treatments.words(solutions)))
     if request.output not in (None, STDOUT) and solutions:
         paths = tables.write_solutions(solutions, request.output, provenance)
         if request.treatment == "both":
-            paths["differences"] = differences.write_differences(request.output, provenance)
+            paths["differences"] = treatments.write_differences(request.output, provenance)
         paths |= write_extras(solutions, request.output, provenance)
         settings.say("wrote " + ", ".join(str(path) for path in paths.values()))
     if request.plots is not None:

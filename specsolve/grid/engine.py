@@ -169,9 +169,6 @@ def solved_engine() -> Engine:
 ENGINES = {"lte": lte_engine, "nlte": nlte_engine}
 """Engine of each treatment that can be built."""
 
-POINT_ENGINES = {"lte": lte_engine, "nlte": solved_engine}
-"""Engine of each treatment for atmospheres that are no nodes."""
-
 
 def codes_of_nodes(
     engine: Engine, atmospheres: Sequence[Any], lines: LineList, vmic: np.ndarray, dA: np.ndarray
