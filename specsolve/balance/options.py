@@ -36,6 +36,12 @@ class Options:
         Newton steps per candidate.
     max_seeds : int
         Starting points refined per star; more would be said in the search decision.
+    samples : int
+        Joint samples of the parameters a star (`specsolve.balance.samples`).
+    seed : int
+        Of these samples; each star has its own stream, so the order of the stars does not matter.
+    objective_map : bool
+        Map the objective over temperature and gravity, if both are free (`specsolve.balance.objective_map`).
 
     Examples
     --------
@@ -53,12 +59,17 @@ class Options:
     vmic_relation: bool = True
     max_iterations: int = 60
     max_seeds: int = 24
+    samples: int = 0
+    seed: int = 0
+    objective_map: bool = False
 
     def __post_init__(self) -> None:
         if self.loss not in ("huber", "student", "none"):
             raise ValueError(f"loss = {self.loss!r} is not one of 'huber', 'student', 'none'")
         if self.fe2_scale not in ("default", "alternative"):
             raise ValueError(f"fe2_scale = {self.fe2_scale!r} is not one of 'default', 'alternative'")
+        if self.samples < 0 or self.seed < 0:
+            raise ValueError("samples and seed must not be negative")
         for name in ("reduced_width_range", "excitation_range", "wavelength_range"):
             low, high = getattr(self, name)
             if not low < high:

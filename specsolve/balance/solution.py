@@ -9,11 +9,15 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from .line_results import LineResults
+
+if TYPE_CHECKING:
+    from .objective_map import ObjectiveMap
+    from .samples import Samples
 
 __all__ = [
     "Candidate",
@@ -278,6 +282,10 @@ class Solution:
         Solutions under other stated scales, e.g. "fe2_alternative"; empty where the list has none.
     options : mapping
         Full configuration, JSON-ready.
+    samples : Samples or None
+        Joint samples of the parameters, where asked for (`specsolve.balance.samples`).
+    objective_map : ObjectiveMap or None
+        The objective over temperature and gravity, where asked for (`specsolve.balance.objective_map`).
     provenance : mapping
         Slot that the writer fills (versions, time, command line).
     """
@@ -328,6 +336,8 @@ class Solution:
     fe2_scale: str = ""
     alternative_parameters: Mapping[str, np.ndarray] = field(default_factory=dict)
     options: Mapping[str, Any] = field(default_factory=dict)
+    samples: Samples | None = None
+    objective_map: ObjectiveMap | None = None
     provenance: Mapping[str, Any] = field(default_factory=dict)
 
     @property

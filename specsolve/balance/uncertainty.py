@@ -11,6 +11,7 @@ from specsolve.errors import OutOfGridError
 from .newton import STEP_UNIT
 from .problem import Problem, common_abundances
 from .residuals import balance_operator, residual_vector
+from .robust import FEW_FE2_LINES
 from .solution import PARAMETER_NAMES, Sensitivity
 from .state import BalanceState
 
@@ -24,6 +25,65 @@ SINGULAR_SHARE = 1e-12
 HUBER_INEFFICIENCY = 1.04
 
 
+def scatter_freedom(problem: Problem, state: BalanceState) -> np.ndarray:
+    """Degrees of freedom of the line-to-line term of each ion, shape (2,).
+
+    As it was estimated: pooled over the ions where either has few lines (`robust.line_to_line_terms`), else one by one.
+    """
+    n_first = int((state.used & ~problem.inputs.is_fe2).sum())
+    n_second = int((state.used & problem.inputs.is_fe2).sum())
+    n_plane = 3 if n_first > 3 else 1
+    if n_second >= FEW_FE2_LINES and n_first >= FEW_FE2_LINES:
+        return np.array([n_first - n_plane, n_second - 1], float)
+    pooled = (n_first - n_plane if n_first else 0) + (n_second - 1 if n_second else 0)
+    return np.full(2, float(pooled))
+
+
+def student_factors(problem: Problem, state: BalanceState, line_gain: np.ndarray) -> np.ndarray:
+    """Half-width of the 68 % interval over the standard error for each free parameter, shape (n_free,), at least 1.
+
+    Only the part of the variance that the line-to-line term makes is estimated; its share q gives the effective degrees of
+    freedom ``1 / sum(q_ion^2 / nu_ion)`` (Welch 1947, Biometrika 34, 28; Satterthwaite 1946, Biometrics Bulletin 2, 110).
+
+    Parameters
+    ----------
+    problem : Problem
+    state : BalanceState
+    line_gain : ndarray, shape (n_free, n_lines)
+        d theta / dA of each line, up to a unit of each row.
+    """
+    variances, place = state.weighting.variances, problem.inputs.place
+    gain = np.where(state.used, np.nan_to_num(line_gain), 0.0)
+    total = (gain**2) @ np.where(state.used, variances.star, 0.0)
+    freedom = np.maximum(scatter_freedom(problem, state), 1.0)
+    factors = np.ones(gain.shape[0])
+    if not (total > 0.0).all():
+        return factors
+    parts = np.stack([(gain**2) @ np.where(state.used & (place == ion), variances.scatter, 0.0) for ion in (0, 1)])
+    shares = parts / total
+    if freedom[0] == freedom[1]:  # one pooled term
+        inverse = shares.sum(axis=0) ** 2 / freedom[0]
+    else:
+        inverse = (shares**2 / freedom[:, None]).sum(axis=0)
+    return student_half_width(inverse)
+
+
+def student_half_width(inverse_freedom: np.ndarray) -> np.ndarray:
+    """Half-width of the central 68.27 % of Student's t with 1/inverse_freedom degrees of freedom.
+
+    By the expansion in 1/nu of its quantile about the normal one (Abramowitz & Stegun 1964, 26.7.5), at the quantile 1;
+    within 1 % for three degrees of freedom or more.
+
+    Examples
+    --------
+    >>> student_half_width(np.array([0.0, 0.1, 0.2])).round(3).tolist()
+    [1.0, 1.053, 1.111]
+    """
+    r = np.asarray(inverse_freedom, float)
+    # The four polynomials of 26.7.5 at x = 1.
+    return 1.0 + r * (2.0 / 4.0 + r * (24.0 / 96.0 + r * (24.0 / 384.0 + r * (-528.0 / 92160.0))))
+
+
 def parameter_covariances(problem: Problem, state: BalanceState) -> tuple[np.ndarray, np.ndarray]:
     """Cov_star and Cov_list, shape (4, 4) each; rows of fixed parameters are zero; nan where undetermined.
 
@@ -32,6 +92,9 @@ def parameter_covariances(problem: Problem, state: BalanceState) -> tuple[np.nda
     Outside terms. So ``Cov_list = K C_list K^T`` and ``Cov_star = K C_star K^T + H^-1 Lambda H^-1``; where
     residuals and
     free parameters are equally many, K is the inverse Jacobian.
+
+    The line-to-line term s is estimated from few lines, so Cov_star is widened by Student's factor f of each parameter,
+    ``Cov_ij f_i f_j``: its diagonal roots are half-widths of 68 % intervals (`student_factors`).
     """
     free = problem.free
     star, shared = np.zeros((4, 4)), np.zeros((4, 4))
@@ -56,7 +119,8 @@ def parameter_covariances(problem: Problem, state: BalanceState) -> tuple[np.nda
     loss = HUBER_INEFFICIENCY if problem.options.loss == "huber" else 1.0
     scale = np.outer(unit, unit)
     star_part = gain @ (loss * state.covariance_star[np.ix_(rows, rows)]) @ gain.T + inverse @ lam @ inverse
-    star[place] = star_part * scale
+    factors = student_factors(problem, state, gain @ state.operator[rows])
+    star[place] = star_part * scale * np.outer(factors, factors)
     shared[place] = gain @ state.covariance_list[np.ix_(rows, rows)] @ gain.T * scale
     return 0.5 * (star + star.T), 0.5 * (shared + shared.T)
 
