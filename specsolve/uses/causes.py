@@ -25,6 +25,7 @@ EVIDENCE = 6.0  # minus two ln of odds 20 : 1
 LARGEST_LN_FACTOR = 6.0  # ln f: errors too small by up to a factor 20
 LARGEST_SCATTER = 20.0  # of a held parameter, in median errors of the difference
 MOST_CAUSES = 3
+LEADING = 2  # single causes whose pairs with every other are tried
 FEWEST_FOR_SCATTER = 3  # stars; with fewer a held parameter has a mean offset alone
 
 
@@ -167,7 +168,8 @@ def fit_causes(differences: Differences, causes: Sequence[str]) -> Fit:
 def name_causes(differences: Differences, most: int = MOST_CAUSES) -> Verdict:
     """The causes that explain a set best.
 
-    Every single cause and every pair is tried, then further ones are added to the best as long as that pays.
+    Every single cause is tried, and every pair with one of the two best of them; then further ones are added as long as
+    that pays.
     """
     causes = [c for c in differences.vectors if np.isfinite(differences.vectors[c]).all(axis=1).any()]
     stated = tuple(c for c in causes if c in differences.stated)
@@ -180,8 +182,10 @@ def name_causes(differences: Differences, most: int = MOST_CAUSES) -> Verdict:
             fits[key] = fit_causes(differences, stated + key)
         return fits[key]
 
-    for size in range(min(2, most) + 1):
-        for extra in combinations(others, size):
+    fit(())
+    leading = sorted(others, key=lambda c: fit((c,)).criterion)[:LEADING] if most > 0 else []
+    for extra in combinations(others, 2) if most > 1 else ():
+        if set(extra) & set(leading):
             fit(extra)
     best = min(fits, key=lambda key: fits[key].criterion)
     while len(best) < min(most, len(others)) and len(best) >= 2:
