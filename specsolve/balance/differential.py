@@ -151,7 +151,7 @@ def reference_star(
         f"vmic {theta[3]:.3f} km/s"
     )
     zero_points = ZeroPoints.reference(
-        dict(zip(everything.keys[known].tolist(), values.tolist(), strict=True)), covariance, words
+        dict(zip(everything.keys[known].tolist(), values.tolist(), strict=True)), covariance, words, noise
     )
     sigma = np.sqrt(np.diag(theta_covariance))
     note = (

@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import numpy as np
 
+from .influence import leave_one_out
 from .line_results import LineResults
 from .minima import REASON_MEASURED, REASON_PREDICTED, FoundMinimum, Search
 from .problem import Problem
 from .residuals import deviations
 from .state import BalanceState
-from .uncertainty import line_influence
 
 REASON_OUTSIDE_TABLE = "abundance_outside_table"
 REASON_DOWN_WEIGHTED = "down_weighted"
@@ -66,7 +66,7 @@ def line_results(problem: Problem, search: Search | None, item: FoundMinimum | N
             "robust_weight": spread(weighting.robust, 0.0),
             "weight": spread(weighting.weights, 0.0),
             "d_abundance": spread(state.d_theta),
-            "influence": spread(line_influence(problem, state)),
+            "influence": spread(leave_one_out(problem, state)),
             "used": spread(state.used, False),
             "interpolation_flags": spread(state.flags, 0),
         }

@@ -11,8 +11,6 @@ from typing import Any, Protocol
 
 import numpy as np
 
-from specsolve.constants import SOLAR_IRON
-
 from .likelihood import minus_two_log_density
 from .options import Options
 from .outside import Outside, fixed_parameters, whitened_terms
@@ -190,6 +188,7 @@ class Problem:
             zero_point=zero,
             zero_point_covariance=covariance,
             differential=differential,
+            zero_point_noise=self.zero_points.noise_for(self.keys),
         )
 
     @cached_property
@@ -215,12 +214,6 @@ class Problem:
         """Predicted log10(W/lambda) when each ion has a common relative abundance; `common` has shape (2,)."""
         inputs = self.inputs
         abundance = common[inputs.place] + inputs.zero_point + self.log_gf_shift
-        if self.compiled:
-            from .kernel import widths_on_curves
-
-            grid = self.interpolator
-            offsets = abundance - SOLAR_IRON - float(theta[2])
-            return widths_on_curves(grid.curves(theta)[0], grid.dA, grid.dA_slopes, offsets)
         return self.interpolator.widths(theta, abundance)
 
     def balance(

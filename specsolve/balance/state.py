@@ -39,6 +39,8 @@ class LineInputs:
     zero_point_covariance : ndarray, shape (n_lines, n_lines), or None
         [dex^2].
     differential : bool
+    zero_point_noise : ndarray, or None for the diagonal of the covariance
+        Its part that is independent from line to line [dex^2].
     """
 
     is_fe2: np.ndarray
@@ -49,6 +51,7 @@ class LineInputs:
     zero_point: np.ndarray
     zero_point_covariance: np.ndarray | None
     differential: bool
+    zero_point_noise: np.ndarray | None = None
 
     @cached_property
     def place(self) -> np.ndarray:
@@ -67,10 +70,10 @@ class LineInputs:
 
     @cached_property
     def zero_point_variance(self) -> np.ndarray:
-        """Diagonal of the zero points' covariance."""
+        """The zero points' variances that are independent from line to line; these enter the weights."""
         if self.zero_point_covariance is None:
             return np.zeros(self.zero_point.shape)
-        return np.diag(self.zero_point_covariance)
+        return np.diag(self.zero_point_covariance) if self.zero_point_noise is None else self.zero_point_noise
 
 
 @dataclass(frozen=True, eq=False)
@@ -284,7 +287,7 @@ def _plain_parts(inputs, y, d_width, d_theta, predicted, used, loss, metallicity
     operator = balance_operator(*shape, weighting.weights, metallicity_from_fe1)
     response = balance_operator(*shape, response_weights(weighting, used, loss), metallicity_from_fe1)
     response = np.where(np.isfinite(response), response, operator)
-    # With a covariance of the zero points its diagonal sits in variances.gf already; the full matrix replaces it.
+    # With a covariance of the zero points its noise sits in variances.gf already; the full matrix replaces it.
     return (
         weighting,
         operator,

@@ -175,14 +175,17 @@ def test_noise_of_the_reference_is_carried(interpolator, rng):
     truth, grid = np.array([5850.0, 4.30, 0.1, 1.15]), interpolator.grid
     star = make_star(interpolator, truth, name="target")
     found, stated = [], []
-    for _ in range(25):
+    for _ in range(12):
         reference = make_star(interpolator, (5772.0, 4.438, 0.0, 1.0), name="reference", rng=rng, width_error=0.02)
+        # gf is right here, and said to be: what its errors would do to the vmic is no part of this scatter
+        reference = dataclasses.replace(reference, log_gf_error=np.full(len(reference), 1e-4))
         solution = solve(star, grid, reference=reference, reference_parameters=REFERENCE, options=WIDE)
         found.append(solution.parameters)
         stated.append(solution.errors_list)
     scatter = np.std((np.array(found) - truth) / SCALE, axis=0)
-    # 25 draws know a standard deviation to 14 %; three of these, and the stated one is a mean itself
-    np.testing.assert_allclose(scatter, np.mean(np.array(stated) / SCALE, axis=0), rtol=0.45)
+    # 12 draws know a standard deviation to 20 %; three of these
+    ratio = scatter / np.mean(np.array(stated) / SCALE, axis=0)
+    assert ((ratio > 0.4) & (ratio < 1.7)).all(), ratio
 
 
 def test_reference_note_and_covariance(interpolator, pair):
