@@ -412,6 +412,7 @@ def prepare(stars: list[Star], grid: Any, request: Request, options: Any) -> tup
     from specsolve.balance.own_sun import solar_lines
     from specsolve.balance.solution import PARAMETER_NAMES
     from specsolve.balance.solve import fixed_outside
+    from specsolve.grid.perturbed import perturbed_grid
 
     shared = {"treatment": request.treatment, "options": options}
     setting = Setting(**shared, known=known_of_all(request), sun=solar_lines(grid, request.treatment, options))
@@ -419,7 +420,8 @@ def prepare(stars: list[Star], grid: Any, request: Request, options: Any) -> tup
     if chosen is None:
         return with_outside(stars, request.outside), setting, []
     others = [star for star in stars if star.name != chosen.name]
-    found = reference_star(chosen, grid, request.treatment, request.at, options, parameter_errors=request.at_errors)
+    moved = perturbed_grid(grid, chosen.known.get(ALPHA))
+    found = reference_star(chosen, moved, request.treatment, request.at, options, parameter_errors=request.at_errors)
     at = dict(zip(PARAMETER_NAMES, found.theta.tolist(), strict=True))
     bare = replace(chosen, known={name: value for name, value in chosen.known.items() if name == ALPHA})
     own = solve_star(bare, grid, Setting(**shared, fixed=fixed_outside(at), sun=setting.sun))
