@@ -198,7 +198,7 @@ def check(
             opened,
             points,
             partial(converged_atmosphere, store),
-            POINT_ENGINES[treatment](),
+            engine,
             treatment,
             progress=progress,
         )
