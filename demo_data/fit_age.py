@@ -41,66 +41,59 @@ class Family:
         return i, np.clip((value - axis[i]) / (axis[i + 1] - axis[i]), 0.0, 1.0)
 
 
-def log_normal(points, centre, covariance):
-    """ln density at points (n, 3)."""
-    root = np.linalg.cholesky(covariance)
-    z = np.linalg.solve(root, (points - centre).T)
-    return -0.5 * np.sum(z**2, axis=0) - np.log(np.diag(root)).sum()
+def fit(stars, family, scan=17):
+    """ln age, its error, and [Fe/H].
 
-
-def fit(stars, family, start=(1.0, 0.0)):
-    """ln age, its error, and [Fe/H]; `stars` is a list of (probability, [(odds, theta, covariance)], modes)."""
-    modes = np.array([one[2] for one in stars])  # (star, 3, mode)
-    n_modes = modes.shape[2]
+    `stars` is a list of (probability of membership, [(odds, theta, covariance), ...], modes); modes of shape (3, n) are
+    errors that all stars share.
+    """
+    modes = np.array([one[2] for one in stars])
+    rows = [(i, member, *one) for i, (member, candidates, _) in enumerate(stars) for one in candidates]
+    owner = np.array([row[0] for row in rows])
+    first = np.flatnonzero(np.r_[True, np.diff(owner) > 0])
+    odds, theta = np.array([row[2] for row in rows]), np.array([row[3] for row in rows])
+    covariance = np.array([row[4] for row in rows])
+    member = np.clip([row[1] for row in rows], 1e-9, 1.0 - 1e-9)
+    inverse = np.linalg.inv(np.linalg.cholesky(covariance))
+    ln_root = np.log(np.einsum("ijj->ij", inverse)).sum(axis=1)
+    ln_off = np.log(odds * (1.0 - member)) - 0.5 * np.linalg.slogdet(covariance + np.diag(FIELD**2))[1]
 
     def objective(parameters):
-        ln_age, feh, shared = parameters[0], parameters[1], parameters[2:]
-        curve = family(ln_age, feh)
-        total = 0.5 * np.sum(shared**2)
-        for (member, candidates, _), mode in zip(stars, modes, strict=True):
-            moved = mode @ shared
-            of_star = []
-            for odds, theta, covariance in candidates:
-                on = logsumexp(log_normal(curve, theta - moved, covariance)) - np.log(len(curve))
-                off = log_normal(theta[None], theta, covariance + np.diag(FIELD**2))[0]
-                of_star += [np.log(odds * max(member, 1e-9)) + on, np.log(odds * max(1.0 - member, 1e-9)) + off]
-            total -= logsumexp(of_star)
-        return total
+        curve = family(parameters[0], parameters[1])
+        centre = theta - (modes @ parameters[2:])[owner]
+        z = np.einsum("cij,cpj->cpi", inverse, curve[None] - centre[:, None])
+        ln_on = logsumexp(-0.5 * np.sum(z**2, axis=2), axis=1) - np.log(len(curve)) + ln_root + np.log(odds * member)
+        of_star = np.logaddexp.reduceat(np.logaddexp(ln_on, ln_off), first)
+        return 0.5 * np.sum(parameters[2:] ** 2) - of_star.sum()
 
-    begin = np.r_[start, np.zeros(n_modes)]
-    # The likelihood is piecewise smooth between the tabulated curves: coarse starts, then a descent.
-    ages = np.linspace(np.log(family.ages[1]), np.log(family.ages[-2]), 9)
-    begin[1] = np.clip(np.median([c[0][1][2] for _, c, _ in stars]), family.metals[0], family.metals[-1])
-    begin[0] = min(ages, key=lambda a: objective(np.r_[a, begin[1:]]))
-    found = minimize(objective, begin, method="Powell", options={"xtol": 1e-4, "ftol": 1e-8})
-    best = found.x
+    rest = np.zeros(modes.shape[2])
+    metals = np.clip(np.median(theta[first, 2]), family.metals[0], family.metals[-1])
+    ages = np.linspace(np.log(family.ages[0]), np.log(family.ages[-1]), scan)
+    start = min(ages, key=lambda a: objective(np.r_[a, metals, rest]))
+    found = minimize(objective, np.r_[start, metals, rest], method="Powell", options={"xtol": 1e-4, "ftol": 1e-7})
+    best, step = found.x, 0.06
 
     def profile(ln_age):
-        rest = minimize(lambda p: objective(np.r_[ln_age, p]), best[1:], method="Powell", options={"xtol": 1e-3})
-        return rest.fun - found.fun
+        """How much worse the best fit at another age is."""
+        return minimize(lambda p: objective(np.r_[ln_age, p]), best[1:], method="Powell").fun - found.fun
 
-    step = 0.08
     curvature = (profile(best[0] + step) + profile(best[0] - step)) / step**2
-    return best[0], 1.0 / np.sqrt(max(curvature, 1e-9)), best[1]
+    return best[0], 1.0 / np.sqrt(max(curvature, 1e-3)), best[1]
 
 
 def from_handoff(table, candidates):
-    """Everything that the handoff holds."""
+    """Everything that the handoff holds. The modes come in the order of their size: three as shared errors, the rest as own."""
     stars = []
     for row in table:
         mine = candidates[(candidates["star"] == row["star"]) & (candidates["treatment"] == row["treatment"])]
+        modes = np.array(row["list_modes"])[:3]
+        rest = modes[:, 3:] @ modes[:, 3:].T
         of_star = [
-            (c["odds"], np.array([c["teff"], c["logg"], c["feh"]]), np.array(c["cov_star"])[:3, :3]) for c in mine
+            (c["odds"], np.array([c["teff"], c["logg"], c["feh"]]), np.array(c["cov_star"])[:3, :3] + rest)
+            for c in mine
         ]
-        stars.append((row["member_probability"], of_star, strongest(np.array(row["list_modes"])[:3])))
+        stars.append((row["member_probability"], of_star, modes[:, :3]))
     return stars
-
-
-def strongest(modes, number=3):
-    """The modes come in the order of their size; a few hold nearly all."""
-    out = np.zeros((3, number))
-    out[:, : min(number, modes.shape[1])] = modes[:, :number]
-    return out
 
 
 def from_point_values(table):

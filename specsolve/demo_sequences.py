@@ -24,9 +24,9 @@ if TYPE_CHECKING:
 TRUE_AGE = 2.5
 """Gyr; invented."""
 TURN_OFF = 5.2  # phase of the hottest point
-AGES = np.round(np.geomspace(1.25, 5.0, 25), 4)  # Gyr
-METALLICITIES = np.round(np.arange(-0.36, 0.121, 0.06), 3)
-N_PHASES = 111
+AGES = np.round(np.geomspace(1.25, 5.0, 17), 4)  # Gyr
+METALLICITIES = np.round(np.arange(-0.36, 0.121, 0.08), 3)
+N_PHASES = 56
 # Per unit of ln(age): cooling at the turn-off [K], its width in phase, and fading of the branches [dex in log g].
 TURN_OFF_COOLING, TURN_OFF_WIDTH = -1150.0, 2.6
 GIANT_COOLING, GIANT_FROM = -160.0, 8.0
