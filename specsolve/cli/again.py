@@ -9,8 +9,10 @@ import click
 import numpy as np
 
 from specsolve.cli.inputs import Inputs
+from specsolve.cli.options import delivery_options
+from specsolve.cli.request import Request
 from specsolve.cli.settings import Settings, common_options
-from specsolve.cli.solve import Request, carry_out, delivery_options
+from specsolve.cli.solve import carry_out
 from specsolve.errors import InputError
 
 if TYPE_CHECKING:

@@ -173,7 +173,7 @@ def solve_to_files(
     stars, grid
         As for `specsolve.balance.batch.solve_stream`.
     runs : sequence of Run
-    request : specsolve.cli.solve.Request
+    request : specsolve.cli.request.Request
     provenance : mapping
     """
     from specsolve.cli.progress import counting

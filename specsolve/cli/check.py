@@ -12,8 +12,8 @@ import numpy as np
 
 from specsolve.cli import parsing
 from specsolve.cli.inputs import coverage, coverage_message, read_inputs
+from specsolve.cli.options import input_options
 from specsolve.cli.settings import Settings, common_options
-from specsolve.cli.solve import input_options
 from specsolve.errors import EXIT_SOLVED, EXIT_UNSOLVED
 from specsolve.schema import SCHEMA
 

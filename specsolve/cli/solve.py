@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import sys
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -14,15 +14,16 @@ import click
 from specsolve.cli import bulk, parsing
 from specsolve.cli.bulk import make_executor as make_executor
 from specsolve.cli.inputs import Inputs, coverage, coverage_message, read_inputs, shared_notes
+from specsolve.cli.options import delivery_options, input_options
 from specsolve.cli.outside import (
-    known_of_all,
     measured_values,
     outside_options,
     priors,
     reference_parameters,
     said,
-    with_outside,
 )
+from specsolve.cli.reference import prepare
+from specsolve.cli.request import Request
 from specsolve.cli.settings import Settings, common_options, wants_colour
 from specsolve.errors import EXIT_INTERRUPTED, EXIT_SOLVED, EXIT_UNSOLVED, InputError, UsageError
 
@@ -31,157 +32,7 @@ if TYPE_CHECKING:
     from specsolve.balance.star import Star
 
 STDOUT = "-"
-REFERENCE_FLAG = "reference_star"
 LISTED_AT_MOST = 20
-
-
-@dataclass(frozen=True, kw_only=True)
-class Request:
-    """What a solve was asked for, as plain values; its `arguments` go into the output.
-
-    Attributes
-    ----------
-    treatment : str or None
-        lte, nlte or both; None for the grid's default.
-    loss : str
-    columns, ions, units : dict
-        Headings, spellings and units of the tables.
-    limits : dict
-        Line cuts by option name.
-    reference : str or None
-    at : dict or None
-        Parameters of the reference star.
-    fix : dict
-        Parameter to value.
-    at_errors : dict
-        Their errors, where given.
-    known : dict
-        Parameter to (value, error).
-    measured : dict
-        Parallax, numax, colours, ... with their errors, by name.
-    colour_scale : str or None
-    alpha : float or None
-        [alpha/Fe].
-    outside : str or None
-        Table of what is known of each star.
-    wanted : tuple of str
-        Names of stars; empty for all.
-    grid_path, output, plots, plot_format, sheets, workers, scheduler
-        Where things come from and go to.
-    samples : int
-        Joint samples a star.
-    seed : int or None
-        Of the samples.
-    """
-
-    treatment: str | None = None
-    loss: str = "huber"
-    columns: Mapping[str, str] = field(default_factory=dict)
-    ions: Mapping[str, str] = field(default_factory=dict)
-    units: Mapping[str, str] = field(default_factory=dict)
-    limits: Mapping[str, tuple[float, float]] = field(default_factory=dict)
-    reference: str | None = None
-    at: Mapping[str, float] | None = None
-    fix: Mapping[str, float] = field(default_factory=dict)
-    at_errors: Mapping[str, float] = field(default_factory=dict)
-    known: Mapping[str, tuple[float, float]] = field(default_factory=dict)
-    measured: Mapping[str, float] = field(default_factory=dict)
-    colour_scale: str | None = None
-    alpha: float | None = None
-    outside: str | None = None
-    wanted: tuple[str, ...] = ()
-    grid_path: str | None = None
-    output: str | None = None
-    plots: str | None = None
-    plot_format: str = "pdf"
-    sheets: bool | None = None
-    workers: int = 1
-    scheduler: str | None = None
-    samples: int = 0
-    seed: int | None = None
-
-    def arguments(self) -> dict[str, Any]:
-        """What decides the numbers, ready for JSON."""
-        return {
-            "treatment": self.treatment,
-            "loss": self.loss,
-            "columns": dict(self.columns),
-            "ions": dict(self.ions),
-            "units": dict(self.units),
-            "limits": {name: list(pair) for name, pair in self.limits.items()},
-            "reference": self.reference,
-            "reference_parameters": dict(self.at) if self.at else None,
-            "reference_errors": dict(self.at_errors),
-            "fix": dict(self.fix),
-            "known": {name: list(pair) for name, pair in self.known.items()},
-            "measured": dict(self.measured),
-            "colour_scale": self.colour_scale,
-            "alpha": self.alpha,
-            "stars": list(self.wanted),
-            "samples": self.samples,
-            "seed": self.seed,
-        }
-
-    @classmethod
-    def from_arguments(cls, arguments: Mapping[str, Any], **delivery: Any) -> Request:
-        """Inverse of `arguments`; headings and units of the first tables are not needed again."""
-        return cls(
-            treatment=arguments["treatment"],
-            loss=arguments["loss"],
-            limits={name: tuple(pair) for name, pair in arguments["limits"].items()},
-            reference=arguments["reference"],
-            at=arguments["reference_parameters"],
-            at_errors=arguments["reference_errors"],
-            measured=arguments["measured"],
-            colour_scale=arguments["colour_scale"],
-            alpha=arguments["alpha"],
-            fix=arguments["fix"],
-            known={name: tuple(pair) for name, pair in arguments["known"].items()},
-            samples=arguments.get("samples", 0),
-            seed=arguments.get("seed"),
-            **delivery,
-        )
-
-
-def input_options(function: Any) -> Any:
-    """Options that say how to read the tables; ``solve`` and ``check`` share them."""
-    for option in (
-        click.option("--fix", "fixed", multiple=True, metavar="NAME=VALUE", help="Hold teff, logg, feh or vmic."),
-        click.option(
-            "--cut",
-            "cuts",
-            multiple=True,
-            metavar="NAME=LOW:HIGH",
-            help="Lines kept: reduced_width (predicted), excitation [eV], wavelength [Angstrom].",
-        ),
-        click.option("--unit", "units", multiple=True, metavar="OURS=UNIT", help="Unit of a column without one."),
-        click.option("--ion", "ions", multiple=True, metavar='THEIRS="Fe I"', help="Another spelling of an ion."),
-        click.option("--column", "columns", multiple=True, metavar="OURS=THEIRS", help="Another column heading."),
-        click.option(
-            "--treatment",
-            type=click.Choice(["lte", "nlte", "both"]),
-            help="Line formation; both gives a row each and the differences. Default: nlte if the grid has it.",
-        ),
-        click.option("--grid", "grid_path", metavar="DIR", help="A response grid of your own."),
-    ):
-        function = option(function)
-    return function
-
-
-def delivery_options(function: Any) -> Any:
-    """Options that say where the result goes."""
-    for option in (
-        click.option(
-            "--sheets/--overview", default=None, help="A sheet a star, or a line a star; default sheets up to three."
-        ),
-        click.option("--plot-format", type=click.Choice(["pdf", "png", "svg"]), default="pdf", show_default=True),
-        click.option("--plots", metavar="DIR", help="Draw one page a star into this folder."),
-        click.option(
-            "--output", metavar="FILE", help="Write FILE.ecsv and its lines, candidates, decisions; - for stdout."
-        ),
-    ):
-        function = option(function)
-    return function
 
 
 @click.command(
@@ -396,65 +247,6 @@ def solve_all(
     solutions = first + [done[place] for place in sorted(done)]
     status = {place: (one.star, one.status, one.reason) for place, one in enumerate(solutions)}
     return solutions, bulk.Outcome(status, interrupted, len(first) + total)
-
-
-def prepare(stars: list[Star], grid: Any, request: Request, options: Any) -> tuple[list[Star], Any, list[Solution]]:
-    """The stars to solve, what they share, and the reference star's own solution if there is one.
-
-    Raises
-    ------
-    InputError
-        If the reference star is not in the tables, or its parameters are not known.
-    """
-    from specsolve.balance.batch import Setting, solve_star
-    from specsolve.balance.differential import reference_star
-    from specsolve.balance.outside_known import ALPHA
-    from specsolve.balance.own_sun import solar_lines
-    from specsolve.balance.solution import PARAMETER_NAMES
-    from specsolve.balance.solve import fixed_outside
-    from specsolve.grid.perturbed import perturbed_grid
-
-    shared = {"treatment": request.treatment, "options": options}
-    setting = Setting(**shared, known=known_of_all(request), sun=solar_lines(grid, request.treatment, options))
-    chosen = reference_of(stars, request)
-    if chosen is None:
-        return with_outside(stars, request.outside), setting, []
-    others = [star for star in stars if star.name != chosen.name]
-    moved = perturbed_grid(grid, chosen.known.get(ALPHA))
-    found = reference_star(chosen, moved, request.treatment, request.at, options, parameter_errors=request.at_errors)
-    at = dict(zip(PARAMETER_NAMES, found.theta.tolist(), strict=True))
-    bare = replace(chosen, known={name: value for name, value in chosen.known.items() if name == ALPHA})
-    own = solve_star(bare, grid, Setting(**shared, fixed=fixed_outside(at), sun=setting.sun))
-    own = replace(own, flags=(REFERENCE_FLAG, *own.flags), cov_list=found.covariance, notes=(*own.notes, found.note))
-    return with_outside(others, request.outside), replace(setting, zero_points=found.zero_points), [own]
-
-
-def reference_of(stars: list[Star], request: Request) -> Star | None:
-    """The reference star: one of the tables, the one of another table, or the packaged Sun; None without one.
-
-    Raises
-    ------
-    InputError
-        If there is no such star, or the other table has several.
-    """
-    from specsolve.balance.own_sun import SUN_NAME, solar_star
-
-    if request.reference is None:
-        return None
-    same = [star for star in stars if star.name == request.reference]
-    if same:
-        return same[0]
-    path = Path(request.reference)
-    if path.is_file():
-        from specsolve.star_table import read_stars
-
-        found = read_stars(path, columns=request.columns, ions=request.ions, units=request.units)
-        if len(found) != 1:
-            raise InputError(f"{path} has {len(found)} stars; a table of the reference star has one", path=path)
-        return found[0]
-    if request.reference.strip().lower() == SUN_NAME.lower():
-        return solar_star()
-    raise InputError(f"the reference star '{request.reference}' is neither in the tables nor a file")
 
 
 def deliver(settings: Settings, solutions: Sequence[Solution], provenance: Mapping[str, Any], request: Request) -> None:
