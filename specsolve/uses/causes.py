@@ -131,7 +131,8 @@ def fit_causes(differences: Differences, causes: Sequence[str]) -> Fit:
             y = y - np.nan_to_num(differences.vectors[cause])
     y = np.where(known, y, 0.0)
     both = known[:, :, None] & known[:, None, :]
-    unit = np.sqrt(np.nanmedian(np.where(known, np.einsum("ijj->ij", differences.covariances), np.nan), axis=0))
+    diagonal = np.einsum("ijj->ij", differences.covariances)
+    unit = np.sqrt([np.median(diagonal[of, k]) if (of := known[:, k]).any() else 1.0 for k in range(4)])
     unit = np.where(np.isfinite(unit) & (unit > 0.0), unit, 1.0)
     y = y / unit
     own = np.where(both, differences.covariances / np.outer(unit, unit), np.eye(4) * ~known[:, :, None])

@@ -15,7 +15,7 @@ from specsolve.balance.solution import SOLVED, TIED, Decision, Solution
 from specsolve.balance.solve import open_grid
 from specsolve.errors import InputError
 
-from .local import Point, point_at, solve_near
+from .local import Point, candidate_at, point_at, solve_near
 from .mixture import CommonMetallicity, Metallicities, candidate_odds, common_metallicity, metallicities
 from .results import Results, filled, rebuild, used_lines
 from .sequence import Curve, distance
@@ -207,7 +207,7 @@ def cluster(
 def _member(results: Results, row: int, problem: Problem) -> Member:
     entry = results.stars[row]
     theta = results.theta[row]
-    found = [(0, point_at(problem, theta, used_lines(results, row, problem)), 1.0)]
+    found = reported = [(0, point_at(problem, theta, used_lines(results, row, problem)), 1.0)]
     if entry["status"] == TIED:
         table = results.rows_of(results.candidates, row)
         odds = filled(table["odds"])
@@ -216,9 +216,10 @@ def _member(results: Results, row: int, problem: Problem) -> Member:
         for i in near:
             at = np.array([float(table[name][i]) for name in ("teff", "logg", "feh", "vmic")])
             same = int(table["candidate"][i]) == 0
-            point = point_at(problem, theta, used_lines(results, row, problem)) if same else solve_near(problem, at)
-            if point.known:
+            point = point_at(problem, theta, used_lines(results, row, problem)) if same else candidate_at(problem, at)
+            if np.isfinite(point.cov_star).all():
                 found.append((int(table["candidate"][i]), point, float(odds[i])))
+        found = found or reported
     total = sum(odd for *_, odd in found)
     return Member(
         row=row,

@@ -8,7 +8,15 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from specsolve.balance.minima import enough_lines, local_solve, minimum_flags, preliminary_lines, search
+from specsolve.balance.minima import (
+    enough_lines,
+    local_solve,
+    minimum_flags,
+    predicted_lines,
+    preliminary_lines,
+    search,
+)
+from specsolve.balance.newton import Minimum
 from specsolve.balance.outside import Outside
 from specsolve.balance.problem import Problem
 from specsolve.balance.solution import OUTSIDE_GRID, PARAMETER_NAMES, SOLVED, UNSOLVED
@@ -58,6 +66,16 @@ def point_at(problem: Problem, theta: np.ndarray, allowed: np.ndarray | None = N
     state = problem.balance(np.asarray(theta, float), allowed)
     star, shared = parameter_covariances(problem, state)
     return Point(np.asarray(theta, float), star, shared, state, SOLVED)
+
+
+def candidate_at(problem: Problem, theta: np.ndarray) -> Point:
+    """A candidate of the solve at its own parameters, with the lines that the cut on predicted strength keeps there."""
+    theta = np.asarray(theta, float)
+    preliminary = preliminary_lines(problem)
+    state = problem.balance(theta, preliminary)
+    there = Minimum(theta, state, 0.0, True, np.zeros(4, bool), 0)
+    allowed = predicted_lines(problem, there, preliminary)
+    return point_at(problem, theta, allowed if enough_lines(problem, allowed) else preliminary)
 
 
 def solve_near(problem: Problem, start: np.ndarray) -> Point:

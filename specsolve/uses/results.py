@@ -16,6 +16,7 @@ import numpy as np
 from specsolve.balance.differential import reference_star
 from specsolve.balance.options import Options
 from specsolve.balance.outside import Outside
+from specsolve.balance.outside_known import outside_from_known
 from specsolve.balance.problem import Problem
 from specsolve.balance.solution import PARAMETER_NAMES, SOLVED, TIED, Solution
 from specsolve.balance.star import Star, nearest_lines
@@ -145,19 +146,28 @@ def star_of(lines: Table, name: str, grid: ResponseGrid) -> Star:
     )
 
 
-def outside_of_row(text: str) -> tuple[Outside, ...]:
-    """The outside knowledge that a row of ``X.ecsv`` records; what followed the parameters is kept at its value there."""
-    known = []
+def outside_of_row(text: str, known: str = "") -> tuple[Outside, ...]:
+    """The outside knowledge that a row of ``X.ecsv`` records.
+
+    Parameters
+    ----------
+    text : str
+        Column `outside`, as JSON.
+    known : str
+        Column `known`, as JSON: what the input said of the star. Terms that follow the parameters (a parallax, colours)
+        come back as such from it; of others that do so the value at the solution is kept.
+    """
+    terms = list(outside_from_known(json.loads(known or "{}")))
+    followed = {(name, term.source) for term in terms for name in term.names}
     for entry in json.loads(text or "[]"):
-        name, mean, sigma = entry["name"], entry["mean"], entry["sigma"]
-        if mean is None or sigma is None:
+        name, mean, sigma, source = (entry[key] for key in ("name", "mean", "sigma", "source"))
+        if mean is None or sigma is None or (name, source) in followed:
             continue
         fixed = sigma == 0.0
-        source = entry["source"]
-        known.append(
+        terms.append(
             Outside.fixed(source, **{name: mean}) if fixed else Outside.gaussian(source, **{name: (mean, sigma)})
         )
-    return tuple(known)
+    return tuple(terms)
 
 
 def check_grid(results: Results, grid: ResponseGrid) -> None:
@@ -213,7 +223,9 @@ def rebuild(results: Results, grid: ResponseGrid, rows: Sequence[int] | None = N
                 star=star_of(results.rows_of(results.lines, int(row)), str(entry["star"]), grid),
                 grid=moved,
                 treatment=treatment,
-                outside=outside_of_row(str(entry["outside"])),
+                outside=outside_of_row(
+                    str(entry["outside"]), str(entry["known"]) if "known" in results.stars.colnames else ""
+                ),
                 zero_points=zero_points[treatment],
                 options=options,
                 compiled=compiled,

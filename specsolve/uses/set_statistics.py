@@ -10,6 +10,7 @@ HUBER_K = 1.345  # 95 % efficiency for normal errors; Huber 1964, Ann. Math. Sta
 MAD_TO_SIGMA = 1.4826  # standard deviation of a normal distribution over its median absolute deviation
 PASSES = 60
 FEWEST_FOR_TREND = 5
+TINY = 1e-9  # stands for an error of zero, in K, dex and km/s
 
 
 @dataclass(frozen=True)
@@ -43,7 +44,7 @@ def location(values: np.ndarray, errors: np.ndarray) -> Location:
     True
     """
     ok = np.isfinite(values) & np.isfinite(errors)
-    x, s = values[ok], errors[ok]
+    x, s = values[ok], np.maximum(errors[ok], TINY)
     nan = float("nan")
     if x.size == 0:
         return Location(nan, nan, nan, nan, 0)
@@ -78,8 +79,6 @@ def _beyond(deviation: np.ndarray, errors: np.ndarray, weights: np.ndarray) -> f
     def excess(variance: float) -> float:
         return float(np.sum(weights * deviation**2 / (errors**2 + variance))) - wanted
 
-    if np.any(errors <= 0.0):
-        errors = np.maximum(errors, 1e-12 + 1e-9 * float(np.max(np.abs(deviation))))
     if wanted <= 0.0 or excess(0.0) <= 0.0:
         return 0.0
     low, high = 0.0, float(np.sum(deviation**2)) / wanted + 1e-30
@@ -97,7 +96,7 @@ def trend(x: np.ndarray, values: np.ndarray, errors: np.ndarray) -> tuple[float,
     ok = np.isfinite(x) & np.isfinite(values) & np.isfinite(errors)
     if ok.sum() < FEWEST_FOR_TREND or np.ptp(x[ok]) == 0.0:
         return float("nan"), float("nan")
-    x, y, s = x[ok], values[ok], errors[ok]
+    x, y, s = x[ok], values[ok], np.maximum(errors[ok], TINY)
     design = np.column_stack([np.ones(x.size), x - x.mean()])
     w = np.ones(x.size)
     total = s**2 + location(y, s).beyond ** 2

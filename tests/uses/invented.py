@@ -18,8 +18,10 @@ from specsolve.grid.store import ResponseGrid
 from specsolve.grid.write import write_grid
 from specsolve.uses.counterfactuals import Case, changed, vector
 from specsolve.uses.local import Point, point_at, solve_near
-from tests.grid.synthetic import LOGG, MH, TEFF, synthetic_lines, synthetic_log_widths
+from tests.grid.synthetic import synthetic_lines, synthetic_log_widths
 
+TEFF, LOGG, MH = np.arange(4500.0, 6501.0, 250.0), np.arange(2.0, 5.01, 0.5), np.arange(-2.5, 0.51, 0.5)
+LEFT_OUT = ((6500.0, 2.0, 0.5),)  # a missing node, for what must not be bridged
 WIDTH_NOISE = 0.03  # of every width
 GF_ERROR = 0.05  # dex; that of the synthetic lines
 USABLE = (-5.95, -4.85)
@@ -31,7 +33,7 @@ def departure(lines, teff, logg, mh):
     return np.where(lines.ion == "Fe I", size[..., None] * (1.0 - 0.06 * lines.excitation_potential), 0.0)
 
 
-def two_treatments(folder: Path, *, missing: tuple = (), n_fe1: int = 70, n_fe2: int = 14) -> ResponseGrid:
+def two_treatments(folder: Path, *, missing: tuple = LEFT_OUT, n_fe1: int = 50, n_fe2: int = 12) -> ResponseGrid:
     """A grid of the synthetic formulas with treatments lte and nlte, both invented."""
     lines = synthetic_lines(n_fe1, n_fe2, seed=5)
     axes = {"teff": TEFF, "logg": LOGG, "mh": MH, "vmic": DEFAULT_VMIC, "dA": DEFAULT_DA}
@@ -47,7 +49,7 @@ def two_treatments(folder: Path, *, missing: tuple = (), n_fe1: int = 70, n_fe2:
         reasons[treatment] = {}
         for node in np.ndindex(codes[treatment].shape[:3]):
             at = (TEFF[node[0]], LOGG[node[1]], MH[node[2]])
-            if (at[1] == 0.0 and at[0] > 5000.0) or at in missing:
+            if at in missing:
                 codes[treatment][node] = MISSING
                 reasons[treatment][node] = "left out of the invented grid"
     write_grid(

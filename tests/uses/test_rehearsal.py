@@ -59,7 +59,7 @@ def test_lte_analysis_of_nlte_truth_is_shifted_as_one_solve_says(grid):
 
 
 def test_points_outside_and_beside_missing_nodes_are_reported(grid):
-    rows = [(5900.0, 0.2, -0.1, 1.5), (8200.0, 4.0, 0.0, 1.5), (5710.0, 4.38, -0.14, 1.07)]
+    rows = [(6400.0, 2.2, 0.3, 1.5), (8200.0, 4.0, 0.0, 1.5), (5710.0, 4.38, -0.14, 1.07)]
     made = rehearse(points(rows), grid, noise=NOISE, trials=2, full_search=False)
     assert made.table["status"].tolist() == ["missing_node", "outside_grid", "rehearsed"]
     assert "not bridged" in made.table["reason"][0]
