@@ -49,7 +49,7 @@ def test_the_sun_at_its_nominal_parameters(packaged, figure):
     star = solar_star()
     grade = packaged.lines.grade[match_lines(star, packaged.lines).index]
     star = dataclasses.replace(star, use=(grade >= 1) & (grade <= 2))
-    solution = solve(star, packaged, fix=FIXED_SUN)
+    solution = solve(star, packaged, treatment="lte", fix=FIXED_SUN)
     source = f"widths: {DWARFS}"
     figure("Sun, fixed: A(Fe I)", solution.fe1.abundance, "dex", limit="7.46 +- 0.07", source=source)
     figure("Sun, fixed: A(Fe II)", solution.fe2.abundance, "dex", limit="7.46 +- 0.07", source=source)
@@ -68,7 +68,7 @@ def test_the_sun_blind(packaged, figure):
     star = solar_star()
     grade = packaged.lines.grade[match_lines(star, packaged.lines).index]
     star = dataclasses.replace(star, use=(grade >= 1) & (grade <= 2))
-    solution = solve(star, packaged)
+    solution = solve(star, packaged, treatment="lte")
     assert solution.status == "solved"
     asked = ("5772 +- 100", "4.44 +- 0.10: not met", "", "0.8 to 1.2")
     for name, value, error, unit, limit in zip(NAMES, solution.parameters, solution.errors, UNITS, asked, strict=True):
@@ -153,7 +153,7 @@ def test_giants(packaged, reference, figure):
     """[Fe/H] > -1.7, absolute log gf of the paper, against its LTE parameters."""
     parameters = published(reference, "giants")
     stars = [s for s in read_stars(reference / "stars" / "giants_lines.ecsv") if parameters[s.name][2] > -1.7]
-    solutions = solve(stars, packaged)
+    solutions = solve(stars, packaged, treatment="lte")
     difference = np.array([s.parameters - parameters[s.star] for s in solutions])
     assert all(s.status == "solved" for s in solutions)
     median, worst = np.median(np.abs(difference), axis=0), np.max(np.abs(difference), axis=0)
@@ -188,7 +188,7 @@ def colour_temperature_difference(v_minus_k: np.ndarray, mean_teff: float) -> np
 def test_cluster_giants(cluster_grid, reference, figure):
     """Red-clump giants of three clusters with published log gf and width errors: members must agree with each other."""
     table = Table.read(reference / "stars" / "cluster_giants_parameters.ecsv")
-    solutions = solve(reference / "stars" / "cluster_giants_lines.ecsv", cluster_grid)
+    solutions = solve(reference / "stars" / "cluster_giants_lines.ecsv", cluster_grid, treatment="lte")
     assert all(s.status == "solved" for s in solutions)
     cluster = {str(row["star"]): (str(row["cluster"]), float(row["feh"])) for row in table}
     colour = {str(row["star"]): float(row["V"] - row["Ks"]) for row in table}

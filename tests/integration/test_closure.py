@@ -75,7 +75,7 @@ def closed(slow_fraction) -> list[Closed]:
     items = items[:: len(items) // count][:count] if count < len(items) else items
     interpolator = Interpolator(grid, "lte", [0])
     stars = [star_at(item, grid.lines, f"{i}")[0] for i, item in enumerate(items)]
-    solutions = specsolve.solve(stars, grid)
+    solutions = specsolve.solve(stars, grid, treatment="lte")
     return [
         Closed(item.theta, solution, interpolator.flags(item.theta), len(star))
         for item, star, solution in zip(items, stars, solutions, strict=True)

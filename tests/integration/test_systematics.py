@@ -45,7 +45,7 @@ def solved(power: float, chosen) -> np.ndarray:
         assert model.status in ("converged", "imported"), model.reason
         stars.append(star_at(OffNode(CENTRE, vmic, model), grid.lines, f"{teff:g}/{logg:g}")[0])
         truth.append([teff, logg, MH, vmic])
-    solutions = specsolve.solve(stars, grid)
+    solutions = specsolve.solve(stars, grid, treatment="lte")
     assert all(one.status == "solved" for one in solutions), [one.reason for one in solutions]
     return np.array([one.parameters for one in solutions]) - np.array(truth)
 
