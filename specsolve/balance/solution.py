@@ -175,8 +175,8 @@ class Decision:
     ----------
     step : int
     kind : str
-        "search", "set_aside", "likelihood", "vmic_relation", "choose", "tied", "line_cut", "down_weight", "fix",
-        "outside".
+        "search", "set_aside", "likelihood", "same_answer", "vmic_relation", "choose", "tied", "line_cut",
+        "down_weight", "fix", "outside".
     subject : str
         The candidate ("candidate 1"), line key or parameter concerned.
     value, threshold : float

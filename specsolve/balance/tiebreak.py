@@ -1,13 +1,26 @@
-"""Which candidate is reported, by a rule in four steps, each recorded.
+"""Which candidate is reported, by a rule in four steps, each recorded in the decisions.
 
-1. Candidates outside the grid or not converged are set aside, and so are those beside missing nodes if there are
-others (kept, flagged). Outside
-knowledge is in already.
-2. Near-equal means 2 (ln L_best - ln L) < 6, odds of 20 : 1. If none is near the best, the best is it.
-3. Else a published vmic(teff, logg) relation enters as a Gaussian; it decides only beyond the same 6, and is
-skipped if any of the
-   candidates lies outside its range.
-4. Else the star is tied: all near-equal candidates with odds proportional to L x prior x sqrt|Cov|.
+The rule
+--------
+0. All minima of the search are candidates. What is known from elsewhere is in already: it took part in finding them, and
+   below "ln L" stands for the density of the measured widths on the lines that all candidates have in common, times
+   the Gaussian of the Outside terms.
+1. Set aside (kept in the list, with the reason) is a candidate that lies at a face of the grid, whose way led into missing
+   nodes, that did not converge, or whose lines leave a parameter undetermined; beside a missing node too, if there are
+   others. If nothing is left, the best of them is reported with status "outside_grid" or "unsolved".
+2. Near-equal to the best are candidates with 2 (ln L_best - ln L) < 6, odds of 20 : 1. Two of them that differ by less
+   than the errors of either (squared distance in its covariance of star and list below 1) are one answer: the better
+   stands for both, the other is marked "same_answer". If one answer is left, it is reported.
+3. Else a published relation of vmic with teff and logg enters each of them as a Gaussian, as wide as the scatter
+   about the relation (0.20 km/s, giants 0.25) and the candidate's own error of vmic in quadrature. If the best is then better
+   than the second by 6 or more, it is reported. The step is skipped if vmic is fixed, if the option `vmic_relation` is
+   off, or if one of the candidates lies outside the range of the relations (`specsolve.balance.relations`).
+4. Else the star is "tied": the candidates are listed, the most likely first, with odds proportional to
+   L x prior x sqrt|Cov| (the mass of each, not its peak; the prior is the relation where step 3 applied), and the exit
+   code of the program says so. A tied star carries the parameters of the first, with the status beside them.
+
+Everything is a function of the widths alone: no random number, no order of lines or of starting points takes part;
+exact equality is broken by the parameters in ascending order.
 """
 
 from __future__ import annotations
@@ -28,6 +41,8 @@ SETTING_ASIDE = (
     ("not_converged", "the refinement did not converge"),
     ("undetermined", "the lines that have an abundance there do not determine all parameters"),
 )
+SAME_ANSWER = 1.0  # squared distance, in the errors of star and list, below which two minima are one answer
+SAME_ANSWER_FLAG = "same_answer"
 BESIDE_MISSING = ("beside_missing_node", "beside a missing node of the grid")
 
 
@@ -116,9 +131,9 @@ def rank(problem: Problem, search: Search) -> Ranking:
         )
     else:
         deltas = {i: 2.0 * (_posterior(problem, rows[0]) - _posterior(problem, rows[i])) for i in eligible}
-        near = [i for i in eligible if deltas[i] < problem.options.near_equal]
+        close = [i for i in eligible if deltas[i] < problem.options.near_equal]
         for i in eligible[1:]:
-            word = "near-equal" if i in near else "rejected"
+            word = "near-equal" if i in close else "rejected"
             log.append(
                 (
                     "likelihood",
@@ -129,10 +144,27 @@ def rank(problem: Problem, search: Search) -> Ranking:
                     "2 (ln L_best - ln L) on common lines",
                 )
             )
+        near = []
+        for i in close:
+            twin, distance = _nearest_answer(problem, rows, near, i)
+            if distance < SAME_ANSWER:
+                rows[i] = replace(rows[i], flags=(*rows[i].flags, SAME_ANSWER_FLAG))
+                log.append(
+                    (
+                        "same_answer",
+                        _name(i),
+                        distance,
+                        SAME_ANSWER,
+                        _name(twin),
+                        "differs from a better candidate by less than the errors",
+                    )
+                )
+            else:
+                near.append(i)
         odds = _odds(problem, rows, near)
         if len(near) == 1:
             log.append(
-                ("choose", _name(0), 0.0, problem.options.near_equal, "chosen", "no other candidate is near the best")
+                ("choose", _name(0), 0.0, problem.options.near_equal, "chosen", "no other answer is near the best")
             )
         else:
             chosen, by_relation, entry = _relation_step(problem, rows, near)
@@ -162,7 +194,10 @@ def rank(problem: Problem, search: Search) -> Ranking:
         move = [chosen] + [i for i in range(len(rows)) if i != chosen]
         candidates, found = [candidates[i] for i in move], tuple(found[i] for i in move)
         names = {_name(old): _name(new) for new, old in enumerate(move)}
-        log = [(kind, names.get(subject, subject), *rest) for kind, subject, *rest in log]
+        log = [
+            (kind, names.get(subject, subject), value, threshold, names.get(outcome, outcome), reason)
+            for kind, subject, value, threshold, outcome, reason in log
+        ]
     candidates = [replace(row, index=i) for i, row in enumerate(candidates)]
     decisions = tuple(
         Decision(
@@ -175,6 +210,25 @@ def rank(problem: Problem, search: Search) -> Ranking:
 
 def _name(index: int) -> str:
     return f"candidate {index}"
+
+
+def _nearest_answer(problem: Problem, rows: list[Candidate], answers: list[int], i: int) -> tuple[int, float]:
+    """The answer nearest to a candidate, and the squared distance in the covariance that makes it larger."""
+    found = (-1, np.inf)
+    for k in answers:
+        away = (rows[i].parameters - rows[k].parameters)[problem.free]
+        distance = max(_squared_distance(problem, one, away) for one in (rows[i], rows[k]))
+        found = min(found, (k, distance), key=lambda pair: pair[1])
+    return found
+
+
+def _squared_distance(problem: Problem, row: Candidate, away: np.ndarray) -> float:
+    block = row.covariance[np.ix_(problem.free, problem.free)]
+    sigma = np.sqrt(np.diag(block))
+    if not (np.isfinite(sigma).all() and (sigma > 0.0).all()):
+        return float("inf")
+    away = away / sigma
+    return float(away @ np.linalg.pinv(block / np.outer(sigma, sigma), hermitian=True) @ away)
 
 
 def _posterior(problem: Problem, row: Candidate) -> float:

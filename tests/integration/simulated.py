@@ -81,6 +81,7 @@ def measured(
     name: str,
     gf_errors: np.ndarray | None = None,
     grades: int = 3,
+    noise: np.random.Generator | None = None,
 ) -> Simulated | None:
     """A star measured once.
 
@@ -98,15 +99,18 @@ def measured(
         True minus listed log gf [dex]; drawn anew if not given.
     grades : int
         Worst grade of the lines that the observer has.
+    noise : Generator, optional
+        Of all errors, so that the same lines can be measured again; `rng` if not given.
 
     Returns
     -------
     Simulated, or None where too few lines qualify.
     """
     n = len(lines)
+    noise = noise or rng
     if gf_errors is None:
-        gf_errors = regime.gf_share * lines.log_gf_error * rng.normal(size=n)
-    own = regime.scatter * rng.normal(size=n)
+        gf_errors = regime.gf_share * lines.log_gf_error * noise.normal(size=n)
+    own = regime.scatter * noise.normal(size=n)
     # Lines are chosen by what the list predicts: a choice by what is measured would itself bias the parameters.
     expected, log_rw = (widths(SOLAR_IRON + truth[2] + d) for d in (np.zeros(n), gf_errors + own))
     share = rng.uniform(*regime.noise)
@@ -124,7 +128,7 @@ def measured(
     chosen = np.sort(np.concatenate(places))
     width = scale[chosen] * 10.0 ** log_rw[chosen]
     error = np.hypot(share * width, regime.floor_ma)
-    observed = width + error * rng.normal(size=chosen.size)
+    observed = width + error * noise.normal(size=chosen.size)
     good = observed > 0.0
     chosen, observed, error = chosen[good], observed[good], error[good]
     star = Star.from_arrays(
