@@ -21,8 +21,8 @@ from specsolve.spectrum.barycentre import correction
 from specsolve.spectrum.measure import measure_lines
 from specsolve.spectrum.options import MeasureOptions
 from specsolve.spectrum.orders import merged, overlap_notes
-from specsolve.spectrum.pixels import ReadOptions
 from specsolve.spectrum.predict import Guess, Prediction, predict
+from specsolve.spectrum.raw import ReadOptions
 from specsolve.spectrum.read import read_spectrum
 from specsolve.spectrum.types import FLAG_NOT_COVERED, Measurements, Spectrum
 from specsolve.spectrum.velocity import SEARCH_RANGE, Velocity, measure_velocity, to_rest

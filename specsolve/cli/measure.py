@@ -149,7 +149,7 @@ def make_tasks(
         raise UsageError("--velocity and --velocity-range exclude each other")
     from specsolve.lines.reading import default_line_list, read_line_list
     from specsolve.measuring import Task
-    from specsolve.spectrum.pixels import ReadOptions
+    from specsolve.spectrum.raw import ReadOptions
     from specsolve.spectrum.velocity import SEARCH_RANGE
 
     search = parsing.interval(velocity_range, "--velocity-range", "-100:300") if velocity_range else SEARCH_RANGE

@@ -16,8 +16,8 @@ import numpy as np
 
 from specsolve.errors import OutputError, UsageError
 from specsolve.report.panels import BAND_COLOUR, DROPPED_COLOUR, FAINT, GHOST_COLOUR, INK, ION_COLOURS
+from specsolve.spectrum.mean_profile import LIGHT_SPEED_KMS, rough_level
 from specsolve.spectrum.types import FLAG_NOT_COVERED, FLAG_SATURATED, words_of_flags
-from specsolve.spectrum.velocity import LIGHT_SPEED_KMS, rough_level
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes

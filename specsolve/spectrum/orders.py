@@ -6,8 +6,8 @@ from itertools import pairwise
 
 import numpy as np
 
+from .mean_profile import LIGHT_SPEED_KMS, rough_level
 from .types import Spectrum
-from .velocity import LIGHT_SPEED_KMS, rough_level
 
 LEAST_OVERLAP = 30  # pixels
 LEVEL_DIFFERENCE = 0.05

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -13,13 +12,13 @@ from specsolve.errors import SpectrumError
 from specsolve.lines.wavelengths import LIMITS_ANGSTROM, vacuum_to_air
 
 from .noise import estimate_noise
+from .raw import AIR, LOG_UNIT, VACUUM, Raw, RawPiece, ReadOptions
 from .types import Spectrum
 
 PLAUSIBLE_ANGSTROM = (2900.0, 25000.0)
 """Where ground-based spectra of iron lines lie; medians outside it point to another unit."""
 UNIT_HINTS = ((290.0, 2500.0, "nm"), (0.29, 2.5, "micron"), (3.46, 4.4, "log10(Angstrom)"))
 """Median wavelength (low, high) in a unit that the file does not state, and what it probably is."""
-LOG_UNIT = "log10(Angstrom)"
 LEAST_PIXELS = 50
 """Fewer pixels in an order cannot hold a line and its continuum."""
 LEAST_USABLE = 0.05
@@ -33,72 +32,6 @@ NORMALISED_LEVELS = (0.75, 1.35)
 """90th percentile of the flux in pieces of a normalised spectrum: noise lifts it, lines lower it."""
 NORMALISED_SHARE = 0.7
 """Share of the pieces that must be at that level."""
-AIR, VACUUM = "air", "vacuum"
-
-
-@dataclass(frozen=True, kw_only=True)
-class ReadOptions:
-    """What the user says about a spectrum; `None` where the file decides.
-
-    Attributes
-    ----------
-    star : str or None
-        Name; the file's stem by default.
-    medium : str or None
-        "air" or "vacuum".
-    unit : str or None
-        Of the wavelengths: any unit of length, or "log10(Angstrom)".
-    resolving_power : float or None
-    signal_to_noise : float or None
-        Per pixel in the continuum; replaces errors of the file.
-    normalised : bool or None
-    columns : mapping
-        Our column (wavelength, flux, sigma, mask, order) to theirs.
-    """
-
-    star: str | None = None
-    medium: str | None = None
-    unit: str | None = None
-    resolving_power: float | None = None
-    signal_to_noise: float | None = None
-    normalised: bool | None = None
-    columns: Mapping[str, str] = field(default_factory=dict)
-
-
-@dataclass(frozen=True, kw_only=True, eq=False)
-class RawPiece:
-    """Columns of one order as the file has them; `sigma` and `mask` may be missing."""
-
-    wavelength: np.ndarray
-    flux: np.ndarray
-    sigma: np.ndarray | None = None
-    mask: np.ndarray | None = None
-
-
-@dataclass(frozen=True, kw_only=True, eq=False)
-class Raw:
-    """A file before any decision.
-
-    Attributes
-    ----------
-    pieces : list of RawPiece
-    unit : str or None
-        Unit that the file states for the wavelengths.
-    medium : str or None
-        "air" or "vacuum", where the file tells.
-    unit_assumed : bool
-        `unit` is a default of the reader, not the file's word.
-    header : mapping
-        Keywords, plain values.
-    notes : tuple of str
-    """
-
-    pieces: list[RawPiece]
-    unit: str | None
-    medium: str | None
-    unit_assumed: bool = False
-    header: Mapping[str, Any] = field(default_factory=dict)
-    notes: tuple[str, ...] = ()
 
 
 def assemble(raw: Raw, path: str | Path, options: ReadOptions) -> Spectrum:

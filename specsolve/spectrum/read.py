@@ -15,7 +15,8 @@ import numpy as np
 
 from specsolve.errors import SpectrumError
 
-from .pixels import LOG_UNIT, Raw, RawPiece, ReadOptions, assemble
+from .pixels import assemble
+from .raw import LOG_UNIT, Raw, RawPiece, ReadOptions
 from .read_table import columns_of, medium_of, plain_header, read_text, table_to_raw
 from .types import Spectrum
 

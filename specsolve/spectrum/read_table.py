@@ -13,7 +13,7 @@ import numpy as np
 
 from specsolve.errors import SpectrumError
 
-from .pixels import AIR, LOG_UNIT, VACUUM, Raw, RawPiece
+from .raw import AIR, LOG_UNIT, VACUUM, Raw, RawPiece
 
 if TYPE_CHECKING:
     from astropy.table import Table

@@ -10,7 +10,7 @@ from astropy.io import fits
 from astropy.table import Table
 
 from specsolve.errors import SpectrumError
-from specsolve.spectrum.pixels import ReadOptions
+from specsolve.spectrum.raw import ReadOptions
 from specsolve.spectrum.read import read_spectrum
 
 N = 2000

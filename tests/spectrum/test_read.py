@@ -14,7 +14,8 @@ from astropy.table import QTable, Table
 from specsolve.lines import air_to_vacuum
 from specsolve.spectrum.noise import estimate_noise
 from specsolve.spectrum.orders import merged, overlap_notes
-from specsolve.spectrum.pixels import ReadOptions, is_normalised, resolving_power
+from specsolve.spectrum.pixels import is_normalised, resolving_power
+from specsolve.spectrum.raw import ReadOptions
 from specsolve.spectrum.read import read_spectrum
 from specsolve.spectrum.read_table import medium_of
 from specsolve.spectrum.types import Spectrum

@@ -7,8 +7,9 @@ import pytest
 
 from specsolve.errors import SpectrumError
 from specsolve.lines.reading import default_line_list
+from specsolve.spectrum.mean_profile import LIGHT_SPEED_KMS
 from specsolve.spectrum.types import Spectrum
-from specsolve.spectrum.velocity import LIGHT_SPEED_KMS, measure_velocity, to_rest
+from specsolve.spectrum.velocity import measure_velocity, to_rest
 from tests.spectrum.made_up_spectra import gaussian_flux, listed, made_up, rough_widths, wavelengths
 
 LINES = default_line_list()
