@@ -123,7 +123,7 @@ def _profiled(
     state = _balance(problem, theta, allowed, previous)
     if state is None:
         return None
-    z, jacobian = whitened_system(problem, state)
+    z, jacobian = whitened_system(problem, state)  # _balance has found the covariance positive
     for _ in range(MAX_STEPS if inner else 0):
         scaled = jacobian[:, inner] * STEP_UNIT[inner]
         normal = scaled.T @ scaled
@@ -150,6 +150,9 @@ def _balance(problem: Problem, theta: np.ndarray, allowed: np.ndarray, previous:
     try:
         state = problem.balance(theta, allowed, previous)
         needed = problem.active & np.isfinite(previous.residuals)
-        return state if state.used.any() and np.isfinite(state.residuals[needed]).all() else None
+        if not (state.used.any() and np.isfinite(state.residuals[needed]).all()):
+            return None
+        np.linalg.cholesky(state.covariance[np.ix_(needed, needed)])
+        return state
     except (OutOfGridError, np.linalg.LinAlgError):
         return None

@@ -21,8 +21,7 @@ from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
-from scipy.special import logsumexp
-from scipy.stats import chi2
+from scipy.special import gammaincinv, logsumexp
 
 from specsolve.errors import OutOfGridError
 
@@ -85,7 +84,7 @@ class Posterior:
             return estimate[None, :]
         freedom = np.maximum(scatter_freedom(self.problem, state), 1.0)
         middle = (np.arange(SCATTER_NODES) + 0.5) / SCATTER_NODES
-        of_ion = np.array([nu / chi2.ppf(middle, nu) for nu in freedom])
+        of_ion = np.array([nu / (2.0 * gammaincinv(0.5 * nu, middle)) for nu in freedom])
         return of_ion.T[:, self.problem.inputs.place[self.used]] * estimate
 
     def log_density(self, theta: np.ndarray) -> float:

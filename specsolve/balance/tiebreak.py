@@ -131,7 +131,7 @@ def rank(problem: Problem, search: Search) -> Ranking:
         )
     else:
         deltas = {i: 2.0 * (_posterior(problem, rows[0]) - _posterior(problem, rows[i])) for i in eligible}
-        close = [i for i in eligible if deltas[i] < problem.options.near_equal]
+        close = [i for i in eligible if deltas[i] < problem.options.near_equal] or eligible[:1]
         for i in eligible[1:]:
             word = "near-equal" if i in close else "rejected"
             log.append(

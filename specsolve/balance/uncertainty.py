@@ -39,7 +39,7 @@ def scatter_freedom(problem: Problem, state: BalanceState) -> np.ndarray:
     return np.full(2, float(pooled))
 
 
-def student_factors(problem: Problem, state: BalanceState, line_gain: np.ndarray) -> np.ndarray:
+def student_factors(problem: Problem, state: BalanceState, line_gain: np.ndarray, variances: np.ndarray) -> np.ndarray:
     """Half-width of the 68 % interval over the standard error for each free parameter, shape (n_free,), at least 1.
 
     Only the part of the variance that the line-to-line term makes is estimated; its share q gives the effective degrees of
@@ -51,16 +51,17 @@ def student_factors(problem: Problem, state: BalanceState, line_gain: np.ndarray
     state : BalanceState
     line_gain : ndarray, shape (n_free, n_lines)
         d theta / dA of each line, up to a unit of each row.
+    variances : ndarray, shape (n_free,)
+        Diagonal of Cov_star without the factors, in the same units.
     """
-    variances, place = state.weighting.variances, problem.inputs.place
+    place, scatter = problem.inputs.place, state.weighting.variances.scatter
     gain = np.where(state.used, np.nan_to_num(line_gain), 0.0)
-    total = (gain**2) @ np.where(state.used, variances.star, 0.0)
     freedom = np.maximum(scatter_freedom(problem, state), 1.0)
     factors = np.ones(gain.shape[0])
-    if not (total > 0.0).all():
+    if not (variances > 0.0).all():
         return factors
-    parts = np.stack([(gain**2) @ np.where(state.used & (place == ion), variances.scatter, 0.0) for ion in (0, 1)])
-    shares = parts / total
+    parts = np.stack([(gain**2) @ np.where(state.used & (place == ion), scatter, 0.0) for ion in (0, 1)])
+    shares = np.minimum(parts / variances, 1.0)
     if freedom[0] == freedom[1]:  # one pooled term
         inverse = shares.sum(axis=0) ** 2 / freedom[0]
     else:
@@ -119,7 +120,7 @@ def parameter_covariances(problem: Problem, state: BalanceState) -> tuple[np.nda
     loss = HUBER_INEFFICIENCY if problem.options.loss == "huber" else 1.0
     scale = np.outer(unit, unit)
     star_part = gain @ (loss * state.covariance_star[np.ix_(rows, rows)]) @ gain.T + inverse @ lam @ inverse
-    factors = student_factors(problem, state, gain @ state.operator[rows])
+    factors = student_factors(problem, state, gain @ state.operator[rows], np.diag(star_part))
     star[place] = star_part * scale * np.outer(factors, factors)
     shared[place] = gain @ state.covariance_list[np.ix_(rows, rows)] @ gain.T * scale
     return 0.5 * (star + star.T), 0.5 * (shared + shared.T)
