@@ -173,11 +173,14 @@ def fits_bytes(tables: Mapping[str, Table]) -> bytes:
         plain = Plain(tables[kind], copy=True)
         meta = plain.meta
         plain.meta = {}
+        for name in plain.colnames:
+            if str(plain[name].unit) == "dex":  # not a unit of the FITS standard
+                plain[name].unit = None
         unit = fits.table_to_hdu(plain)
         unit.name = kind.upper()
         unit.header["KIND"], unit.header["SCHEMA"] = meta["kind"], meta["schema"]
-        for i, note in enumerate(meta.get("notes", [])):
-            unit.header[f"HIERARCH NOTE {i + 1}"] = note.encode("ascii", "replace").decode()[:60]
+        for note in meta.get("notes", []):
+            unit.header.add_comment(note.encode("ascii", "replace").decode())
         unit.header.add_history(json.dumps(meta["provenance"], sort_keys=True).encode("ascii", "replace").decode())
         units.append(unit)
     stream = io.BytesIO()
