@@ -159,6 +159,7 @@ def build_departures(
     recipe = recipe or Recipe()
     directory = Path(directory)
     parts = directory / PARTS
+    sources = sources_hash(SOURCES)  # of the program as it is now, whatever is edited meanwhile
     _claim(parts, departures_key(atmospheres, recipe, size))
     shape = tuple(atmospheres.axes[name].size for name in AXES)
     wanted = list(np.ndindex(*shape)) if nodes is None else [tuple(map(int, node)) for node in nodes]
@@ -192,7 +193,8 @@ def build_departures(
             finally:
                 for future in futures:
                     future.cancel()
-    store = assemble(directory, atmospheres, list(models), recipe, size, provenance)
+    header = {"sources_sha256": sources, **(provenance or {})}
+    store = assemble(directory, atmospheres, list(models), recipe, size, header)
     for path in parts.iterdir():
         path.unlink()
     parts.rmdir()
@@ -218,7 +220,6 @@ def assemble(
         "atom_source": packaged_atom(size).source,
         "recipe": asdict(recipe),
         "atmospheres_identity": atmospheres.identity,
-        "sources_sha256": sources_hash(SOURCES),
         **(provenance or {}),
     }
     return write_departures(directory, atmospheres.axes, values, records, header)
