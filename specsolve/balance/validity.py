@@ -14,7 +14,7 @@ LOW_LOGG = 1.5
 K_DWARF_TEFF_K, K_DWARF_LOGG = 5000.0, 4.3
 METAL_POOR_FEH = -1.5
 NLTE_GIANT_TEFF_K, NLTE_GIANT_LOGG = 5000.0, 3.0
-NLTE_UNVALIDATED_FEH = -3.0
+NLTE_UNVALIDATED_FEH, NLTE_UNVALIDATED_LOGG, NLTE_UNVALIDATED_TEFF_K = -3.0, 1.0, 6500.0
 FEW_FE2_LINES, FEW_FE1_LINES = 4, 20
 STRONG_INFLUENCE = 1.0  # one line moves a parameter by more than this many star errors
 
@@ -50,8 +50,11 @@ def validity_statements(parameters: np.ndarray, treatment: str) -> tuple[tuple[s
                 "give a temperature from elsewhere (Bergemann et al. 2012)",
             )
         )
-    if feh < NLTE_UNVALIDATED_FEH and treatment != "lte":
-        table.append(("nlte_unvalidated", "[Fe/H] < -3: departures from LTE are not validated there"))
+    beyond = feh < NLTE_UNVALIDATED_FEH or logg < NLTE_UNVALIDATED_LOGG or teff > NLTE_UNVALIDATED_TEFF_K
+    if beyond and treatment != "lte":
+        table.append(
+            ("nlte_unvalidated", "departures from LTE are not validated at [Fe/H] < -3, log g < 1 or above 6500 K")
+        )
     if logg < NLTE_GIANT_LOGG:
         table.append(("alpha_law", "giant: [alpha/Fe] off the atmospheres' law by 0.2 moves log g by 0.05-0.1"))
     return tuple(flag for flag, _ in table), tuple(text for _, text in table)
