@@ -25,6 +25,7 @@ RESIDUAL_WORDS = (
 )
 STATUS_STYLE = {"solved": "green", "tied": "yellow", "outside_grid": "red", "unsolved": "red"}
 LISTED_LINES = 8
+LEAST_SHARE = 0.005  # of a parameter from elsewhere, that is worth a word
 LISTED_INFLUENCES = 4
 SHEETS_AT_MOST = 3
 
@@ -105,6 +106,19 @@ def print_overview(solutions: Sequence[Solution], console: Console) -> None:
         console.print(f"- {note} ({whom})", style="dim", markup=False)
 
 
+def outside_words(one: Solution) -> str:
+    """Which part of each free parameter comes from elsewhere, and a given [alpha/Fe]; empty where nothing does."""
+    parts = [
+        f"{NAMES[name]} {100 * share:.0f} %"
+        for name, share in zip(NAMES, one.outside_share, strict=True)
+        if name not in one.fixed and share > LEAST_SHARE
+    ]
+    words = [f"share from elsewhere: {', '.join(parts)}; the rest comes from the lines"] if parts else []
+    if one.alpha_given:
+        words.append(f"[alpha/Fe] {one.alpha:+.2f} as given")
+    return "; ".join(words)
+
+
 def remarks(one: Solution) -> list[str]:
     """Limits and notes of a star, without the count of lines (shown anyway) and without tracebacks (in the table)."""
     return [
@@ -135,6 +149,9 @@ def print_sheet(one: Solution, console: Console) -> None:
             continue  # its row says "fixed"
         words = ", ".join(f"{key} {_short(value)}" for key, value in entry.items())
         console.print(f"  from elsewhere: {words}", markup=False)
+    shared = outside_words(one)
+    if shared:
+        console.print(f"  {shared}", markup=False)
     for name, shift in one.systematics.items():
         if not np.any(shift):
             continue  # everything is fixed

@@ -80,3 +80,12 @@ def test_the_most_influential_line_moves_the_star_most(one):
     size = np.abs(one.lines.influence / one.errors_star).max(axis=1)
     assert first == np.argmax(size)
     assert one.lines.used[most_influential(one)].all()
+
+
+def test_what_comes_from_elsewhere_is_said(one):
+    assert "share from elsewhere" not in shown([one])
+    share = np.array([0.35, 0.98, 0.0, 1.0])
+    text = shown([replace(one, outside_share=share, fixed=("vmic",), alpha=0.2, alpha_given=True)])
+    assert (
+        "share from elsewhere: Teff 35 %, log g 98 %; the rest comes from the lines; [alpha/Fe] +0.20 as given" in text
+    )
