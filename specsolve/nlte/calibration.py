@@ -5,7 +5,8 @@ parameters, which no spectroscopy enters, and of the Sun; and what others have f
 kept for tests: the stars of Korn, Shi & Gehren 2003 (HD 103095, HD 19445, HD 84937, Procyon) and the metal-poor standards of
 Sakari et al. 2018.
 
-    python -m specsolve.nlte.calibration      # prints the likelihood curve (about two minutes)
+    python -m specsolve.nlte.calibration                        # prints the likelihood curve (one minute)
+    python -m specsolve.nlte.calibration --widths REFERENCE     # remakes the table of widths of HD 122563
 
 The microturbulence of each star and S_H is the one that leaves no slope of A(Fe I) with strength. Both offsets share the
 error of the scales of gf of the two ions. 1D, plane-parallel: what convection does to giants is not in the errors.
@@ -13,6 +14,7 @@ error of the scales of gf of the two ions. 1D, plane-parallel: what convection d
 
 from __future__ import annotations
 
+import argparse
 import csv
 import sys
 from collections.abc import Sequence
@@ -53,6 +55,15 @@ VMIC_STEPS = np.array([-0.6, -0.3, 0.0, 0.3, 0.6])  # km/s about the guess of ea
 #: Abundances relative to that of the atmosphere [dex]; in parts, because the profile points reach as far as the strongest
 #: line of a call needs.
 ABUNDANCE_PARTS = np.linspace(-1.0, 1.1, 22).reshape(2, 11)
+
+
+#: Star tables with widths of HD 122563, and its name there; the header of the packaged table names the papers.
+WIDTH_SOURCES = (("giants_lines.ecsv", "HD122563"), ("metal_poor_2014_lines.ecsv", "HD 122563"))
+WIDTHS_HEADER = """# Equivalent widths of HD 122563 for lines of the default list, which supplies their log gf.
+# Sources: Casey et al. 2014, ApJ 784, 19 (1); Roederer et al. 2014, AJ 147, 136 (2).
+# Units: wavelength_air Angstrom, excitation_potential eV, equivalent_width mA (0.001 Angstrom).
+wavelength_air,ion,excitation_potential,equivalent_width,source
+"""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -269,8 +280,39 @@ def describe(curve: Curve) -> str:
     return "\n".join(rows)
 
 
-def main() -> None:
-    """Print the likelihood curve."""
+def widths_table(reference: Path) -> str:
+    """Text of the packaged table of widths of HD 122563, from the star tables below `reference`."""
+    from astropy.table import Table
+
+    lines = default_line_list()
+    rows = []
+    for number, (file, name) in enumerate(WIDTH_SOURCES, start=1):
+        table = Table.read(reference / "stars" / file, format="ascii.ecsv")
+        for row in table[table["star"] == name]:
+            same = (lines.ion == row["ion"]) & (np.abs(lines.wavelength_air - row["wavelength_air"]) < 0.05)
+            same &= np.abs(lines.excitation_potential - row["excitation_potential"]) < 0.02
+            for i in np.flatnonzero(same)[:1]:
+                rows.append(
+                    (
+                        lines.wavelength_air[i],
+                        row["ion"],
+                        lines.excitation_potential[i],
+                        row["equivalent_width"],
+                        number,
+                    )
+                )
+    rows.sort()
+    return WIDTHS_HEADER + "".join("{:.3f},{},{:.4f},{:.1f},{}\n".format(*row) for row in rows)
+
+
+def main(arguments: list[str] | None = None) -> None:
+    """Print the likelihood curve, or remake the table of widths."""
+    parser = argparse.ArgumentParser(description=__doc__.split("\n")[0])
+    parser.add_argument("--widths", type=Path, metavar="REFERENCE", help="remake the table of widths instead")
+    options = parser.parse_args(arguments)
+    if options.widths is not None:
+        (DATA / STARS[0].widths).write_text(widths_table(options.widths), encoding="ascii")
+        return
     sys.stdout.write(describe(likelihood_curve()) + "\n")
 
 
