@@ -41,7 +41,11 @@ def departures(surroundings, atom):
 
 @pytest.mark.parametrize(
     ("node", "factor", "highest"),
-    [((5750.0, 4.5, 0.0), 1e6, -9.0), (NODE, 1e6, -4.0), (NODE, 1e9, -9.0)],
+    [
+        ((5750.0, 4.5, 0.0), 1e6, -9.0),
+        pytest.param(NODE, 1e6, -4.0, marks=pytest.mark.slow),
+        pytest.param(NODE, 1e9, -9.0, marks=pytest.mark.slow),
+    ],
 )
 def test_strong_collisions_enforce_equilibrium(figure, node, factor, highest):
     """The packaged atom. At the very top of a metal-poor atmosphere of low gravity even 1e6 times the rates are not

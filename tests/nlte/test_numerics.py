@@ -1,13 +1,17 @@
 """What the numerical choices of the equilibrium cost in abundance: frequencies, thin lines, sampling, convergence."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
 from specsolve.atmosphere.store import AtmosphereStore
 from specsolve.constants import SOLAR_IRON
 from specsolve.lines.reading import default_line_list
-from specsolve.matter.composition import composition_for
-from specsolve.nlte import equilibrium, line_grid, photoionization
+from specsolve.matter.composition import ELEMENTS, composition_for
+from specsolve.matter.equation_of_state import ion_density
+from specsolve.nlte import background, equilibrium, line_grid, photoionization
+from specsolve.nlte.background import backgrounds
 from specsolve.nlte.corrections import Growth
 from specsolve.nlte.departures import DEPTHS, LineDepartures, at_depths
 from specsolve.nlte.line_levels import line_levels
@@ -61,3 +65,31 @@ def test_numerical_choices(name, monkeypatch, figure):
         figure(f"{name}: {choice}, mean {np.nanmean(shift):+.4f}, largest {np.nanmax(np.abs(shift)):.4f}, rms", rms, "dex",
                limit=f"{limit:g}")  # fmt: skip
         assert rms < limit, choice
+
+
+@pytest.mark.parametrize(("name", "limit"), [("subgiant", 0.005), ("hot dwarf", 0.005)])
+def test_neglected_feedback_on_the_ultraviolet(name, limit, monkeypatch, figure):
+    """The background counts Fe I as in LTE. Fewer atoms let more ultraviolet through: with the Fe I lines, continua and
+    residual scaled by the departures found, the corrections grow by less than what S_H leaves open."""
+    teff, logg, mh, _ = NODES[name]
+    atmosphere, own = AtmosphereStore.packaged().get(teff, logg, mh), SOLAR_IRON + mh
+    reference = growth(name, monkeypatch)
+    found = equilibrium.solve_equilibrium(atmosphere, composition_for(mh), packaged_atom())
+    neutral = np.exp(found.log_b[0])
+    iron = ELEMENTS.index("Fe")
+
+    def scaled_density(gas, ion, abundance):
+        return ion_density(gas, ion, abundance) * (neutral if ion == "Fe I" else 1.0)
+
+    def scaled(grid, beside, gas, *rest):
+        ions = gas.ions.copy()
+        ions[iron, 0] *= neutral
+        return backgrounds(grid, beside, replace(gas, ions=ions), *rest)
+
+    monkeypatch.setattr(background, "ion_density", scaled_density)
+    monkeypatch.setattr(equilibrium, "backgrounds", scaled)
+    widths = reference.widths(own)
+    used = (widths > -6.2) & (widths < -4.8)
+    shift = (growth(name, monkeypatch).abundances(widths) - own)[used]
+    figure(f"{name}: feedback of the departures on the background, mean", np.nanmean(shift), "dex", limit=f"{limit:g}")
+    assert -1e-3 < np.nanmean(shift) < limit
