@@ -29,6 +29,7 @@ MEMBER_FROM = 0.5  # probability from which the common [Fe/H] is fed
 DECIDED = 6.0  # minus two ln of odds 20 : 1, as in the rule of the solve
 COMPILED_FROM = 30  # stars
 FEH = 2  # place in theta
+FEH_STEP = 0.02  # dex, for the response to what is fed
 FED_SOURCE = "common [Fe/H] of the other members"
 Progress = Callable[[int, int], None]
 
@@ -61,6 +62,8 @@ class Member:
         Parameters before anything of the cluster came in.
     prior : (float, float)
         [Fe/H] that was fed, and its standard deviation; nan if none was.
+    follow : ndarray, shape (4,)
+        Change of the parameters when that [Fe/H] changes by one dex.
     decided_by : str
         What settled a tied star.
     sequence : (float, str)
@@ -78,6 +81,7 @@ class Member:
     probability: float
     before: np.ndarray
     prior: tuple[float, float] = (float("nan"), float("nan"))
+    follow: np.ndarray = field(default_factory=lambda: np.zeros(4))
     decided_by: str = ""
     sequence: tuple[float, str] = (float("nan"), "")
     decisions: tuple[Decision, ...] = ()
@@ -180,6 +184,7 @@ def cluster(
             progress(i + 1, len(rows))
     common: dict[str, CommonMetallicity] = {}
     notes = []
+    unfed = list(members)
     for treatment in dict.fromkeys(member.treatment for member in members):
         places = [i for i, member in enumerate(members) if member.treatment == treatment]
         data = _metallicities([members[i] for i in places])
@@ -192,10 +197,10 @@ def cluster(
             members[i] = _weighed(members[i], found, k, data.field)
             if decide_by_sequence:
                 members[i] = _by_sequence(members[i], sequence)
+            unfed[i] = members[i]
             if feed_metallicity and members[i].probability >= MEMBER_FROM:
                 members[i] = _fed(members[i], found, k)
-    points = [member.point for member in members]
-    modes = list_modes([member.problem for member in members], points)
+    modes = _shared_modes(problems, unfed, members, common)
     if sequence:
         members = [
             replace(m, sequence=distance(m.point.theta, m.point.cov_star + m.point.cov_list, sequence)) for m in members
@@ -231,6 +236,30 @@ def _member(results: Results, row: int, problem: Problem) -> Member:
         probability=float("nan"),
         before=theta.copy(),
     )
+
+
+def _shared_modes(
+    problems: list[Problem], unfed: list[Member], members: list[Member], common: dict[str, CommonMetallicity]
+) -> np.ndarray:
+    """Modes of the shared errors, shape (n_rows, 4, n_modes).
+
+    The common [Fe/H] has the errors of the list too: what a star gets of it follows them, or they would seem to shrink.
+    """
+    n = len(members)
+    if not any(np.isfinite(member.prior[0]) for member in members):
+        return list_modes(problems, [member.point for member in members])
+    both = list_modes(
+        [*problems, *(member.problem for member in members)],
+        [*(member.point for member in unfed), *(member.point for member in members)],
+    )
+    before, modes = both[:n], both[n:].copy()
+    for i, member in enumerate(members):
+        if np.isfinite(member.prior[0]):
+            others = [k for k in range(n) if k != i and members[k].treatment == member.treatment]
+            weight = np.array([members[k].probability for k in others])
+            mean = weight @ before[others, FEH] / weight.sum()
+            modes[i] += np.outer(member.follow, mean)
+    return modes
 
 
 def _metallicities(members: list[Member]) -> Metallicities:
@@ -300,6 +329,11 @@ def _fed(member: Member, common: CommonMetallicity, place: int) -> Member:
         candidates.append(replace(candidate, point=point) if point.known else candidate)
     if candidates[0].point is member.candidates[0].point:
         return member
+    theta = candidates[0].point.theta
+    moved = solve_near(
+        problem.replace(outside=(*member.problem.outside, Outside.gaussian(FED_SOURCE, feh=(mean + FEH_STEP, sigma)))),
+        theta,
+    )
     step = Decision(
         step=0, kind="outside", subject="feh", value=mean, threshold=sigma, outcome="Gaussian term", reason=FED_SOURCE
     )
@@ -308,6 +342,7 @@ def _fed(member: Member, common: CommonMetallicity, place: int) -> Member:
         problem=problem,
         candidates=tuple(candidates),
         prior=(mean, sigma),
+        follow=np.nan_to_num((moved.theta - theta) / FEH_STEP),
         decisions=(*member.decisions, step),
     )
 

@@ -239,7 +239,8 @@ def _zero_points(results: Results, grid: ResponseGrid, treatment: str, options: 
     for row, flags in enumerate(results.stars["flags"].tolist()):
         if REFERENCE_FLAG in flags.split(", ") and results.stars["treatment"][row] == treatment:
             star = star_of(results.rows_of(results.lines, row), str(results.stars["star"][row]), grid)
-            at = dict(zip(PARAMETER_NAMES, results.theta[row].tolist(), strict=True))
+            # Its vmic is found again, so that the errors of the zero points hold that of the vmic.
+            at = dict(zip(PARAMETER_NAMES[:3], results.theta[row].tolist()[:3], strict=True))
             return reference_star(star, grid, treatment, at, options).zero_points
     if not str(results.stars["zero_point_source"][0]).startswith("solar iron"):
         raise InputError(

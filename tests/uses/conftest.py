@@ -15,7 +15,7 @@ CLUSTER = {
     "dwarf": (5640.0, 4.46, CLUSTER_FEH, 1.02),
     "subgiant": (5480.0, 3.71, CLUSTER_FEH, 1.18),
     "giant": (4870.0, 2.64, CLUSTER_FEH, 1.47),
-    "stranger": (5120.0, 3.12, -1.35, 1.36),
+    "stranger": (5120.0, 3.12, -0.92, 1.36),
 }
 
 
