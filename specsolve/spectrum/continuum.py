@@ -19,6 +19,9 @@ import numpy as np
 SHALLOW = 0.005
 """Predicted depths above this say how often and how deep lines are that nobody predicted."""
 LEAST_UNKNOWN_DEPTH = 0.01
+LEFT_OVER = 0.5
+"""Part of the unpredicted absorption that the strengths of known neighbours and lines found do not take up; from
+computed spectra (`tests/spectrum/trials.py`)."""
 PART_LIMITS = (1e-3, 0.3)  # of the pixels with unpredicted absorption
 LEVEL_CHANGE = 0.03
 """1-sigma change of the corrected continuum from knot to knot, which bridges gaps and regions full of lines."""
@@ -165,12 +168,12 @@ def expected_unpredicted(depth: np.ndarray, missing: float) -> Unpredicted:
     --------
     >>> some = expected_unpredicted(np.array([0.0, 0.0, 0.0, 0.1]), 0.2)
     >>> round(some.part, 4), round(some.depth, 2)
-    (0.0625, 0.1)
+    (0.0312, 0.1)
     """
     with_lines = depth > SHALLOW
     share = float(with_lines.mean()) if depth.size else 0.0
     mean = float(depth[with_lines].mean()) if with_lines.any() else LEAST_UNKNOWN_DEPTH
-    part = float(np.clip(missing / (1.0 - missing) * share, *PART_LIMITS))
+    part = float(np.clip(LEFT_OVER * missing / (1.0 - missing) * share, *PART_LIMITS))
     return Unpredicted(part, max(mean, LEAST_UNKNOWN_DEPTH))
 
 

@@ -227,7 +227,7 @@ def collect(
         error=columns["equivalent_width_error"][numbers],
         noise_error=columns["noise_error"][numbers],
         continuum_error=columns["continuum_error"][numbers],
-        blend_error=columns["blend_error"][numbers],
+        neighbour_error=np.sqrt(np.maximum(errors["lines"] - errors["noise"], 0.0))[chosen] * to_ma[chosen],
         relative_width=1e-3 * width / lines.wavelength_air[numbers],
         shift=fit.lines.shift[j] - np.median(fit.lines.shift[j]),
         shift_error=errors["shift"][chosen],
