@@ -15,7 +15,7 @@ from typing import Any
 import numpy as np
 
 from specsolve.constants import LIGHT_SPEED_CM_S
-from specsolve.errors import SpecsolveError, SpectrumError
+from specsolve.errors import InputError, SpecsolveError, SpectrumError
 from specsolve.lines import LineList
 from specsolve.spectrum.barycentre import correction
 from specsolve.spectrum.measure import measure_lines
@@ -32,6 +32,8 @@ SAME_STAR = {"teff": 200.0, "logg": 0.4, "mh": 0.25, "vmic": 0.3}
 LEAST_COVERED = 10
 """Fewer lines of the list inside the spectrum are told: four parameters cannot follow from them."""
 SEPARATE, MERGED = "separate", "merged"
+THINNED_PIXELS = 2000
+"""Pixels that stay of a spectrum that is not drawn: enough for its signal to noise."""
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -60,6 +62,8 @@ class Task:
         Response grid for the rough solves; the packaged one if None.
     treatment : str or None
         Of the rough solves; the grid's default if None.
+    pixels : bool
+        Keep all pixels and the fits, for figures; else a thousandth of the memory, for many spectra.
     """
 
     path: str
@@ -74,6 +78,7 @@ class Task:
     passes: int = 3
     grid: str | None = None
     treatment: str | None = None
+    pixels: bool = True
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -141,20 +146,26 @@ def measure_spectrum(task: Task) -> Measured:
         near = all(abs(getattr(found, name) - getattr(guess, name)) < step for name, step in SAME_STAR.items())
         if near:
             break
+        try:
+            prediction = predict(task.lines, found)
+        except InputError as error:
+            notes.append(
+                f"the widths make a star outside the packaged atmospheres ({error}); the last prediction stays"
+            )
+            break
         guess, source = found, f"solved {number} time{'s' if number > 1 else ''}"
-        prediction = predict(task.lines, guess)
         measured = _measured(rest, task, prediction)
     if task.velocity is None and source.startswith("solved"):
         velocity = _velocity(task, spectrum, prediction)
     return Measured(
         path=task.path,
         star=spectrum.star,
-        spectrum=rest,
+        spectrum=rest if task.pixels else rest.select(slice(None, None, max(1, rest.n_pixels // THINNED_PIXELS))),
         velocity=velocity,
         measurements=measured,
         guess=guess,
         guess_source=source,
-        notes=tuple(dict.fromkeys([*rest.notes, *notes, *measured.notes])),
+        notes=tuple(dict.fromkeys(note.rstrip(".") for note in (*rest.notes, *notes, *measured.notes))),
     )
 
 
@@ -224,7 +235,7 @@ def measure_safely(task: Task) -> Measured:
 def _measured(rest: Spectrum, task: Task, prediction: Prediction) -> Measurements:
     """Widths; correlated pixels count as fewer independent ones, by larger errors."""
     pixels = rest.replace(sigma=rest.sigma * np.sqrt(rest.correlation))
-    return measure_lines(pixels, task.lines, options=task.options, prediction=prediction)
+    return measure_lines(pixels, task.lines, options=task.options, windows=task.pixels, prediction=prediction)
 
 
 def _velocity(task: Task, spectrum: Spectrum, prediction: Prediction) -> Velocity:

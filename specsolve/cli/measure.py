@@ -111,7 +111,7 @@ def measure(settings: Settings, spectra: tuple[str, ...], **chosen: Any) -> int:
 
         check_writable(output)
     workers = chosen.pop("workers")
-    tasks = make_tasks(spectra, **chosen)
+    tasks = make_tasks(spectra, **chosen, pixels=plots is not None)
     batch = measure_all(settings, tasks, workers)
     provenance = provenance_of(spectra, chosen)
     deliver(settings, batch, provenance, output, plots, plot_format)
@@ -137,6 +137,7 @@ def make_tasks(
     passes: int,
     grid_path: str | None,
     treatment: str | None,
+    pixels: bool,
 ) -> list[Task]:
     """One task a spectrum; misunderstandings are usage errors."""
     if names and len(names) != len(spectra):
@@ -176,6 +177,7 @@ def make_tasks(
             passes=passes,
             grid=grid_path,
             treatment=treatment,
+            pixels=pixels,
         )
         for place, path in enumerate(spectra)
     ]
@@ -255,11 +257,13 @@ def unique_names(measured: Sequence[Measured]) -> list[Measured]:
 
 def provenance_of(spectra: Sequence[str], chosen: dict[str, Any]) -> dict[str, Any]:
     """Files, options and versions behind the widths."""
+    from importlib import metadata
+
     from specsolve.provenance import collect
 
     lists = [chosen["list_path"]] if chosen.get("list_path") else []
     options = {name: list(value) if isinstance(value, tuple) else value for name, value in chosen.items()}
-    return collect(inputs=[*spectra, *lists], options=options)
+    return collect(inputs=[*spectra, *lists], options=options, specutils=metadata.version("specutils"))
 
 
 def deliver(

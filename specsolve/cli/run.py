@@ -69,7 +69,7 @@ def run(settings: Settings, spectra: tuple[str, ...], **chosen: Any) -> int:
         from specsolve.report.tables import check_writable
 
         check_writable(output)
-    tasks = make_tasks(spectra, **for_measure)
+    tasks = make_tasks(spectra, **for_measure, pixels=for_solve["plots"] is not None)
     batch = measure_all(settings, tasks, for_solve["workers"])
     provenance = provenance_of(spectra, for_measure)
     with tempfile.TemporaryDirectory(prefix="specsolve_") as aside:
