@@ -1,7 +1,7 @@
 """The store of departures: ln b of all levels on a few depths, at the nodes of a store of atmospheres.
 
 `departures.json` (axes, depths, status and reason of every node, recipe, atom, identity of the atmospheres, checksum) is
-written last, by atomic rename; `departures.npy` holds int16 (teff, logg, mh, level, depth) in steps of `STEP`.
+written last, by atomic rename; `departures.npz` holds, compressed, int16 (teff, logg, mh, level, depth) in steps of `STEP`.
 """
 
 from __future__ import annotations
@@ -13,6 +13,7 @@ from collections.abc import Mapping
 from functools import cached_property
 from importlib import resources
 from pathlib import Path
+from zipfile import BadZipFile
 
 import numpy as np
 from scipy.interpolate import CubicSpline
@@ -24,7 +25,7 @@ from specsolve.nlte.line_levels import line_levels
 
 SCHEMA = 1
 HEADER_NAME = "departures.json"
-ARRAY_NAME = "departures.npy"
+ARRAY_NAME = "departures.npz"
 AXES = ("teff", "logg", "mh")
 #: log10 of optical depth at 5000 A at which departures are stored.
 DEPTHS = (-6.0, -5.2, -4.5, -3.9, -3.4, -3.0, -2.6, -2.2, -1.8, -1.4, -1.0, -0.6, -0.2, 0.3, 0.9, 1.6)
@@ -94,8 +95,9 @@ class DepartureStore:
         directory = Path(directory)
         try:
             header = json.loads((directory / HEADER_NAME).read_text(encoding="utf-8"))
-            data = (directory / ARRAY_NAME).read_bytes()
-        except (OSError, ValueError) as problem:
+            with np.load(directory / ARRAY_NAME, allow_pickle=False) as data:
+                codes = data["codes"]
+        except (OSError, ValueError, KeyError, EOFError, BadZipFile) as problem:
             raise StoreError(
                 f"{directory}: no readable store of departures ({problem}). Build one with `specsolve departures "
                 "build`.", path=str(directory),
@@ -105,12 +107,12 @@ class DepartureStore:
                 f"{directory}: departures of schema {header.get('schema')}, this version reads {SCHEMA}. Build them "
                 "again with `specsolve departures build`.", path=str(directory),
             )  # fmt: skip
-        if hashlib.sha256(data).hexdigest() != header["checksum"]:
+        if npy_sha256(codes) != header["checksum"]:
             raise StoreError(
                 f"{directory}: {ARRAY_NAME} does not match its checksum (truncated or changed). Build it again with "
                 "`specsolve departures build`.", path=str(directory),
             )  # fmt: skip
-        return cls(directory, header, np.load(io.BytesIO(data), allow_pickle=False))
+        return cls(directory, header, codes)
 
     @classmethod
     def packaged(cls) -> DepartureStore:
@@ -184,6 +186,13 @@ class DepartureStore:
         return [((i, j, k), u * v * w) for i, u in choices[0] for j, v in choices[1] for k, w in choices[2]]
 
 
+def npy_sha256(codes: np.ndarray) -> str:
+    """SHA-256 (hex) of the array as an .npy file, however it is compressed."""
+    buffer = io.BytesIO()
+    np.save(buffer, codes, allow_pickle=False)
+    return hashlib.sha256(buffer.getvalue()).hexdigest()
+
+
 def packaged_folder() -> Path:
     """Folder of the packaged store."""
     return Path(str(resources.files("specsolve") / "data" / "departures"))
@@ -226,7 +235,7 @@ def write_departures(
     left_out = {"status": "left out", "reason": "no atmosphere, or not among the nodes that were asked for"}
     nodes = [dict(records.get(index, left_out)) for index in np.ndindex(*shape)]
     buffer = io.BytesIO()
-    np.save(buffer, codes, allow_pickle=False)
+    np.savez_compressed(buffer, codes=codes)
     content = {
         "schema": SCHEMA,
         "quantity": "ln(n / n_LTE) of the levels of the model atom",
@@ -236,7 +245,7 @@ def write_departures(
         "axes": {name: [float(v) for v in axes[name]] for name in AXES},
         "depths": list(DEPTHS),
         "units": {"teff": "K", "logg": "dex(cm / s2)", "mh": "dex", "depths": "log10 tau at 5000 Angstrom"},
-        "checksum": hashlib.sha256(buffer.getvalue()).hexdigest(),
+        "checksum": npy_sha256(codes),
         **header,
         "nodes": nodes,
     }

@@ -1,5 +1,7 @@
 """The store of departures: what comes back, what is refused, how a build goes on."""
 
+import io
+
 import numpy as np
 import pytest
 
@@ -59,7 +61,14 @@ def test_missing_nodes_and_the_outside_are_refused_with_the_reason(store):
 def test_identity_follows_the_content(store, tmp_path):
     again = DepartureStore.open(store.directory)
     assert again.identity == store.identity
-    (store.directory / "departures.npy").write_bytes((store.directory / "departures.npy").read_bytes()[:-1])
+    array = store.directory / "departures.npz"
+    whole = array.read_bytes()
+    array.write_bytes(whole[: len(whole) // 2])
+    with pytest.raises(StoreError, match="no readable store"):
+        DepartureStore.open(store.directory)
+    with np.load(io.BytesIO(whole)) as data:
+        codes = data["codes"]
+    np.savez_compressed(array, codes=codes + np.int16(1))
     with pytest.raises(StoreError, match="checksum"):
         DepartureStore.open(store.directory)
     with pytest.raises(StoreError, match="no readable store"):
