@@ -95,7 +95,7 @@ class DepartureStore:
         directory = Path(directory)
         try:
             header = json.loads((directory / HEADER_NAME).read_text(encoding="utf-8"))
-            with np.load(directory / ARRAY_NAME, allow_pickle=False) as data:
+            with open(directory / ARRAY_NAME, "rb") as stream, np.load(stream, allow_pickle=False) as data:
                 codes = data["codes"]
         except (OSError, ValueError, KeyError, EOFError, BadZipFile) as problem:
             raise StoreError(
