@@ -2,7 +2,7 @@
 
 Nothing here is real: the open cluster Marsk 7, its members and the spectrograph Tarn are invented.  Each member's
 atmosphere is converged at its own parameters with opacity tables of the cluster's own metallicity; no response grid is
-involved, so that solving the demo tests the grid too.
+involved, so that solving the demo tests the grid too. Iron is out of LTE.
 
 ``python -m specsolve.demo --output demo_data`` writes ``cluster_widths.ecsv`` and ``cluster_truth.ecsv`` (about five
 minutes, of which most is the opacity table).
@@ -25,6 +25,7 @@ from specsolve.errors import ConvergenceError
 from specsolve.formation.equivalent_width import reduced_widths
 from specsolve.lines import LineList, default_line_list
 from specsolve.matter.composition import composition_for
+from specsolve.nlte.corrections import departures_of
 from specsolve.report.tables import make_table, write_table
 
 log = logging.getLogger(__name__)
@@ -139,10 +140,9 @@ def atmospheres(members: tuple[Member, ...], feh: float) -> list[Atmosphere]:
 
 
 def true_widths(member: Member, model: Atmosphere, lines: LineList, feh: float) -> np.ndarray:
-    """Noise-free equivalent widths [mA] of one member, shape (n_lines,)."""
-    log_rw = reduced_widths(model, composition_for(feh), lines, np.array([member.vmic]), np.array([SOLAR_IRON + feh]))[
-        :, 0, 0
-    ]
+    """Noise-free equivalent widths [mA] of one member, shape (n_lines,), with departures solved in its own atmosphere."""
+    at = (np.array([member.vmic]), np.array([SOLAR_IRON + feh]))
+    log_rw = reduced_widths(model, composition_for(feh), lines, *at, departures=departures_of(model, lines))[:, 0, 0]
     return 1e3 * lines.wavelength_air * 10.0**log_rw
 
 
