@@ -44,7 +44,7 @@ if TYPE_CHECKING:
 
     from specsolve.grid.store import ResponseGrid
 
-COMPILED_FROM = 12  # stars; a star takes about ten solves
+COMPILED_FROM = 30  # stars; a star takes about ten solves
 MODES_IN_FIT = 12  # shared errors of a set are smooth over the stars: a few modes hold them
 Progress = Callable[[int, int], None]
 
