@@ -12,7 +12,7 @@ from specsolve.errors import SpectrumError
 from specsolve.lines.wavelengths import LIMITS_ANGSTROM, vacuum_to_air
 
 from .noise import estimate_noise
-from .raw import AIR, LOG_UNIT, VACUUM, Raw, RawPiece, ReadOptions
+from .raw import AIR, LOG_UNIT, VACUUM, Raw, RawPiece, ReadOptions, unit_name
 from .types import Spectrum
 
 PLAUSIBLE_ANGSTROM = (2900.0, 25000.0)
@@ -177,7 +177,7 @@ def _unit(raw: Raw, path: str | Path, options: ReadOptions) -> tuple[float, bool
     from astropy import units as u
 
     try:
-        factor = float(u.Unit(unit).to("Angstrom"))
+        factor = float(u.Unit(unit_name(unit)).to("Angstrom"))
     except (ValueError, TypeError, u.UnitConversionError) as error:
         raise SpectrumError(f"{path}: wavelengths in '{unit}', which is not a unit of length.", path=path) from error
     low, high = PLAUSIBLE_ANGSTROM

@@ -75,3 +75,27 @@ class Raw:
     unit_assumed: bool = False
     header: Mapping[str, Any] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
+
+
+SPELLINGS = {
+    "angstroms": "Angstrom",
+    "angstrom": "Angstrom",
+    "ang": "Angstrom",
+    "a": "Angstrom",
+    "nanometer": "nm",
+    "nanometers": "nm",
+    "microns": "micron",
+    "um": "micron",
+}
+"""Units as headers spell them, in lower case (common practice, no source); an ampere is no wavelength."""
+
+
+def unit_name(text: str) -> str:
+    """A unit of wavelength as astropy spells it.
+
+    Examples
+    --------
+    >>> unit_name("ANGSTROMS"), unit_name("nm")
+    ('Angstrom', 'nm')
+    """
+    return SPELLINGS.get(text.strip().lower(), text.strip())

@@ -16,7 +16,7 @@ import numpy as np
 from specsolve.errors import SpectrumError
 
 from .pixels import assemble
-from .raw import LOG_UNIT, Raw, RawPiece, ReadOptions
+from .raw import LOG_UNIT, Raw, RawPiece, ReadOptions, unit_name
 from .read_table import columns_of, medium_of, plain_header, read_text, table_to_raw
 from .types import Spectrum
 
@@ -155,6 +155,8 @@ def _one_row(unit: Any) -> Any:
     header = unit.header.copy()
     for key in [key for key in header if key[:-1] in ("CTYPE", "CUNIT", "CRVAL", "CDELT", "CRPIX") and key[-1] != "1"]:
         del header[key]
+    if header.get("CUNIT1"):
+        header["CUNIT1"] = unit_name(str(header["CUNIT1"]))
     return fits.HDUList([fits.PrimaryHDU(np.ravel(unit.data), header)])
 
 
@@ -165,7 +167,7 @@ def _read_image(path: Path, header: dict[str, Any], n_pixels: int, row: Any, sig
     found = _by_specutils(path, row, IMAGE_FORMAT)
     axis = np.asarray(found.spectral_axis.value, float).ravel()
     unit: str | None = str(found.spectral_axis.unit)
-    stated = str(header.get("CUNIT1", "")).strip()
+    stated = unit_name(str(header.get("CUNIT1", "")))
     if stated and stated != unit and not stated.lower().startswith("log"):
         try:
             axis, unit = np.asarray(found.spectral_axis.to_value(stated), float).ravel(), stated

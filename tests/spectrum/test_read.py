@@ -50,6 +50,7 @@ LINEAR = {"CRVAL1": 5000.0, "CDELT1": STEP, "CRPIX1": 1.0}
         ({"CTYPE1": "LINEAR"}, "assumed"),
         ({"CTYPE1": "AWAV", "CUNIT1": "nm", "CRVAL1": 500.0, "CDELT1": 0.1 * STEP}, "header"),
         ({"AIRORVAC": "air"}, "header"),
+        ({"CTYPE1": "AWAV", "CUNIT1": "ANGSTROMS"}, "header"),
     ],
 )
 def test_linear_image(tmp_path, truth, header, source):
