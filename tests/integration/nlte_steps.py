@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 import numpy as np
 
+from specsolve.balance.solution import Solution
 from specsolve.balance.solve import solve
 from specsolve.balance.star import Star
 from specsolve.constants import SOLAR_IRON
@@ -27,9 +30,18 @@ def lte_star(grid: ResponseGrid, theta, name: str = "simulated") -> Star:
     )  # fmt: skip
 
 
-def nlte_step(grid: ResponseGrid, theta, **options) -> np.ndarray:
+def nlte_solution(grid: ResponseGrid, theta, fix: Mapping[str, float] | None = None) -> Solution:
+    """The NLTE solution of LTE widths; with the LTE microturbulence held where the lines do not fix it."""
+    star = lte_star(grid, theta)
+    solution = solve(star, grid, treatment="nlte", fix=fix)
+    if solution.status == "outside_grid" and "vmic" in solution.reason:
+        solution = solve(star, grid, treatment="nlte", fix={**(fix or {}), "vmic": float(theta[3])})
+    return solution
+
+
+def nlte_step(grid: ResponseGrid, theta, fix: Mapping[str, float] | None = None) -> np.ndarray:
     """NLTE minus LTE parameters (teff, logg, feh, vmic); nan if the NLTE solve has no solution."""
-    solution = solve(lte_star(grid, theta), grid, treatment="nlte", **options)
+    solution = nlte_solution(grid, theta, fix)
     if solution.status not in ("solved", "tied"):
         return np.full(4, np.nan)
     return solution.parameters - np.asarray(theta, dtype=float)
