@@ -13,7 +13,9 @@ from specsolve.grid.store import ResponseGrid
 from tests.cli.made_up_stars import star_table
 
 RANGES = ((4600.0, 6300.0), (2.0, 4.6), (-1.2, 0.2), (0.8, 1.8))
-BAD = 17  # every so manieth star has no usable line
+BAD = 7  # every so manieth star has no usable line
+JOURNAL_FROM = 8  # in these runs; few stars take the plain path, which compiles nothing
+PROGRAM = f"from specsolve.cli import bulk, main; bulk.JOURNAL_FROM = {JOURNAL_FROM}; main.main()"
 
 
 def write_many(path: Path, grid: ResponseGrid, n_stars: int, rng: np.random.Generator) -> Path:
@@ -30,17 +32,18 @@ def write_many(path: Path, grid: ResponseGrid, n_stars: int, rng: np.random.Gene
 
 
 def command(table: Path, grid: ResponseGrid, output: Path, *further: str) -> list[str]:
-    """The command line of the run."""
-    return [
-        *(sys.executable, "-m", "specsolve", "solve", str(table), "--grid", str(grid.directory)),
-        *("--output", str(output), *further),
-    ]
+    """Arguments of the run."""
+    return ["solve", str(table), "--grid", str(grid.directory), "--output", str(output), *further]
 
 
 def start(*arguments) -> subprocess.Popen:
     """The run in a process group of its own."""
     return subprocess.Popen(
-        command(*arguments), stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, start_new_session=True
+        [sys.executable, "-c", PROGRAM, *command(*arguments)],
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+        start_new_session=True,
     )
 
 
