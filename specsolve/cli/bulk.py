@@ -8,13 +8,13 @@ import os
 import time
 from collections import Counter
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from concurrent.futures import Executor
+from concurrent.futures import BrokenExecutor, Executor
 from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from specsolve.cli.settings import Settings
-from specsolve.errors import UsageError
+from specsolve.errors import SpecsolveError, UsageError
 
 if TYPE_CHECKING:
     from specsolve.balance.batch import Setting
@@ -196,6 +196,11 @@ def solve_to_files(
                 _keep(found, journal, lambda: progress and progress(len(journal.status), total))
         except KeyboardInterrupt:
             interrupted = True
+        except BrokenExecutor as error:
+            raise SpecsolveError(
+                f"a worker process died ({error or 'out of memory, or killed'}); {len(journal.status)} stars are finished "
+                "and kept: run the same command again to go on"
+            ) from error
         paths = journal.write_tables(provenance, [record_of(one) for run in runs for one in run.first])
         if len(runs) > 1:
             paths["differences"] = write_differences(request.output, provenance)
