@@ -88,7 +88,9 @@ def rows_text(kind: str, values: Mapping[str, Sequence[Any]]) -> str:
 
 def _cells(column: Column, values: Sequence[Any]) -> list[str]:
     if column.dtype == TEXT:
-        return [_quoted(value) for value in (values.tolist() if isinstance(values, np.ndarray) else values)]
+        texts = values.tolist() if isinstance(values, np.ndarray) else values
+        quoted = {text: _quoted(text) for text in set(texts)}  # most texts of a table are repeated
+        return [quoted[text] for text in texts]
     dtype = {REAL: np.float64, COUNT: np.int64, FLAG: bool}[column.dtype]
     plain = np.asarray(values, dtype=dtype).tolist()
     if column.shape:
