@@ -29,7 +29,7 @@ USABLE = (-5.95, -4.85)
 
 def departure(lines, teff, logg, mh):
     """Invented abundance correction of Fe I beyond LTE [dex]: grows with teff, falling gravity and metallicity."""
-    size = 0.05 * (4.8 - logg) * (0.4 - mh) * (teff / 5500.0) ** 2
+    size = 0.09 * (4.8 - logg) * (0.4 - mh) * (teff / 5500.0) ** 2
     return np.where(lines.ion == "Fe I", size[..., None] * (1.0 - 0.06 * lines.excitation_potential), 0.0)
 
 

@@ -21,7 +21,7 @@ from specsolve.uses.handoff import root, write_handoff
 from specsolve.uses.mixture import common_metallicity, metallicities
 
 DEMO = Path(__file__).resolve().parents[2] / "demo_data"
-N_CLUSTERS = 24
+N_CLUSTERS = 16
 FIELD_STARS, TIED_STARS = 1, 2
 WRONG_CANDIDATE = np.array([-170.0, -0.48, -0.16, 0.12])  # from the right one; invented, along the usual degeneracy
 

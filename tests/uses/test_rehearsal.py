@@ -50,7 +50,7 @@ def test_lte_analysis_of_nlte_truth_is_shifted_as_one_solve_says(grid):
     """Without noise of its own the shift of a rehearsal is that of a single noise-free star."""
     quiet = Noise(floor_ma=0.05, fraction=0.0)
     made = rehearse(TWO, grid, noise=quiet, truth="nlte", trials=2, gf_errors="none", full_search=False)
-    assert made.table["bias_logg"][1] < -0.1  # Fe I weaker than in LTE: the gravity comes out low
+    assert made.table["bias_logg"][1] < -0.05  # Fe I weaker than in LTE: the gravity comes out low
     back = rehearse(
         TWO, grid, noise=quiet, truth="nlte", analysis="nlte", trials=2, gf_errors="none", full_search=False
     )
