@@ -25,6 +25,9 @@ from specsolve.grid.store import ResponseGrid
 
 HYDROGEN_COLLISIONS = "hydrogen_collisions"
 FACTOR = 3.0
+#: Larger responses [dex] are those of widths near zero: a line that is about to vanish into emission. They are written as
+#: zero, as are those of lines in emission, which a grid does not hold.
+LARGEST = 3.0
 
 
 @lru_cache(maxsize=1)
@@ -60,7 +63,8 @@ def response(node: tuple[float, float, float]) -> np.ndarray | None:
         )
         for log_b in (usual, at_depths(found.log_b, found.log_tau))
     ]  # fmt: skip
-    return (widths[1] - widths[0]) / np.log10(FACTOR)
+    change = (widths[1] - widths[0]) / np.log10(FACTOR)
+    return np.where(np.isfinite(change) & (np.abs(change) < LARGEST), change, 0.0)
 
 
 def with_collisions(stored: Perturbations, nodes: list, found: list[np.ndarray]) -> tuple[dict, dict]:
