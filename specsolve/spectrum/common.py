@@ -80,9 +80,9 @@ def fit_broadening(fit: Fit, prediction: Prediction, instrument: float) -> Broad
         """Kernel for a part of the star: macroturbulence, or with an unknown instrument a Gaussian."""
         if known:
             if star >= 0.0:
-                return Kernel(fwhm=instrument, macroturbulence=star, vsini=abs(vsini))
-            return Kernel(fwhm=max(instrument + star, 0.3 * instrument), vsini=abs(vsini))
-        return Kernel(fwhm=max(star, 0.3), vsini=abs(vsini))
+                return Kernel(fwhm=instrument, macroturbulence=float(star), vsini=float(abs(vsini)))
+            return Kernel(fwhm=float(max(instrument + star, 0.3 * instrument)), vsini=float(abs(vsini)))
+        return Kernel(fwhm=float(max(star, 0.3)), vsini=float(abs(vsini)))
 
     known = bool(np.isfinite(instrument))
     low = -0.4 * instrument if known else 0.5
@@ -133,7 +133,7 @@ def _pixels(fit: Fit):
     alone = systems.depth_of(fit.wavelength, fit.order, lines, fit.shapes, fit.reach, own)
     others = 1.0 - (1.0 - fit.depth) / (1.0 - alone)
     quality = np.full(own.size, -np.inf)
-    ranges = [pixel_range(fit, j, 0.9 * total + 3.0) for j in own]
+    ranges = [pixel_range(fit, j, 0.75 * total + 2.5) for j in own]
     for k, (low, high) in enumerate(ranges):
         if not DEPTHS[0] < peak[k] < DEPTHS[1] or high - low < 5 or not fit.good[low:high].all():
             continue

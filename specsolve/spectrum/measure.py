@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 import numpy as np
 
 from specsolve.errors import SpectrumError
@@ -32,6 +30,8 @@ from .types import Measurements, Spectrum
 FIRST_MACROTURBULENCE = 3.5
 """Before it is fitted, slow rotation included [km/s]; common practice, no source."""
 UNKNOWN_INSTRUMENT = 8.0  # km/s, before the fit
+NORMALISED_DEVIATION = 0.02
+"""A normalised spectrum whose fitted continuum is off from 1 by more than this, in the median, is told."""
 
 
 def measure_lines(
@@ -316,11 +316,3 @@ def notes_of(spectrum: Spectrum, fit: Fit, broadening: Broadening, offset: float
             f"lines are {offset:+.2f} dex from the guess of the star; a better guess predicts neighbours better."
         )
     return tuple(notes)
-
-
-NORMALISED_DEVIATION = 0.02
-
-
-def with_guess(options: MeasureOptions, **guess: float) -> MeasureOptions:
-    """Options with another guess of the star."""
-    return replace(options, guess=replace(options.guess, **guess))
