@@ -57,6 +57,7 @@ def recovered(star: trials.Star, rng: np.random.Generator):
 
 
 @pytest.mark.slow
+@pytest.mark.timeout(10800)
 def test_parameters_from_spectra(slow_fraction, figure):
     seed = int(os.environ.get("SPECSOLVE_TEST_SEED", "20261201"))
     rng = np.random.default_rng([seed, 16])

@@ -208,6 +208,7 @@ def test_an_unlisted_blend_is_told():
     assert found.use[[0, 1, 2, 8, 9, 10]].all()
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize("vsini", [8.0, 14.0, 25.0])
 def test_rotation_is_handled_to_15_km_s_and_said_above(sun, lines, rng, vsini, figure):
     found = measure_lines(look(sun, rng, vsini=vsini, signal_to_noise=200.0), lines, options=OPTIONS)
@@ -247,6 +248,7 @@ def test_no_line_covered_is_an_error(sun, lines, rng):
         measure_lines(spectrum, lines.select(lines.wavelength_air > 6200.0), options=OPTIONS)
 
 
+@pytest.mark.slow
 def test_two_hundred_lines_take_two_seconds(figure):
     """On one core, prediction included; processor time, so that other work on the machine does not count."""
     model = AtmosphereStore.packaged().get(5750.0, 4.5, 0.0)
