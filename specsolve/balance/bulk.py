@@ -6,9 +6,10 @@ import numpy as np
 
 from specsolve.grid.node_table import node_table
 
+from .balance_kernel import Inputs, State, nowhere
 from .kernel import LOSS_CODES
 from .newton import NO_ABUNDANCE, Minimum
-from .newton_kernel import Inputs, State, nowhere, refine_kernel
+from .newton_kernel import finish_kernel, local_kernel, refine_kernel
 from .problem import Problem
 from .solution import PARAMETER_NAMES
 from .state import BalanceState, Weighting
@@ -51,6 +52,14 @@ def kernel_inputs(problem: Problem) -> Inputs:
     return made
 
 
+def _begin(problem: Problem) -> tuple:
+    """The table, filled with the codes of the problem's lines, and the problem's inputs."""
+    inputs = kernel_inputs(problem)
+    table = node_table(problem.grid, problem.treatment)
+    table.prepare(inputs.lines)
+    return table.arrays, inputs
+
+
 def refine_compiled(
     problem: Problem,
     start: np.ndarray,
@@ -65,20 +74,45 @@ def refine_compiled(
     numpy.linalg.LinAlgError
         The covariance of the residuals is singular.
     """
-    inputs = kernel_inputs(problem)
+    table, inputs = _begin(problem)
     n = inputs.lines.size
-    table = node_table(problem.grid, problem.treatment)
-    table.prepare(inputs.lines)
     if allowed is None:
         allowed = np.ones(n, dtype=bool)
-    begin = nowhere(n, table.arrays.dA.size) if previous is None else _kernel_state(problem, previous)
-    state, objective, converged, at_bound, iterations, blocked = refine_kernel(
-        table.arrays, inputs, np.asarray(start, dtype=np.float64), allowed, begin, rough
-    )
+    before = nowhere(n, table.dA.size) if previous is None else _kernel_state(problem, previous)
+    begin = np.asarray(start, dtype=np.float64)
+    return _minimum(problem, begin, refine_kernel(table, inputs, begin, allowed, before, rough))
+
+
+def local_compiled(
+    problem: Problem, start: np.ndarray, preliminary: np.ndarray, least: tuple[int, int]
+) -> tuple[Minimum, np.ndarray]:
+    """`minima.local_solve` by the compiled kernel; `least` are the lines of each ion that the cut must leave."""
+    table, inputs = _begin(problem)
+    begin = np.asarray(start, dtype=np.float64)
+    low, high = problem.options.reduced_width_range
+    allowed, ended = local_kernel(table, inputs, begin, preliminary, low, high, *least)
+    return _minimum(problem, begin, ended), allowed
+
+
+def finish_compiled(
+    problem: Problem, rough: Minimum, preliminary: np.ndarray, least: tuple[int, int]
+) -> tuple[Minimum, np.ndarray]:
+    """`minima.finish` by the compiled kernel, from an end of `refine_compiled`."""
+    table, inputs = _begin(problem)
+    low, high = problem.options.reduced_width_range
+    state = rough.state.__dict__["_kernel_state"]
+    allowed, ended = finish_kernel(table, inputs, state, preliminary, low, high, *least)
+    if not ended[0].known:
+        return rough, preliminary
+    return _minimum(problem, rough.theta, ended), allowed
+
+
+def _minimum(problem: Problem, start: np.ndarray, ended: tuple) -> Minimum:
+    state, objective, converged, at_bound, iterations, blocked = ended
     if not state.known:
-        theta = np.clip(np.asarray(start, float), *problem.bounds)
-        theta = np.where(np.isfinite(inputs.fixed), inputs.fixed, theta)
-        return Minimum(theta, None, np.inf, False, at_bound, 0, NO_ABUNDANCE)
+        theta = np.clip(start, *problem.bounds)
+        fixed = kernel_inputs(problem).fixed
+        return Minimum(np.where(np.isfinite(fixed), fixed, theta), None, np.inf, False, at_bound, 0, NO_ABUNDANCE)
     if np.isnan(objective):
         raise np.linalg.LinAlgError("the covariance of the residuals is singular")
     return Minimum(

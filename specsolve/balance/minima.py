@@ -84,6 +84,10 @@ def predicted_lines(problem: Problem, minimum: Minimum, preliminary: np.ndarray)
 
 def local_solve(problem: Problem, start: np.ndarray, preliminary: np.ndarray) -> tuple[Minimum, np.ndarray]:
     """Refine with the wide cut, fix the cut on predicted strength there, refine again."""
+    if problem.compiled and problem.linear_outside:
+        from .bulk import local_compiled
+
+        return local_compiled(problem, start, preliminary, least_lines(problem))
     return finish(problem, refine(problem, start, preliminary, rough=True), preliminary)
 
 
@@ -91,6 +95,10 @@ def finish(problem: Problem, rough: Minimum, preliminary: np.ndarray) -> tuple[M
     """The second half of `local_solve`: freeze the cut on predicted strength where the first ended, and refine."""
     if rough.state is None:
         return rough, preliminary
+    if problem.compiled and problem.linear_outside:
+        from .bulk import finish_compiled
+
+        return finish_compiled(problem, rough, preliminary, least_lines(problem))
     allowed = predicted_lines(problem, rough, preliminary)
     if not enough_lines(problem, allowed):
         allowed = preliminary
@@ -98,15 +106,18 @@ def finish(problem: Problem, rough: Minimum, preliminary: np.ndarray) -> tuple[M
     return (rough, preliminary) if minimum.state is None else (minimum, allowed)
 
 
+def least_lines(problem: Problem) -> tuple[int, int]:
+    """How many lines of each ion the residuals that the free parameters need take (Outside terms not counted)."""
+    needs_slopes = "teff" not in problem.fixed or "vmic" not in problem.fixed
+    outside = {term.name for item in problem.outside for term in item.terms}
+    return MIN_FE1_LINES if needs_slopes else 1, 0 if "logg" in problem.fixed or "logg" in outside else 1
+
+
 def enough_lines(problem: Problem, allowed: np.ndarray) -> bool:
     """Whether these lines can form every residual that the free parameters need (Outside terms not counted)."""
     is_fe2 = problem.inputs.is_fe2
-    first, second = int((allowed & ~is_fe2).sum()), int((allowed & is_fe2).sum())
-    needs_slopes = "teff" not in problem.fixed or "vmic" not in problem.fixed
-    if first < (MIN_FE1_LINES if needs_slopes else 1):
-        return False
-    outside = {term.name for item in problem.outside for term in item.terms}
-    return second >= 1 or "logg" in problem.fixed or "logg" in outside
+    least = least_lines(problem)
+    return int((allowed & ~is_fe2).sum()) >= least[0] and int((allowed & is_fe2).sum()) >= least[1]
 
 
 def shortage(problem: Problem, allowed: np.ndarray) -> tuple[str, dict[str, int]]:

@@ -48,3 +48,16 @@ def write_table(star: Star, path: Path) -> Path:
             table[name].unit = units.get(name, "mAngstrom")
     table.write(path, format="ascii.ecsv", overwrite=True)
     return path
+
+
+def write_stars(stars: list[Star], path: Path) -> Path:
+    """Many stars as one ECSV table with a column `star`."""
+    from astropy.table import Table, vstack
+
+    parts = []
+    for star in stars:
+        part = Table.read(write_table(star, path), format="ascii.ecsv")
+        part["star"] = star.name
+        parts.append(part)
+    vstack(parts).write(path, format="ascii.ecsv", overwrite=True)
+    return path
