@@ -59,7 +59,7 @@ def print_solutions(solutions: Sequence[Solution], console: Console, *, full: bo
     if full:
         for solution in solutions:
             console.print()
-            print_sheet(solution, console)
+            print_sheet(solution, console, named=len(heads) > 1)
     else:
         print_overview(solutions, console)
 
@@ -79,11 +79,12 @@ def print_overview(solutions: Sequence[Solution], console: Console) -> None:
         "status",
         right=range(1, 9),
     )
+    mixed = len({one.treatment for one in solutions}) > 1
     for one in solutions:
         status = one.status if one.status == "solved" else f"{one.status}: {one.reason}"
         words = "; ".join([status, *one.flags])
         table.add_row(
-            one.star,
+            f"{one.star} {one.treatment}" if mixed else one.star,
             *(_with_error(one, name) for name in NAMES),
             _number(one.fe1.abundance, 2),
             _number(one.fe2.abundance, 2),
@@ -102,7 +103,7 @@ def print_overview(solutions: Sequence[Solution], console: Console) -> None:
         for note in remarks(one):
             notes.setdefault(note, []).append(one.star)
     for note, stars in notes.items():
-        whom = "all stars" if len(stars) == len(solutions) else ", ".join(stars)
+        whom = "all stars" if len(stars) == len(solutions) else ", ".join(dict.fromkeys(stars))
         console.print(f"- {note} ({whom})", style="dim", markup=False)
 
 
@@ -128,9 +129,10 @@ def remarks(one: Solution) -> list[str]:
     ]
 
 
-def print_sheet(one: Solution, console: Console) -> None:
-    """The sheet of one star."""
-    console.print(_styled(f"{one.star}: {one.status}", "bold " + STATUS_STYLE.get(one.status, "")))
+def print_sheet(one: Solution, console: Console, named: bool = False) -> None:
+    """The sheet of one star; `named` says the treatment beside its name."""
+    name = f"{one.star} ({one.treatment})" if named else one.star
+    console.print(_styled(f"{name}: {one.status}", "bold " + STATUS_STYLE.get(one.status, "")))
     if one.reason:
         console.print(f"  {one.reason}", markup=False)
     if not np.all(np.isnan(one.parameters)):
