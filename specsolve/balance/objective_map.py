@@ -24,7 +24,7 @@ from .state import BalanceState
 
 POINTS = (21, 19)  # of the lattice in teff and logg
 ERRORS_SHOWN = 4.0  # how far the map reaches beyond each candidate, in its errors
-LEAST_REACH = (350.0, 0.6)  # K, dex
+LEAST_REACH = (250.0, 0.4)  # K, dex
 MOST_REACH = (1000.0, 1.5)
 MAX_STEPS = 8
 TOLERANCE = 2e-3  # in STEP_UNIT
