@@ -21,20 +21,32 @@ SUMS = {"contract", "reassoc"}  # sums of products in an order of the compiler's
 @njit(cache=True, nogil=True, fastmath=SUMS)
 def coefficient(table, place, line, a, out):
     """Coefficient `a` of the curve of one line, and its derivatives, into `out` (N_OUT,)."""
-    size = 8 * table.vmic_width
     start = 8 * place.first_vmic
     u = place.weights
     s0, s1, s2, s3, s4 = 0.0, 0.0, 0.0, 0.0, 0.0
-    for q in range(8):
-        x = table.numbers[place.corners[q], line, a].reshape(8 * table.vmic.size)[start : start + size]
-        first = q * size
-        for i in range(size):
-            value = np.float64(x[i])
-            s0 += u[0, first + i] * value
-            s1 += u[1, first + i] * value
-            s2 += u[2, first + i] * value
-            s3 += u[3, first + i] * value
-            s4 += u[4, first + i] * value
+    if table.vmic_width == 4:  # numbers the compiler knows make it four times faster
+        for q in range(8):
+            x = table.numbers[place.corners[q], line, a].reshape(8 * table.vmic.size)[start : start + 32]
+            for i in range(32):
+                value = np.float64(x[i])
+                k = 32 * q + i
+                s0 += u[0, k] * value
+                s1 += u[1, k] * value
+                s2 += u[2, k] * value
+                s3 += u[3, k] * value
+                s4 += u[4, k] * value
+    else:
+        size = 8 * table.vmic_width
+        for q in range(8):
+            x = table.numbers[place.corners[q], line, a].reshape(8 * table.vmic.size)[start : start + size]
+            for i in range(size):
+                value = np.float64(x[i])
+                k = size * q + i
+                s0 += u[0, k] * value
+                s1 += u[1, k] * value
+                s2 += u[2, k] * value
+                s3 += u[3, k] * value
+                s4 += u[4, k] * value
     out[0], out[1], out[2], out[3], out[4] = s0, s1, s2, s3, s4
 
 
