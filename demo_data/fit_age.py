@@ -16,6 +16,8 @@ from astropy.table import Table
 from scipy.optimize import minimize
 from scipy.special import logsumexp
 
+SHARED = 8  # modes of the shared errors that are fitted; they hold nearly all of it
+FINER = 10  # points of a curve for one of the table
 FIELD = np.array([600.0, 1.0, 0.5])  # standard deviations of (teff, logg, feh) of stars that do not belong
 
 
@@ -25,7 +27,12 @@ class Family:
     def __init__(self, table):
         self.ages, self.metals = np.unique(table["age"]), np.unique(table["feh"])
         shape = (self.ages.size, self.metals.size, -1)
-        self.curves = np.stack([np.array(table[name]).reshape(shape) for name in ("teff", "logg")], axis=-1)
+        coarse = np.stack([np.array(table[name]).reshape(shape) for name in ("teff", "logg")], axis=-1)
+        # Points along a curve must lie closer than the errors of a star, or ages between them would count for nothing.
+        at = np.linspace(0.0, coarse.shape[2] - 1.0, FINER * (coarse.shape[2] - 1) + 1)
+        low = np.minimum(at.astype(int), coarse.shape[2] - 2)
+        share = (at - low)[:, None]
+        self.curves = (1 - share) * coarse[:, :, low] + share * coarse[:, :, low + 1]
 
     def __call__(self, ln_age, feh):
         """(teff, logg, feh) along the curve, shape (n, 3)."""
@@ -66,33 +73,37 @@ def fit(stars, family, scan=17):
         of_star = np.logaddexp.reduceat(np.logaddexp(ln_on, ln_off), first)
         return 0.5 * np.sum(parameters[2:] ** 2) - of_star.sum()
 
-    rest = np.zeros(modes.shape[2])
+    unit = np.r_[0.02, 0.02, np.ones(modes.shape[2])]  # steps of ln age, [Fe/H] and the shared errors that matter alike
+
+    def descend(start, free):
+        """Best value and place when the parameters before `free` are held."""
+        found = minimize(
+            lambda p: objective(np.r_[start[:free], p * unit[free:]]), start[free:] / unit[free:], method="BFGS"
+        )
+        return found.fun, np.r_[start[:free], found.x * unit[free:]]
+
     metals = np.clip(np.median(theta[first, 2]), family.metals[0], family.metals[-1])
     ages = np.linspace(np.log(family.ages[0]), np.log(family.ages[-1]), scan)
-    start = min(ages, key=lambda a: objective(np.r_[a, metals, rest]))
-    found = minimize(objective, np.r_[start, metals, rest], method="Powell", options={"xtol": 1e-4, "ftol": 1e-7})
-    best, step = found.x, 0.06
-
-    def profile(ln_age):
-        """How much worse the best fit at another age is."""
-        return minimize(lambda p: objective(np.r_[ln_age, p]), best[1:], method="Powell").fun - found.fun
-
-    curvature = (profile(best[0] + step) + profile(best[0] - step)) / step**2
-    return best[0], 1.0 / np.sqrt(max(curvature, 1e-3)), best[1]
+    starts = [np.r_[age, metals, np.zeros(modes.shape[2])] for age in ages]
+    value, best = descend(min(starts, key=objective), 0)
+    step = 0.05
+    sides = [descend(np.r_[best[0] + side, best[1:]], 1)[0] for side in (-step, step)]
+    curvature = max((sides[0] + sides[1] - 2.0 * value) / step**2, 1.0)
+    return best[0], 1.0 / np.sqrt(curvature), best[1]
 
 
 def from_handoff(table, candidates):
-    """Everything that the handoff holds. The modes come in the order of their size: three as shared errors, the rest as own."""
+    """Everything that the handoff holds. The modes come in the order of their size: some as shared errors, the rest as own."""
     stars = []
     for row in table:
         mine = candidates[(candidates["star"] == row["star"]) & (candidates["treatment"] == row["treatment"])]
         modes = np.array(row["list_modes"])[:3]
-        rest = modes[:, 3:] @ modes[:, 3:].T
+        rest = modes[:, SHARED:] @ modes[:, SHARED:].T
         of_star = [
             (c["odds"], np.array([c["teff"], c["logg"], c["feh"]]), np.array(c["cov_star"])[:3, :3] + rest)
             for c in mine
         ]
-        stars.append((row["member_probability"], of_star, modes[:, :3]))
+        stars.append((row["member_probability"], of_star, modes[:, :SHARED]))
     return stars
 
 

@@ -316,14 +316,26 @@ def rehearse_point(
         own = rng.standard_normal(sigma_gf.size)
         unit = {EACH: own, ONCE: shared[plan.line_indices], NONE: np.zeros(sigma_gf.size)}[plan.gf_errors]
         log_w = true_log_widths(grid, plan, theta, unit * sigma_gf, interpolator)
-        problem = _observed(grid, plan, name, log_w, snr, rng)
+        problem = observed_problem(grid, plan, name, log_w, snr, rng)
         point = solve_blind(problem) if plan.full_search else solve_near(problem, theta)
         found.append((problem, point))
         n_lines.append(int(point.state.used.sum()) if point.state is not None else 0)
     return row | {"status": REHEARSED, "n_lines": float(np.mean(n_lines))} | _statistics(plan, theta, snr, found)
 
 
-def _observed(grid, plan: Plan, name: str, log_w: np.ndarray, snr: float, rng: np.random.Generator) -> Problem:
+def observed_problem(
+    grid: ResponseGrid, plan: Plan, name: str, log_w: np.ndarray, snr: float, rng: np.random.Generator
+) -> Problem:
+    """A star as it would be measured, ready for its analysis.
+
+    Parameters
+    ----------
+    grid, plan, name
+    log_w : ndarray, shape (n_observed_lines,)
+        True log10(W/lambda).
+    snr : float
+    rng : numpy.random.Generator
+    """
     lines, index = grid.lines, plan.line_indices
     wavelength = lines.wavelength_air[index]
     low, high = plan.options.reduced_width_range
