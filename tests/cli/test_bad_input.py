@@ -313,7 +313,7 @@ def test_unknown_star(run, dwarf):
 
 
 def test_unknown_reference_star_or_one_without_parameters(run, dwarf):
-    one_line(run(dwarf, "--reference", "nobody"), 3, "'nobody' is not in the tables")
+    one_line(run(dwarf, "--reference", "nobody"), 3, "'nobody' is neither in the tables nor a file")
     one_line(run(dwarf, "--reference", "dwarf"), 3, "give its teff, logg and feh")
 
 

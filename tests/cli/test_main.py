@@ -47,7 +47,7 @@ def test_version_and_help():
 @pytest.mark.parametrize(
     ("arguments", "words"),
     [
-        (["nonsense"], "No such command 'nonsense'. Commands: solve, check"),
+        (["nonsense"], "No such command 'nonsense'. Commands: solve, measure"),
         (["columns", "--nonsense"], "No such option"),
         (["columns", "nonsense"], "is not one of"),
         (["--quiet", "--verbose", "columns"], "exclude each other"),

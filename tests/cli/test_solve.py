@@ -148,7 +148,7 @@ def test_plots_are_drawn(stars_file, grid_option, tmp_path, capsys):
         "png",
     ]
     assert cli.run(command) == 0
-    assert [path.name for path in folder.iterdir()] == ["giant_lte.png"]
+    assert sorted(path.name for path in folder.iterdir()) == ["giant_lte.png", "giant_lte_map.png"]
 
 
 def test_no_colour_unless_a_terminal_wants_it(stars_file, grid_option, capsys):
