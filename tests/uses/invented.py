@@ -69,7 +69,7 @@ def draw_theta(rng: np.random.Generator, metal_poor: bool = False) -> np.ndarray
     """Parameters of an invented star: a dwarf, a subgiant or a giant."""
     kind = rng.integers(3)
     teff, logg = ((5900.0, 4.35), (5500.0, 3.7), (4900.0, 2.6))[kind]
-    feh = rng.uniform(-2.2, -0.8) if metal_poor else rng.uniform(-0.9, 0.2)
+    feh = rng.uniform(-1.3, -0.6) if metal_poor else rng.uniform(-0.9, 0.2)
     vmic = (1.1, 1.2, 1.5)[kind]
     return np.array(
         [teff + rng.uniform(-250, 250), logg + rng.uniform(-0.25, 0.25), feh, vmic + rng.uniform(-0.2, 0.2)]

@@ -52,7 +52,7 @@ def drawn(pool, rng, causes: tuple[str, ...]) -> Differences:
     cases, vectors, modes = pool
     places = rng.choice(len(cases), N_STARS, replace=False)
     if "treatment" in causes:  # the shift is below the noise in metal-rich stars: a set of metal-poor ones
-        places = rng.choice([i for i in range(len(cases)) if cases[i].point.theta[2] < -0.7], N_STARS, replace=False)
+        places = rng.choice([i for i in range(len(cases)) if cases[i].point.theta[2] < -0.55], N_STARS, replace=False)
     own = np.array([cases[i].point.cov_star for i in places])
     found = {cause: np.array([vectors[i][cause] for i in places]) for cause in KINDS}
     values = np.array([root(2.0 * one) @ rng.standard_normal(4) for one in own])
