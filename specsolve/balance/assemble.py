@@ -37,6 +37,7 @@ from .uncertainty import parameter_covariances, sensitivities
 from .validity import line_flags, validity_statements
 
 MAX_UNMATCHED = 1000
+OUTSIDE_DISAGREES = 3.0  # of its error between outside knowledge and the solution (common practice, no source)
 FACE_SHARE = 0.015  # of an axis: how near to its end a stopped parameter lies (0.05 km/s in vmic)
 
 
@@ -70,6 +71,9 @@ def solved(problem: Problem, search: Search, ranking: Ranking, sun: SolarLines |
             known.check(minimum.theta)
     except InputError as error:
         status, reason = UNSOLVED, str(error)
+    outside, _ = problem.outside_terms(minimum.theta)
+    if outside.size and np.abs(outside).max() > OUTSIDE_DISAGREES:
+        flags.append("outside_disagrees")
     alpha = getattr(problem.grid, "alpha", None)
     law = alpha_law(float(minimum.theta[2]))
     if alpha is not None and abs(alpha - law) > TESTED_RANGE[ALPHA]:

@@ -159,6 +159,9 @@ def test_a_prior_as_sharp_as_the_lines_takes_its_share(interpolator, rng):
     assert held.teff == pytest.approx(free.teff + error, abs=0.1 * error)
     assert held.outside_share[0] == pytest.approx(0.5, abs=0.05)
     assert held.errors[0] == pytest.approx(error / math.sqrt(2.0), rel=0.1)
+    assert "outside_disagrees" not in held.flags
+    wrong = solve(star, interpolator.grid, options=WIDE, known=known | {"prior_teff": free.teff + 12.0 * error})
+    assert "outside_disagrees" in wrong.flags
     fixed = solve(star, interpolator.grid, options=WIDE, known={"fix_teff": 5700.0})
     assert fixed.outside_share[0] == 1.0
     assert fixed.teff == 5700.0
