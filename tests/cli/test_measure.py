@@ -80,10 +80,11 @@ def test_widths_come_back(measured, spectrum_file):
     wanted = np.array([true.get((str(row["ion"]), float(row["wavelength_air"])), np.nan) for row in table])
     assert use.sum() > 30
     assert np.isfinite(wanted[use]).all()  # no line outside the spectrum is used
-    weak = use & (wanted < 60.0)  # the strong ones are Gaussian here, and nowhere else
-    difference = (np.array(table["equivalent_width"]) - wanted)[weak]
-    assert weak.sum() > 20
-    assert abs(np.median(difference)) < 1.0  # mA
+    weak = use & (wanted < 80.0)
+    ratio = np.array(table["equivalent_width"])[weak] / wanted[weak]
+    assert weak.sum() > 10
+    # the Gaussian lines of this spectrum have no damping wings, those of the fit have 2 to 3 % of their width in them
+    assert -0.01 < np.median(ratio) - 1.0 < 0.04
     assert np.all((table["wavelength_air"] > LOW - 5.0) & (table["wavelength_air"] < HIGH + 5.0))
 
 
