@@ -67,9 +67,9 @@ def two_treatments(folder: Path, *, missing: tuple = LEFT_OUT, n_fe1: int = 50, 
 
 def draw_theta(rng: np.random.Generator, metal_poor: bool = False) -> np.ndarray:
     """Parameters of an invented star: a dwarf, a subgiant or a giant."""
-    kind = rng.integers(3)
+    kind = rng.integers(1 if metal_poor else 0, 3)  # metal-poor dwarfs have too few of these lines
     teff, logg = ((5900.0, 4.35), (5500.0, 3.7), (4900.0, 2.6))[kind]
-    feh = rng.uniform(-1.3, -0.6) if metal_poor else rng.uniform(-0.9, 0.2)
+    feh = rng.uniform(-1.3, -0.6) if metal_poor else rng.uniform(-0.3, 0.2)
     vmic = (1.1, 1.2, 1.5)[kind]
     return np.array(
         [teff + rng.uniform(-250, 250), logg + rng.uniform(-0.25, 0.25), feh, vmic + rng.uniform(-0.2, 0.2)]
