@@ -20,7 +20,7 @@ STARS = {"dwarf": (5750.0, 4.4, -0.1, 1.1), "giant": (4800.0, 2.3, -1.6, 1.6)}
 
 
 @pytest.fixture(scope="module")
-def grid() -> ResponseGrid:
+def packaged() -> ResponseGrid:
     return ResponseGrid.packaged()
 
 
@@ -43,15 +43,15 @@ def star_of(grid, theta) -> Star:
 
 
 @pytest.mark.parametrize("kind", list(STARS))
-def test_terms_of_stored_responses(grid, kind):
+def test_terms_of_stored_responses(packaged, kind):
     """15 % of the largest shift, in steps of the grid: the terms are first order, and weights and lines follow."""
     theta = STARS[kind]
-    star = star_of(grid, theta)
-    problem, item = solved(grid, star, theta)
+    star = star_of(packaged, theta)
+    problem, item = solved(packaged, star, theta)
     shifts, _ = systematic_shifts(problem, item, None)
     moved = {
-        "missing_opacity": perturbed_grid(grid, None, missing_opacity=PERTURBATION_STEPS["missing_opacity"]),
-        "alpha": perturbed_grid(grid, alpha_law(theta[2]) + PERTURBATION_STEPS["alpha"]),
+        "missing_opacity": perturbed_grid(packaged, None, missing_opacity=PERTURBATION_STEPS["missing_opacity"]),
+        "alpha": perturbed_grid(packaged, alpha_law(theta[2]) + PERTURBATION_STEPS["alpha"]),
     }
     for name, other in moved.items():
         _, again = solved(other, star, theta)
@@ -65,7 +65,7 @@ def test_a_grid_without_stored_responses_has_no_such_term(interpolator):
     assert stored_responses(interpolator.grid) is None
 
 
-def test_names_are_those_of_the_documentation(grid):
+def test_names_are_those_of_the_documentation():
     from specsolve.balance import systematics
 
     for name in ("continuum", "solar_iron", *PERTURBATION_STEPS, "fe2_scale"):
