@@ -14,7 +14,8 @@ from .types import Window
 NEIGHBOURHOOD = 3.0
 """Half width of the range whose predicted lines say how much an unknown one may hold [Angstrom]."""
 UNSEEN_PART = 0.09
-"""An unknown line with more than this part of a line's width would show in the line's shape or flags; from computed spectra (`tests/spectrum/trials.py`)."""
+"""An unknown line with more than this part of a line's width would show in the line's shape or flags; from computed
+spectra (`tests/spectrum/trials.py`)."""
 WINDOW_FWHM = 6.0  # half width of the pixels kept for figures, in widths of the line
 
 
