@@ -108,6 +108,8 @@ def build(
         for remark in plan.remarks:
             settings.say(remark)
         settings.say(f"{plan.treatment}: {plan_words(plan, workers)}")
+        if plan.treatment == "nlte":
+            say_approximate(settings, plan.new_lines)
 
     for name in treatments:
         with counting("nodes", quiet=settings.verbosity < 0) as progress:
@@ -116,6 +118,18 @@ def build(
                 engine=engine_of(name, departures), progress=progress, announce=announce,
             )  # fmt: skip
     report(settings, content_of(made), f"{made.directory}: {len(made.lines)} lines, identity {made.identity[:12]}")
+
+
+def say_approximate(settings: Settings, lines: LineList) -> None:
+    """Name the lines whose levels are not in the model atom."""
+    from specsolve.nlte.line_levels import line_levels
+
+    names = lines.key[line_levels(lines).approximate].tolist() if len(lines) else []
+    if names:
+        settings.say(
+            f"{len(names)} lines have a level that the model atom lacks; the nearest of its parity stands for it: "
+            + ", ".join(names)
+        )
 
 
 def engine_of(treatment: str, departures: Path | None) -> Engine:

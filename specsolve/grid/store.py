@@ -133,7 +133,7 @@ class ResponseGrid:
 
     @property
     def default_treatment(self) -> str:
-        """"nlte" where the grid has it, else its first treatment."""
+        """The treatment that is used if none is asked for: nlte where the grid has it, else its first."""
         return "nlte" if "nlte" in self.treatments else self.treatments[0]
 
     def treatments_asked(self, asked: str | None) -> tuple[str, ...]:
