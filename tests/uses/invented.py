@@ -104,6 +104,7 @@ def solved_problem(
     return problem, solve_near(problem, theta)
 
 
+MOST_ATTEMPTS = 60
 SIZE = 3.0  # errors of one star's difference that an injected cause amounts to, at least
 
 
@@ -118,7 +119,9 @@ def invented_set(
     gf_error = rng.normal(0.0, GF_ERROR, len(grid.lines))
     ours: list[Case] = []
     second: list[Case] = []
-    while len(ours) < n_stars:
+    for _ in range(MOST_ATTEMPTS):
+        if len(ours) == n_stars:
+            break
         theta = draw_theta(rng, metal_poor="treatment" in causes)
         log_w = widths_of(grid, "lte", theta, gf_error)
         name = f"invented {len(ours) + 1}"

@@ -19,10 +19,10 @@ from specsolve.uses.shared_errors import list_modes, reduced
 from tests.uses.invented import GF_ERROR, draw_theta, invented_set, observed, solved_problem, widths_of
 
 KINDS = {
-    "held_teff": HELD, "held_logg": HELD, "held_vmic": HELD, "zero_point": SCALE, "fe2_scale": SCALE, "treatment": KNOWN
+    "held_teff": HELD, "held_logg": HELD, "zero_point": SCALE, "fe2_scale": SCALE, "treatment": KNOWN
 }  # fmt: skip
 INJECTED = ("fe2_scale", "zero_point", "held_logg", "treatment")
-N_POOL, N_STARS, SIZE = 26, 10, 3.0
+N_POOL, MOST_ATTEMPTS, N_STARS, SIZE = 26, 80, 10, 3.0
 N_SINGLE, N_NULL, N_DOUBLE = 200, 50, 50
 
 
@@ -32,8 +32,10 @@ def pool(grid):
     rng = np.random.default_rng(20)
     gf_error = rng.normal(0.0, GF_ERROR, len(grid.lines))
     cases, vectors = [], []
-    while len(cases) < N_POOL:
-        theta = draw_theta(rng, metal_poor=len(cases) % 2 == 1)
+    for attempt in range(MOST_ATTEMPTS):
+        if len(cases) == N_POOL:
+            break
+        theta = draw_theta(rng, metal_poor=attempt % 2 == 1)
         star = observed(grid, f"pool {len(cases)}", widths_of(grid, "lte", theta, gf_error), rng)
         problem, point = solved_problem(grid, star, theta, compiled=False)
         if not (point.known and np.isfinite(point.cov_star).all()):
@@ -43,6 +45,7 @@ def pool(grid):
         if all(np.isfinite(one).all() for one in found.values()):
             cases.append(case)
             vectors.append(found)
+    assert len(cases) >= 2 * N_STARS
     modes = reduced(list_modes([c.problem for c in cases], [c.point for c in cases]), 12)
     return cases, vectors, modes
 
@@ -52,7 +55,8 @@ def drawn(pool, rng, causes: tuple[str, ...]) -> Differences:
     cases, vectors, modes = pool
     places = rng.choice(len(cases), N_STARS, replace=False)
     if "treatment" in causes:  # the shift is below the noise in metal-rich stars: a set of metal-poor ones
-        places = rng.choice([i for i in range(len(cases)) if cases[i].point.theta[2] < -0.55], N_STARS, replace=False)
+        poor = [i for i in range(len(cases)) if cases[i].point.theta[2] < -0.5]
+        places = rng.choice(poor, min(N_STARS, len(poor)), replace=False)
     own = np.array([cases[i].point.cov_star for i in places])
     found = {cause: np.array([vectors[i][cause] for i in places]) for cause in KINDS}
     values = np.array([root(2.0 * one) @ rng.standard_normal(4) for one in own])
@@ -65,7 +69,10 @@ def drawn(pool, rng, causes: tuple[str, ...]) -> Differences:
             values = values + sign * SIZE / np.median(lever) * found[cause]
         else:
             wrong = (
-                SIZE * np.sqrt(2.0 * own[:, 1, 1]) * rng.uniform(1.0, 1.5, N_STARS) * rng.choice([-1.0, 1.0], N_STARS)
+                SIZE
+                * np.sqrt(2.0 * own[:, 1, 1])
+                * rng.uniform(1.0, 1.5, len(places))
+                * rng.choice([-1.0, 1.0], len(places))
             )
             values = values + (wrong - values[:, 1])[:, None] * found[cause]
     published = np.einsum("ijj->ij", own)[:, :, None] * np.eye(4)  # a paper gives single errors
