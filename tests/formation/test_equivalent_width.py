@@ -143,7 +143,9 @@ def test_departures_of_one_change_nothing_and_scale_opacity(star, lines):
     usual = reduced_widths(star.structure, star.composition, lines, [1.0], a)
     same = reduced_widths(star.structure, star.composition, lines, [1.0], a, departures=lambda _: (one, one))
     np.testing.assert_allclose(same, usual, atol=1e-10)
-    less = reduced_widths(star.structure, star.composition, lines, [1.0], a, departures=lambda _: (0.5 * one, 0.5 * one))
+    less = reduced_widths(
+        star.structure, star.composition, lines, [1.0], a, departures=lambda _: (0.5 * one, 0.5 * one)
+    )
     shifted = reduced_widths(star.structure, star.composition, lines, [1.0], a - np.log10(2.0))
     np.testing.assert_allclose(less, shifted, atol=1e-6)
 
