@@ -1,6 +1,6 @@
 """The same store in the hands of general tools: scipy's RegularGridInterpolator inside scipy's least_squares.
 
-Free are teff, logg, mh, vmic and the common abundance; the differences are predicted minus measured log widths over
+Free are teff, logg, [Fe/H] of star and atmosphere, and vmic; the differences are predicted minus measured log widths over
 their errors, the Jacobian is by differences. Linear in every axis: the cubic of that tool builds a spline over the whole
 five-dimensional grid for every line.
 """
@@ -13,10 +13,9 @@ from scipy.optimize import least_squares
 
 from specsolve.balance.problem import Problem
 from specsolve.balance.steps import STEP_UNIT
-from specsolve.constants import SOLAR_IRON
 from specsolve.grid.codes import decode
 
-SCALE = np.append(STEP_UNIT, 0.5)
+SCALE = np.asarray(STEP_UNIT)
 GF_ERROR = 0.05  # dex
 FAR = 1e3
 
@@ -38,13 +37,10 @@ class Counterpart:
     def differences(self, x: np.ndarray) -> np.ndarray:
         """(predicted - measured) / error, shape (n_lines,)."""
         self.evaluations += 1
-        theta = x[:4] * SCALE[:4]
-        abundance = x[4] * SCALE[4] + SOLAR_IRON
-        point = np.append(theta, abundance - SOLAR_IRON - theta[2])
+        point = np.append(x * SCALE, 0.0)  # no abundance beyond that of the atmosphere
         out = (self.table(point)[0] - self.measured) / self.sigma
         return np.where(np.isfinite(out), out, FAR)
 
     def solve(self, start: np.ndarray) -> np.ndarray:
         """teff, logg, mh, vmic at the least squares."""
-        begin = np.append(start, start[2]) / SCALE
-        return least_squares(self.differences, begin, xtol=1e-8).x[:4] * SCALE[:4]
+        return least_squares(self.differences, start / SCALE, xtol=1e-8).x * SCALE
