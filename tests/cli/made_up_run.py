@@ -15,7 +15,9 @@ from tests.cli.made_up_stars import star_table
 RANGES = ((4600.0, 6300.0), (2.0, 4.6), (-1.2, 0.2), (0.8, 1.8))
 BAD = 7  # every so manieth star has no usable line
 JOURNAL_FROM = 8  # in these runs; few stars take the plain path, which compiles nothing
-PROGRAM = f"from specsolve.cli import bulk, main; bulk.JOURNAL_FROM = {JOURNAL_FROM}; main.main()"
+# A run started in the background of a script ignores Ctrl-C by inheritance; here it shall be heard.
+HEAR = "import signal; signal.signal(signal.SIGINT, signal.default_int_handler)"
+PROGRAM = f"{HEAR}; from specsolve.cli import bulk, main; bulk.JOURNAL_FROM = {JOURNAL_FROM}; main.main()"
 
 
 def write_many(path: Path, grid: ResponseGrid, n_stars: int, rng: np.random.Generator) -> Path:

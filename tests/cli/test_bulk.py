@@ -16,7 +16,7 @@ from specsolve.errors import EXIT_INTERRUPTED, EXIT_NO_INPUT, EXIT_UNSOLVED, EXI
 from specsolve.report.tables import read_table
 from tests.cli.made_up_run import BAD, JOURNAL_FROM, command, rows, start, write_many
 
-N_STARS = 42
+N_STARS = 28
 PATIENCE_S = 600
 
 
