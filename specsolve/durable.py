@@ -9,7 +9,7 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import BinaryIO
 
-from specsolve.errors import OutputError
+from specsolve.errors import OutputError, StoreError
 
 
 @contextmanager
@@ -84,6 +84,35 @@ def append_durably(stream: BinaryIO, content: bytes, path: Path) -> None:
         stream.write(content)
         stream.flush()
         os.fsync(stream.fileno())
+
+
+def claim_parts(parts: Path, key: str, made_of: str) -> None:
+    """Make the folder of a build's parts, or go on in it if it was begun with the same key.
+
+    Parameters
+    ----------
+    parts : Path
+    key : str
+        Hash of all that the parts depend on.
+    made_of : str
+        What the key stands for, in words: "configuration or version".
+
+    Raises
+    ------
+    StoreError
+        The folder holds parts of a build with another key; nothing is mixed.
+    OutputError
+    """
+    with output_errors(parts.parent):
+        parts.mkdir(parents=True, exist_ok=True)
+    stamp = parts / "key"
+    if not stamp.exists():
+        write_atomically(stamp, key.encode())
+    elif stamp.read_text() != key:
+        raise StoreError(
+            f"{parts}: holds nodes of a build with another {made_of}. Remove the folder, or use another --output.",
+            path=str(parts),
+        )
 
 
 def sync_folder(folder: Path) -> None:

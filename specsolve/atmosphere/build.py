@@ -21,8 +21,7 @@ from specsolve.atmosphere.blanketing import Blanketing
 from specsolve.atmosphere.model import Atmosphere
 from specsolve.atmosphere.store import QUANTITIES, AtmosphereStore, write_store
 from specsolve.atmosphere.structure import solve_structure
-from specsolve.durable import output_errors, write_atomically
-from specsolve.errors import StoreError
+from specsolve.durable import claim_parts, write_atomically
 from specsolve.matter.composition import Composition, composition_for
 
 DEFAULT_TEFF = tuple(np.arange(4000.0, 7000.1, 250.0))
@@ -206,7 +205,7 @@ def build_store(
     parts = directory / PARTS
     pairs = wanted_nodes(teff, logg)
     key = hashlib.sha256(json.dumps([sources_hash(), power]).encode()).hexdigest()
-    _claim(parts, key)
+    claim_parts(parts, key, "configuration or version")
     total = len(pairs) * len(mh)
     own = executor is None
     executor = ProcessPoolExecutor(workers) if executor is None else executor
@@ -230,17 +229,3 @@ def build_store(
         path.unlink()
     parts.rmdir()
     return store
-
-
-def _claim(parts: Path, key: str) -> None:
-    with output_errors(parts.parent):
-        parts.mkdir(parents=True, exist_ok=True)
-    stamp = parts / "key"
-    if stamp.exists():
-        if stamp.read_text() != key:
-            raise StoreError(
-                f"{parts}: holds nodes of a build with another configuration or version. Remove the folder, or use "
-                "another --output.", path=str(parts),
-            )  # fmt: skip
-    else:
-        write_atomically(stamp, key.encode())

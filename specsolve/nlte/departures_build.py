@@ -25,8 +25,7 @@ import numpy as np
 from specsolve.atmosphere.build import sources_hash
 from specsolve.atmosphere.model import Atmosphere
 from specsolve.atmosphere.store import AtmosphereStore
-from specsolve.durable import output_errors, write_atomically
-from specsolve.errors import StoreError
+from specsolve.durable import claim_parts, write_atomically
 from specsolve.matter.composition import composition_for
 from specsolve.nlte.departures import AXES, DEPTHS, DepartureStore, at_depths, write_departures
 from specsolve.nlte.equilibrium import Departures, solve_equilibrium
@@ -160,7 +159,7 @@ def build_departures(
     directory = Path(directory)
     parts = directory / PARTS
     sources = sources_hash(SOURCES)  # of the program as it is now, whatever is edited meanwhile
-    _claim(parts, departures_key(atmospheres, recipe, size))
+    claim_parts(parts, departures_key(atmospheres, recipe, size), "recipe, atom, atmospheres or version")
     shape = tuple(atmospheres.axes[name].size for name in AXES)
     wanted = list(np.ndindex(*shape)) if nodes is None else [tuple(map(int, node)) for node in nodes]
     models = {index: _atmosphere(atmospheres, index) for index in wanted}
@@ -254,17 +253,3 @@ def _pool(workers: int) -> Iterator[Executor | None]:
                 os.environ.pop(name, None)
             else:
                 os.environ[name] = value
-
-
-def _claim(parts: Path, key: str) -> None:
-    with output_errors(parts.parent):
-        parts.mkdir(parents=True, exist_ok=True)
-    stamp = parts / "key"
-    if stamp.exists():
-        if stamp.read_text() != key:
-            raise StoreError(
-                f"{parts}: holds nodes of a build with another recipe, atom, atmospheres or version. Remove the folder, "
-                "or use another --output.", path=str(parts),
-            )  # fmt: skip
-    else:
-        write_atomically(stamp, key.encode())

@@ -11,15 +11,16 @@ import numpy as np
 
 from specsolve.balance.relations import vmic_relation
 from specsolve.balance.solution import PARAMETER_NAMES
-from specsolve.errors import ColumnError, InputError, UnitError, UsageError
+from specsolve.errors import ColumnError, InputError, UsageError
 from specsolve.lines.reading import read_table
 from specsolve.schema import columns_of
+
+from .plausible import PLAUSIBLE, numbers
 
 if TYPE_CHECKING:
     from astropy.table import Table
 
 REQUIRED = ("teff", "logg", "feh")
-PLAUSIBLE = {"teff": (1000.0, 60000.0), "logg": (-2.0, 9.0), "feh": (-8.0, 2.0), "vmic": (0.0, 20.0)}
 NO_VMIC = "no vmic is given, and no published relation holds there"
 
 
@@ -55,7 +56,6 @@ def read_points(source: str | Path | Table, columns: Mapping[str, str] | None = 
     ------
     InputError, ColumnError, UnitError
     """
-    from astropy import units as u
 
     path = None if hasattr(source, "colnames") else Path(source)
     table = read_table(path) if path is not None else source
@@ -78,31 +78,12 @@ def read_points(source: str | Path | Table, columns: Mapping[str, str] | None = 
     if len(table) == 0:
         raise InputError(f"{where}the table has no rows", path=path)
 
-    def numbers(name: str) -> np.ndarray:
+    def values_of(name: str) -> np.ndarray:
         if names[name] not in table.colnames:
             return np.full(len(table), np.nan)
-        column = table[names[name]]
-        try:
-            values = np.ma.filled(np.ma.asarray(getattr(column, "value", column)).astype(float), np.nan)
-        except (TypeError, ValueError) as error:
-            raise ColumnError(
-                f"{where}column '{names[name]}' holds text where numbers belong", column=name, path=path
-            ) from error
-        unit = known[name].unit
-        if getattr(column, "unit", None) is None or unit in ("", "dex"):
-            return values
-        try:
-            return (values * u.Unit(column.unit)).to_value(unit)
-        except (u.UnitConversionError, ValueError, TypeError) as error:
-            raise UnitError(
-                f"{where}column '{names[name]}' is in '{column.unit}', which cannot be turned into {unit}",
-                column=name,
-                unit=str(column.unit),
-                expected=unit,
-                path=path,
-            ) from error
+        return numbers(table[names[name]], name, known[name].unit, where, path)
 
-    theta = np.column_stack([numbers(name) for name in PARAMETER_NAMES])
+    theta = np.column_stack([values_of(name) for name in PARAMETER_NAMES])
     for k, name in enumerate(PARAMETER_NAMES):
         low, high = PLAUSIBLE[name]
         bad = np.flatnonzero(~((theta[:, k] >= low) & (theta[:, k] <= high)))
@@ -125,4 +106,4 @@ def read_points(source: str | Path | Table, columns: Mapping[str, str] | None = 
     if doubled is not None:
         raise InputError(f"{where}the point '{doubled}' is there twice", path=path)
     filled = int(np.isfinite(theta[missing, 3]).sum())
-    return Points(tuple(labels), theta, numbers("signal_to_noise"), filled, path)
+    return Points(tuple(labels), theta, values_of("signal_to_noise"), filled, path)

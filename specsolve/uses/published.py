@@ -10,16 +10,16 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from specsolve.balance.solution import PARAMETER_NAMES
-from specsolve.errors import ColumnError, InputError, UnitError, UsageError
+from specsolve.errors import ColumnError, InputError, UsageError
 from specsolve.lines.reading import read_table
 from specsolve.schema import columns_of
+
+from .plausible import PLAUSIBLE, numbers
 
 if TYPE_CHECKING:
     from astropy.table import Table
 
 REQUIRED = ("star", "teff", "logg", "feh")
-# What a value in the right unit can be; beyond it the column holds another unit or another quantity.
-PLAUSIBLE = {"teff": (1000.0, 60000.0), "logg": (-2.0, 9.0), "feh": (-8.0, 2.0), "vmic": (0.0, 20.0)}
 PLAUSIBLE_SOLAR_IRON = (7.2, 7.8)  # from 7.67 in the 1980s to 7.45 (common practice, no source)
 TREATMENTS = ("lte", "nlte")
 
@@ -94,20 +94,20 @@ def read_published(source: str | Path | Table, columns: Mapping[str, str] | None
     units = {column.name: column.unit for column in columns_of("published")}
     nan = np.full(len(table), np.nan)
 
-    def numbers(name: str) -> np.ndarray:
+    def values_of(name: str) -> np.ndarray:
         if names[name] not in table.colnames:
             return nan
-        return _numbers(table[names[name]], name, units[name], where, path)
+        return numbers(table[names[name]], name, units[name], where, path)
 
-    theta = np.column_stack([numbers(name) for name in PARAMETER_NAMES])
-    errors = np.column_stack([numbers(f"{name}_error") for name in PARAMETER_NAMES])
+    theta = np.column_stack([values_of(name) for name in PARAMETER_NAMES])
+    errors = np.column_stack([values_of(f"{name}_error") for name in PARAMETER_NAMES])
     stars = tuple(_texts(table[names["star"]]))
     for k, name in enumerate(PARAMETER_NAMES):
         _check_range(theta[:, k], name, PLAUSIBLE[name], stars, where, path)
     if (errors < 0.0).any():
         star = stars[int(np.flatnonzero((errors < 0.0).any(axis=1))[0])]
         raise InputError(f"{where}{star}: an error is negative", path=path)
-    solar = numbers("solar_iron")
+    solar = values_of("solar_iron")
     _check_range(solar, "solar_iron", PLAUSIBLE_SOLAR_IRON, stars, where, path)
     said = _texts(table[names["treatment"]]) if names["treatment"] in table.colnames else [""] * len(table)
     treatments = tuple(text.lower().replace("non-lte", "nlte") for text in said)
@@ -123,30 +123,6 @@ def _texts(column) -> list[str]:
         "" if empty else str(value).strip()
         for value, empty in zip(np.ma.asarray(column).data.tolist(), gone, strict=True)
     ]
-
-
-def _numbers(column, ours: str, unit: str, where: str, path: Path | None) -> np.ndarray:
-    from astropy import units as u
-
-    plain = np.ma.asarray(getattr(column, "value", column))
-    try:
-        values = np.ma.filled(plain.astype(float), np.nan)
-    except (TypeError, ValueError) as error:
-        raise ColumnError(
-            f"{where}column '{column.info.name}' holds text where numbers belong", column=ours, path=path
-        ) from error
-    if getattr(column, "unit", None) is None or unit in ("", "dex"):
-        return values
-    try:
-        return (values * u.Unit(column.unit)).to_value(unit)
-    except (u.UnitConversionError, ValueError, TypeError) as error:
-        raise UnitError(
-            f"{where}column '{column.info.name}' is in '{column.unit}', which cannot be turned into {unit}",
-            column=ours,
-            unit=str(column.unit),
-            expected=unit,
-            path=path,
-        ) from error
 
 
 def _check_range(values: np.ndarray, name: str, limits: tuple[float, float], stars, where: str, path) -> None:

@@ -7,7 +7,7 @@ states them; the analysis is the full search and the rule of ``solve``, in its o
 from __future__ import annotations
 
 import logging
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Mapping
 from concurrent.futures import Executor, as_completed
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -17,7 +17,7 @@ import numpy as np
 
 from specsolve.balance.options import Options
 from specsolve.balance.problem import Problem
-from specsolve.balance.solution import OUTSIDE_GRID, PARAMETER_NAMES, SOLVED, TIED
+from specsolve.balance.solution import OUTSIDE_GRID, PARAMETER_NAMES
 from specsolve.balance.solve import open_grid
 from specsolve.balance.star import Star, nearest_lines
 from specsolve.constants import SOLAR_IRON
@@ -28,9 +28,10 @@ from specsolve.provenance import collect
 from specsolve.report.tables import make_table
 from specsolve.schema import columns_of
 
-from .local import Point, line_responses, solve_blind, solve_near
+from .local import solve_blind, solve_near
 from .noise import Noise
 from .points import NO_VMIC, Points, read_points
+from .rehearsal_statistics import EACH, NONE, ONCE, trial_statistics
 from .shift_fit import ShiftFit, fit_shift
 
 if TYPE_CHECKING:
@@ -42,13 +43,10 @@ log = logging.getLogger(__name__)
 
 UNKNOWN_LOG_GF_ERROR = 0.08  # dex, for lines whose source gives none (invented; as in the demo cluster)
 REHEARSED, MISSING_NODE, TOO_FEW, NO_TRUE_VMIC = "rehearsed", "missing_node", "too_few_lines", "no_vmic"
-WRONG_FROM = 5.0  # errors
-MAD_TO_SIGMA = 1.4826  # standard deviation of a normal distribution over its median absolute deviation
 STRENGTH_MARGIN = 0.3  # dex beyond the cut on reduced width, within which lines are measured
 FEWEST_LINES = 8
 COMPILED_FROM = 40  # trials in all; below it the compiled kernels cost more than they spare
 POINTS_PER_BLOCK = 4
-EACH, ONCE, NONE = "each", "once", "none"
 Progress = Callable[[int, int], None]
 
 
@@ -320,7 +318,7 @@ def rehearse_point(
         point = solve_blind(problem) if plan.full_search else solve_near(problem, theta)
         found.append((problem, point))
         n_lines.append(int(point.state.used.sum()) if point.state is not None else 0)
-    return row | {"status": REHEARSED, "n_lines": float(np.mean(n_lines))} | _statistics(plan, theta, snr, found)
+    return row | {"status": REHEARSED, "n_lines": float(np.mean(n_lines))} | trial_statistics(plan, theta, snr, found)
 
 
 def observed_problem(
@@ -362,64 +360,6 @@ def _blank(plan: Plan, name: str, theta: np.ndarray, snr: float) -> dict[str, An
         row[column.name] = {"str": "", "float64": np.nan, "int64": 0, "bool": False}[column.dtype]
     row |= {"point": name, "truth_treatment": plan.truth, "treatment": plan.analysis, "signal_to_noise": snr}
     return row | dict(zip(PARAMETER_NAMES, theta.tolist(), strict=True))
-
-
-def _statistics(plan: Plan, theta: np.ndarray, snr: float, found: Sequence[tuple[Problem, Point]]) -> dict[str, Any]:
-    status = [point.status for _, point in found]
-    good = [
-        (problem, point) for problem, point in found if point.status == SOLVED and np.isfinite(point.cov_star).all()
-    ]
-    n = len(found)
-    out: dict[str, Any] = {
-        "n_trials": n,
-        "n_good": len(good),
-        "fraction_tied": status.count(TIED) / n if plan.full_search else np.nan,
-        "fraction_outside": status.count(OUTSIDE_GRID) / n,
-        "fraction_failed": (n - len(good) - status.count(TIED) - status.count(OUTSIDE_GRID)) / n,
-    }
-    if not good:
-        return out
-    values = np.array([point.theta for _, point in good])
-    star = np.array([np.sqrt(np.diag(point.cov_star)) for _, point in good])
-    total = np.array([np.sqrt(np.diag(point.cov_star + point.cov_list)) for _, point in good])
-    middle = np.median(values, axis=0)
-    scatter = MAD_TO_SIGMA * np.median(np.abs(values - middle), axis=0) if len(good) > 1 else np.full(4, np.nan)
-    error = total if plan.gf_errors == EACH else star
-    out["fraction_wrong"] = float(np.mean((np.abs(values - theta) > WRONG_FROM * total).any(axis=1)))
-    # Of the median of n normal numbers: 1.253 sigma / sqrt(n).
-    mean_error = 1.2533 * scatter / np.sqrt(len(good))
-    needed = needed_signal_to_noise(plan, *good[0], snr)
-    for k, name in enumerate(PARAMETER_NAMES):
-        out |= {
-            f"recovered_{name}": middle[k],
-            f"bias_{name}": middle[k] - theta[k],
-            f"bias_{name}_error": mean_error[k],
-            f"scatter_{name}": scatter[k],
-            f"error_{name}": float(np.median(total[:, k])),
-            f"error_star_{name}": float(np.median(star[:, k])),
-            f"coverage_{name}": float(np.mean(np.abs(values[:, k] - middle[k]) <= error[:, k])),
-            f"needed_{name}": needed.get(name, np.nan),
-        }
-    return out
-
-
-def needed_signal_to_noise(plan: Plan, problem: Problem, point: Point, snr: float) -> dict[str, float]:
-    """S/N at which the total error is as wanted: the part from the width errors goes as its inverse, the rest stays.
-
-    nan where the rest alone is larger, or where the noise is a law.
-    """
-    if not plan.wanted or not np.isfinite(plan.noise.resolving_power):
-        return {}
-    state = point.state
-    photon = np.where(state.used, state.weighting.variances.width, 0.0)
-    of_widths = line_responses(problem, state) ** 2 @ photon
-    total = np.diag(point.cov_star + point.cov_list)
-    out = {}
-    for name, wanted in plan.wanted.items():
-        k = PARAMETER_NAMES.index(name)
-        room = wanted**2 - max(total[k] - of_widths[k], 0.0)
-        out[name] = float(snr * np.sqrt(of_widths[k] / room)) if room > 0.0 else float("nan")
-    return out
 
 
 def _fits(theta: np.ndarray, columns: dict[str, np.ndarray]) -> tuple[ShiftFit, ...]:
